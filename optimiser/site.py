@@ -1,0 +1,182 @@
+"""The site problem: feed, limits, treatment, disposal and offers as frozen types.
+
+Owns the shapes that planning works on; reading a site file is `optimiser.site_reader`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+
+from catalogs.reagents import Reagent
+from chemistry.feed import WaterAnalysis
+from chemistry.system import System
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Limit:
+    """A ceiling on one parameter of the treated water, with the periods it is written for.
+
+    ``parameter`` is an analyte (``Cu``), a burden (``SO4``, ``TDS``, ``hardness``, ``sulfide``), or
+    ``sum``, in which case ``of`` lists the analytes that are added up. Concentrations in mg/L of
+    the total (dissolved and carried), loads in kg per day; ``None`` where none is written.
+    """
+
+    parameter: str
+    of: tuple[str, ...] = ()
+    daily_mg_per_l: float | None = None
+    monthly_mg_per_l: float | None = None
+    daily_load_kg_per_d: float | None = None
+    source: str = ""
+
+    @property
+    def label(self) -> str:
+        """The parameter as printed: ``Cu``, or ``Cu + Ni + Zn`` for a sum."""
+        return " + ".join(self.of) if self.of else self.parameter
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PhWindow:
+    """A closed pH interval."""
+
+    low: float
+    high: float
+    source: str = ""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Separator:
+    """What takes the solids out after the reaction, and what slips past it."""
+
+    name: str = "clarifier"
+    tss_mg_per_l: float = 20.0
+    capture_fraction: float = 0.98
+    cost_per_year: float = 0.0
+    source: str = ""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Treatment:
+    """What may be dosed, how it is controlled and what the plant's tanks do."""
+
+    reagents: tuple[str, ...]
+    required: tuple[str, ...] = ()
+    trim_reagents: tuple[str, ...] = ()
+    most_reagents: int = 3
+    dose_ceilings_mg_per_l: Mapping[str, float] = field(default_factory=dict)
+    least_doses_mg_per_l: Mapping[str, float] = field(default_factory=dict)
+    dose_factors: Mapping[str, float] = field(default_factory=dict)
+    equipment_cost_per_year: Mapping[str, float] = field(default_factory=dict)
+    ph_set_point: PhWindow = PhWindow(low=6.0, high=11.5)
+    ph_tolerance: float = 0.25
+    dose_tolerance_fraction: float = 0.05
+    separator: Separator = Separator()
+    polymer_g_per_kg_solids: float = 0.0
+    polymer_price_per_kg: float = 0.0
+    scale_supersaturation_si: float = 0.3
+    magnesia_ph_ceiling: float | None = None
+    vent_pco2_atm: float = 4.2e-4
+    sulfide_least_ph: float = 8.5
+    scrubber: str = ""
+    h2s_limit_ppm: float = 10.0
+    inert_solids_dilute: bool = False
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class DisposalRule:
+    """A sludge class and when it applies; the first rule whose condition holds decides.
+
+    The condition: any of ``metals`` above ``above_mg_per_kg_dry`` of the dry cake; a rule without
+    metals always holds.
+    """
+
+    sludge_class: str
+    tariff_per_wet_t: float
+    metals: tuple[str, ...] = ()
+    above_mg_per_kg_dry: float = 0.0
+    pickup_fee: float = 0.0
+    tonnes_per_pickup: float = 10.0
+    yearly_fee: float = 0.0
+    text: str = ""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Disposal:
+    """Cake and tariff."""
+
+    rules: tuple[DisposalRule, ...]
+    cake_solids_fraction: float = 0.30
+    bound_water_factor: float = 1.2
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Offer:
+    """One supplier's terms for one product of one reagent.
+
+    ``price`` is per tonne or per litre of product as delivered (``price_per`` says which);
+    ``strength_fraction`` is kg of pure compound per kg of product.
+    """
+
+    offer: str
+    supplier: str
+    reagent: str
+    product: str
+    form: str
+    strength_fraction: float
+    density_kg_per_l: float
+    price: float
+    price_per: str
+    freight_per_t: float = 0.0
+    least_order_t: float = 0.0
+    valid_until: str = ""
+    note: str = ""
+
+    @property
+    def price_per_t(self) -> float:
+        """Price per tonne of product, without freight."""
+        return self.price if self.price_per == "t" else self.price * 1000.0 / self.density_kg_per_l
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SolverSettings:
+    """Choice and limits of the mixed-integer solver."""
+
+    name: str = "highs"
+    time_limit_s: float = 60.0
+    relative_gap: float = 1e-6
+    seed: int = 1
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Site:
+    """A validated problem: everything that `plan` and `assess` need."""
+
+    name: str
+    path: Path
+    currency: str
+    flow_m3_per_d: float
+    operating_days_per_year: float
+    stands_for: str
+    analysis: WaterAnalysis
+    system: System
+    reagents: Mapping[str, Reagent]
+    limits: tuple[Limit, ...]
+    ph_window: PhWindow
+    design_margin: float
+    variability: Mapping[str, tuple[float, float]]
+    floors_mg_per_l: Mapping[str, Mapping[str, float]]
+    treatment: Treatment
+    disposal: Disposal
+    burden_charges_per_kg: Mapping[str, float]
+    offers: tuple[Offer, ...]
+    solver: SolverSettings = SolverSettings()
+    pretreated: Mapping[str, str] = field(default_factory=dict)
+    notes: tuple[str, ...] = ()
+    today: Mapping[str, float] = field(default_factory=dict)
+    """Doses of today's practice, mg/L pure fed, if the site file gives them."""
+
+    @property
+    def flow_m3_per_year(self) -> float:
+        """Treated volume in a year. [m3/year]"""
+        return self.flow_m3_per_d * self.operating_days_per_year
