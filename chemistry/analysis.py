@@ -217,6 +217,8 @@ class WaterAnalysis:
             value = getattr(self, name)
             if value is not None and not (math.isfinite(value) and value >= 0.0):
                 problems.append(f"{name} is {value}: it must be a number of at least 0")
+        if not math.isfinite(self.temperature_degc):
+            problems.append("the temperature is no number")
         if problems:
             raise WaterError("; ".join(problems))
         component_of(self.close_charge_with)
@@ -227,9 +229,11 @@ def _measurement_problems(measurements: Mapping[str, Measurement]) -> list[str]:
     for analyte, value in measurements.items():
         if analyte not in ANALYTES:
             problems.append(f"unknown analyte {analyte!r}: known are {', '.join(ANALYTES)}")
-        for part in (value.dissolved_mg_per_l, value.total_mg_per_l):
-            if not (math.isfinite(part) and part >= 0.0):
-                problems.append(f"{analyte}: {part} mg/L is no concentration")
+        problems += [
+            f"{analyte}: {part} mg/L is no concentration"
+            for part in (value.dissolved_mg_per_l, value.total_mg_per_l)
+            if not (math.isfinite(part) and part >= 0.0)
+        ]
         if value.dissolved_mg_per_l > value.total_mg_per_l:
             problems.append(
                 f"{analyte}: dissolved {value.dissolved_mg_per_l:g} mg/L is above total "

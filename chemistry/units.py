@@ -143,13 +143,9 @@ def mg_per_l_as_basis_to_mg_per_l(
         The basis is unknown.
     """
     if basis == "CaCO3":
-        return mg_per_l_as_caco3_to_mg_per_l(
-            mass_mg_per_l_as_basis, molar_mass_g_per_mol, charge
-        )
+        return mg_per_l_as_caco3_to_mg_per_l(mass_mg_per_l_as_basis, molar_mass_g_per_mol, charge)
     if basis in ("N", "P", "S"):
-        return mg_per_l_as_element_to_mg_per_l(
-            mass_mg_per_l_as_basis, basis, molar_mass_g_per_mol
-        )
+        return mg_per_l_as_element_to_mg_per_l(mass_mg_per_l_as_basis, basis, molar_mass_g_per_mol)
     raise WaterError(f"unknown basis {basis!r}: use CaCO3, N, P or S")
 
 
