@@ -53,8 +53,8 @@ def _charge_notes(water: FeedWater) -> list[str]:
     measured = water.analysis.measurements.get(ion)
     if measured is None and change > 0.0:
         return [
-            f"{ion} was not analysed: its whole {_plain(change)} mg/L follows from the charge balance "
-            f"{sums}"
+            f"{ion} was not analysed: its whole {_plain(change)} mg/L follows from the charge "
+            f"balance {sums}"
         ]
     done = "raised" if change >= 0.0 else "lowered"
     closed = f"{ion} was {done} by {_plain(abs(change))} mg/L to close it"
