@@ -14,17 +14,13 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from chemistry.equilibrium import (
-    ABSENT_LN,
-    Batch,
-    Kernel,
-    equilibrate_matrix,
-    new_batch,
-    solve,
-    solve_batch,
-    solve_warm,
-)
+from chemistry.active_set import slots_of
+from chemistry.batch import ABSENT_LN, Batch, new_batch
+from chemistry.equilibrium import solve, solve_warm
 from chemistry.errors import EquilibriumError, WaterError
+from chemistry.kernel import Kernel
+from chemistry.linear import equilibrate_matrix, solve_batch
+from chemistry.newton import assemble, linearise
 from chemistry.system import LN10, System
 
 if TYPE_CHECKING:
@@ -117,7 +113,8 @@ class EquilibriumState:
             return np.zeros(self.totals.shape[0])
         k = self.system.species_names.index(species)
         ln_a = self.log_activity @ self.system.formation[k] + self.system.ln_k[k]
-        return np.exp(ln_a - LN10 * log10_henry)
+        pressure: FloatArray = np.exp(ln_a - LN10 * log10_henry)
+        return pressure
 
     @cached_property
     def certificate_arrays(self) -> dict[str, FloatArray]:
@@ -189,9 +186,9 @@ class EquilibriumState:
         n, count = self.totals.shape
         ways = np.broadcast_to(directions, (n, *np.shape(directions)[-2:]))
         kernel, batch = self.kernel, self.batch
-        slots, used = kernel._slots(self.active)
-        lin = kernel.linearise(batch, slots, used)
-        system = kernel.assemble(batch, lin, used)
+        slots, used = slots_of(self.active)
+        lin = linearise(kernel, batch, slots, used)
+        system = assemble(kernel, batch, lin, used)
         k = ways.shape[1]
         width = system.matrix.shape[1]
         dl = np.zeros((n, k, count))

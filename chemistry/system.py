@@ -6,7 +6,7 @@ Owns the frozen types and the arrays built from them; finds no equilibrium itsel
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 
 import numpy as np
@@ -188,7 +188,8 @@ class System:
         if repeated:
             problems.append(f"repeated names: {', '.join(repeated)}")
         known = set(self.components)
-        for item in (*self.species, *self.solids):
+        formed: tuple[Species | Solid, ...] = (*self.species, *self.solids)
+        for item in formed:
             missing = sorted(set(item.stoichiometry) - known)
             if missing:
                 problems.append(f"{item.name} needs components not given: {', '.join(missing)}")
@@ -314,14 +315,9 @@ class System:
         A solid held back to a supersaturation SI counts as more soluble by SI.
         """
         solids = tuple(
-            Solid(**{**_as_dict(s), "log10_k": s.log10_k - shift_log10.get(s.name, 0.0)})
-            for s in self.solids
+            replace(s, log10_k=s.log10_k - shift_log10.get(s.name, 0.0)) for s in self.solids
         )
         return System(
             self.components, self.species, solids,
             temperature_degc=self.temperature_degc, activity=self.activity,
         )  # fmt: skip
-
-
-def _as_dict(solid: Solid) -> dict[str, object]:
-    return {name: getattr(solid, name) for name in Solid.__dataclass_fields__}

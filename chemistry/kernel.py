@@ -1,0 +1,185 @@
+"""The arrays of one system and what every solution step evaluates with them.
+
+Owns mass action, saturation, balances, and the rows that a held pH or pCO2 replaces; the steps
+themselves are in `chemistry.interior` and `chemistry.newton`.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from chemistry.batch import Batch, FloatArray
+from chemistry.system import System
+
+LN_MOLALITY_CAP = 30.0
+
+
+class Kernel:
+    """The arrays of one system with what is evaluated from them."""
+
+    def __init__(self, system: System) -> None:
+        self.system = system
+        self.formation = system.formation
+        self.formation_t = np.ascontiguousarray(system.formation.T)
+        self.ln_k = system.ln_k
+        self.solid_formation = system.solid_formation
+        self.solid_ln_k = system.solid_ln_k
+        self.model = system.activity_model
+        self.z2 = self.model.squared_charges
+        count = len(system.components)
+        self.upper = np.triu_indices(count)
+        self.pairs = self.formation[:, self.upper[0]] * self.formation[:, self.upper[1]]
+        self.solid_pairs = (
+            self.solid_formation[:, self.upper[0]] * self.solid_formation[:, self.upper[1]]
+        )
+        self.absolute = np.abs(self.formation)
+        self.solid_absolute = np.abs(self.solid_formation)
+        self.positive = np.maximum(self.formation, 0.0)
+        self.negative = np.maximum(-self.formation, 0.0)
+        self.largest = np.maximum(self.absolute.max(axis=0), 1.0)
+        self.proton = system.index.get("H+", -1)
+        self.carbonate = system.index.get("CO3-2", -1)
+
+    # -- shared evaluations -------------------------------------------------------------------
+
+    def molalities(self, ln_activity: FloatArray, ionic_strength: FloatArray) -> FloatArray:
+        """Species concentrations by mass action, (n, species). [mol/L]"""
+        screening, _ = self.model.screening(ionic_strength)
+        ln_m = ln_activity @ self.formation_t
+        ln_m += self.ln_k
+        ln_m += screening[:, None] * self.z2
+        return np.exp(np.minimum(ln_m, LN_MOLALITY_CAP))
+
+    def saturation_ln(self, ln_activity: FloatArray) -> FloatArray:
+        """Natural-log saturation index of every candidate solid, (n, solids)."""
+        return ln_activity @ self.solid_formation.T + self.solid_ln_k
+
+    def gram(self, m: FloatArray, solids_weight: FloatArray | None = None) -> FloatArray:
+        """A^T diag(m) A (+ G^T diag(w) G), (n, components, components)."""
+        packed = m @ self.pairs
+        if solids_weight is not None and self.solid_ln_k.size:
+            packed = packed + solids_weight @ self.solid_pairs
+        count = len(self.system.components)
+        full = np.empty((m.shape[0], count, count))
+        full[:, self.upper[0], self.upper[1]] = packed
+        full[:, self.upper[1], self.upper[0]] = packed
+        return full
+
+    def amounts(self, m: FloatArray, solids: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Sum of each component over species and solids, and the same with |stoichiometry|."""
+        total = m @ self.formation + solids @ self.solid_formation
+        scale = m @ self.absolute + solids @ self.solid_absolute
+        return total, scale
+
+    # -- held pH and pCO2 ----------------------------------------------------------------------
+
+    def added(self, batch: Batch, total: FloatArray) -> FloatArray:
+        """What must be added to the totals to hold pH and pCO2, (n, components). [mol/L]"""
+        gap = total - batch.totals
+        result = np.zeros_like(gap)
+        held_ph, held_co2 = ~np.isnan(batch.ph_ln), ~np.isnan(batch.co2_ln)
+        h, c = self.proton, self.carbonate
+        if held_co2.any():
+            both = held_co2 & held_ph
+            only = held_co2 & ~held_ph
+            result[only, c] = gap[only, c]
+            result[only, h] = 2.0 * gap[only, c]
+            v = batch.titrant[both]
+            # gap_h = d v_h + 2 e, gap_c = d v_c + e
+            pivot = v[:, h] - 2.0 * v[:, c]
+            d = (gap[both, h] - 2.0 * gap[both, c]) / pivot
+            e = gap[both, c] - d * v[:, c]
+            filled = d[:, None] * v
+            filled[:, c] += e
+            filled[:, h] += 2.0 * e
+            result[both] = filled
+        plain = held_ph & ~held_co2
+        if plain.any():
+            v = batch.titrant[plain]
+            result[plain] = (gap[plain, h] / v[:, h])[:, None] * v
+        return result
+
+    def misses(self, batch: Batch, total: FloatArray) -> FloatArray:
+        """Error of the balances that nothing held opens, (n, components). [mol/L]"""
+        miss = np.where(batch.present, batch.totals + self.added(batch, total) - total, 0.0)
+        if self.proton >= 0:
+            miss[~np.isnan(batch.ph_ln), self.proton] = 0.0
+        if self.carbonate >= 0:
+            miss[~np.isnan(batch.co2_ln), self.carbonate] = 0.0
+        return miss
+
+    def hold(self, batch: Batch, matrix: FloatArray, rhs: FloatArray) -> None:
+        """Replace the balances that a held pH or pCO2 opens, in place.
+
+        ``matrix`` (n, components or more, k) and ``rhs`` (n, components or more) hold the
+        linearised balances in their first rows. A row of the titrant is eliminated with the proton
+        row, then the proton (carbonate) row becomes the condition itself.
+        """
+        h, c = self.proton, self.carbonate
+        co2 = np.flatnonzero(~np.isnan(batch.co2_ln))
+        if co2.size:
+            matrix[co2, h] -= 2.0 * matrix[co2, c]
+            rhs[co2, h] -= 2.0 * rhs[co2, c]
+        ph = np.flatnonzero(~np.isnan(batch.ph_ln))
+        if ph.size:
+            v = batch.titrant[ph].copy()
+            opened = ~np.isnan(batch.co2_ln[ph])
+            if c >= 0:
+                v[opened, h] -= 2.0 * v[opened, c]
+            factor = v / v[:, h : h + 1]
+            factor[:, h] = 0.0
+            if np.any(factor):
+                count = factor.shape[1]
+                matrix[ph, :count] -= factor[:, :, None] * matrix[ph, h][:, None, :]
+                rhs[ph, :count] -= factor * rhs[ph, h][:, None]
+            matrix[ph, h] = 0.0
+            matrix[ph, h, h] = 1.0
+            rhs[ph, h] = batch.ph_ln[ph] - batch.ln_activity[ph, h]
+        if co2.size:
+            matrix[co2, c] = 0.0
+            matrix[co2, c, c] = 1.0
+            matrix[co2, c, h] = 2.0
+            here = batch.ln_activity[co2, c] + 2.0 * batch.ln_activity[co2, h]
+            rhs[co2, c] = batch.co2_ln[co2] - here
+
+    def independent_columns(self, batch: Batch) -> FloatArray:
+        """Solids' stoichiometry on the directions that are free to move, (n, solids, comps)."""
+        free = np.broadcast_to(
+            self.solid_formation, (batch.totals.shape[0], *self.solid_formation.shape)
+        ).copy()
+        h, c = self.proton, self.carbonate
+        co2 = ~np.isnan(batch.co2_ln)
+        if co2.any():
+            free[co2, :, h] -= 2.0 * free[co2][:, :, c]
+            free[co2, :, c] = 0.0
+        ph = ~np.isnan(batch.ph_ln)
+        if ph.any():
+            free[ph, :, h] = 0.0
+        free *= batch.present[:, None, :]
+        return free
+
+    def held_misses(self, part: Batch) -> FloatArray:
+        """Largest error of a held ln a(H+) or ln CO2 product, (n,)."""
+        miss = np.zeros(part.totals.shape[0])
+        ph = ~np.isnan(part.ph_ln)
+        if ph.any():
+            miss[ph] = np.abs(part.ph_ln[ph] - part.ln_activity[ph, self.proton])
+        co2 = ~np.isnan(part.co2_ln)
+        if co2.any():
+            value = part.ln_activity[co2, self.carbonate] + 2.0 * part.ln_activity[co2, self.proton]
+            miss[co2] = np.maximum(miss[co2], np.abs(part.co2_ln[co2] - value))
+        return miss
+
+    # -- steps ---------------------------------------------------------------------------------
+
+    def step_cap(self, part: Batch, m: FloatArray, dl: FloatArray, scale: FloatArray) -> FloatArray:
+        """Step length so that no species outgrows the water's inventory, (n,)."""
+        inventory = np.abs(part.totals).sum(axis=1) + scale.min(axis=1) + 1e-7
+        rise = dl @ self.formation_t
+        room = np.log(10.0 * inventory)[:, None] - np.log(np.maximum(m, 1e-300))
+        room = np.maximum(room, 1.0)
+        with np.errstate(divide="ignore"):
+            limit = np.where(rise > room, room / np.maximum(rise, 1e-300), 1.0).min(axis=1)
+        biggest = np.abs(dl).max(axis=1)
+        cap: FloatArray = np.minimum(np.minimum(limit, 20.0 / np.maximum(biggest, 1e-300)), 1.0)
+        return cap
