@@ -1,0 +1,41 @@
+"""Plans for precipitating dissolved metals: reagents, doses and offers at the least yearly cost.
+
+The public names load on first use, so that importing the package costs nothing. Everything that is
+not listed in ``__all__`` may change without notice.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from optimiser.errors import NoPlan as NoPlan
+    from optimiser.evaluate import assess as assess
+    from optimiser.planning import plan as plan
+    from optimiser.purchasing import purchase as purchase
+    from optimiser.site_reader import load_site as load_site
+
+_HOMES = {
+    "NoPlan": "optimiser.errors",
+    "assess": "optimiser.evaluate",
+    "load_site": "optimiser.site_reader",
+    "plan": "optimiser.planning",
+    "purchase": "optimiser.purchasing",
+}
+
+__all__ = ["NoPlan", "assess", "load_site", "plan", "purchase"]
+
+
+def __getattr__(name: str) -> object:
+    """Load a public name from its module on first use (PEP 562)."""
+    if name not in _HOMES:
+        raise AttributeError(f"module 'optimiser' has no attribute {name!r}")
+    value: object = getattr(import_module(_HOMES[name]), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__() -> list[str]:
+    """List the public names, loaded or not."""
+    return sorted({*globals(), *_HOMES})

@@ -1,0 +1,264 @@
+"""The command line: parse, call one function of the library, print its result.
+
+Owns the exit codes and what goes to which stream; options are in `optimiser.cli_options`.
+Libraries that take time to load are imported by the commands that need them, so that ``--help``
+answers at once.
+"""
+
+from __future__ import annotations
+
+import difflib
+import os
+import sys
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from optimiser.cli_options import PROGRAM, build_parser
+from optimiser.tables import Ink
+
+if TYPE_CHECKING:
+    import argparse
+    from types import TracebackType
+
+    from optimiser.site import Site
+
+DONE, OUR_FAULT, BAD_INPUT, NO_PLAN, STOPPED = 0, 1, 2, 3, 4
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run the program and return its exit code.
+
+    Parameters
+    ----------
+    arguments
+        Words after the program's name; those of the process when not given, in which case an
+        unforeseen error ends in one line and exit code 1 unless ``--debug`` asks for more.
+    """
+    parser = build_parser()
+    options = parser.parse_args(arguments)
+    if options.version:
+        return _print_version()
+    if options.command is None:
+        sys.stderr.write(parser.format_help())
+        return BAD_INPUT
+    if arguments is None and not options.debug:
+        sys.excepthook = _report_fault
+    try:
+        code = _COMMANDS[options.command](options)
+        sys.stdout.flush()
+    except KeyboardInterrupt:
+        _say("stopped before there was a result")
+        return STOPPED
+    except BrokenPipeError:
+        # The reader has what it wanted; keep the interpreter from flushing into a closed pipe.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return DONE
+    except _known_errors() as error:
+        return _refuse(error)
+    return code
+
+
+def _known_errors() -> tuple[type[Exception], ...]:
+    from catalogs.problems import InputFileError
+    from chemistry.errors import ChemistryError
+    from optimiser.errors import OptimiserError
+
+    return (InputFileError, ChemistryError, OptimiserError, OSError)
+
+
+def _refuse(error: Exception) -> int:
+    from catalogs.problems import InputFileError
+    from chemistry.errors import WaterError
+    from optimiser.errors import OptimiserError
+
+    if isinstance(error, InputFileError):
+        count = len(error.problems)
+        sys.stderr.write(f"{error}\n")
+        _say(f"{count} problem{'' if count == 1 else 's'} found, nothing was computed")
+        return BAD_INPUT
+    if isinstance(error, OSError):
+        _say(f"{error.filename or 'input or output'}: {error.strerror or error}")
+        return BAD_INPUT
+    _say(str(error))
+    if isinstance(error, OptimiserError):
+        return error.exit_code
+    return BAD_INPUT if isinstance(error, WaterError) else OUR_FAULT
+
+
+def _report_fault(
+    kind: type[BaseException], value: BaseException, trace: TracebackType | None
+) -> None:
+    """Say in one line that the program failed, and what to send to whom."""
+    place = trace
+    while place is not None and place.tb_next is not None:
+        place = place.tb_next
+    where = ""
+    if place is not None:
+        code = place.tb_frame.f_code
+        where = f" in {Path(code.co_filename).name}:{place.tb_lineno}"
+    text = " ".join(str(value).split()) or "no message"
+    _say(
+        f"a fault of the program, not of your input: {kind.__name__}{where}: {text}. "
+        "Please run the command again with --debug and send the output with the site file "
+        "to the maintainers."
+    )
+
+
+def _say(message: str) -> None:
+    sys.stderr.write(f"{PROGRAM}: {message}\n")
+
+
+def _print_version() -> int:
+    from importlib.metadata import PackageNotFoundError, version
+
+    try:
+        found = version(PROGRAM)
+    except PackageNotFoundError:
+        found = "not installed"
+    sys.stdout.write(f"{PROGRAM} {found}\n")
+    return DONE
+
+
+def _load(options: argparse.Namespace) -> Site:
+    import optimiser
+
+    path: Path = options.site
+    return optimiser.load_site(path / "site.yaml" if path.is_dir() else path)
+
+
+def _ink() -> Ink:
+    plain = os.environ.get("NO_COLOR") or os.environ.get("TERM") == "dumb"
+    return Ink(on=sys.stdout.isatty() and not plain)
+
+
+def _print_json(data: Mapping[str, Any]) -> None:
+    import json
+
+    sys.stdout.write(json.dumps(data, indent=2, allow_nan=False) + "\n")
+
+
+def _progress() -> Callable[[str], None] | None:
+    """Show one line that renews itself, only where somebody watches."""
+    if not sys.stderr.isatty():
+        return None
+
+    def show(message: str) -> None:
+        sys.stderr.write(f"\r\x1b[K{message[:99]}")
+        sys.stderr.flush()
+
+    return show
+
+
+def _clear_progress() -> None:
+    if sys.stderr.isatty():
+        sys.stderr.write("\r\x1b[K")
+
+
+def _plan(options: argparse.Namespace) -> int:
+    from dataclasses import replace
+
+    import optimiser
+    from optimiser.render import plan_text
+    from optimiser.render_no_plan import no_plan_data, no_plan_text
+
+    site = _load(options)
+    treatment, solver = site.treatment, site.solver
+    if options.most_reagents is not None:
+        treatment = replace(treatment, most_reagents=options.most_reagents)
+    if options.solver is not None:
+        solver = replace(solver, name=options.solver)
+    if options.time_limit is not None:
+        solver = replace(solver, time_limit_s=options.time_limit)
+    site = replace(site, treatment=treatment, solver=solver)
+    try:
+        found = optimiser.plan(site, progress=_progress())
+    except optimiser.NoPlan as none:
+        data = no_plan_data(site.name, none)
+        _clear_progress()
+        _print(data, options.json, no_plan_text)
+        return NO_PLAN
+    _clear_progress()
+    _print(found.to_dict(), options.json, plan_text)
+    return DONE
+
+
+def _assess(options: argparse.Namespace) -> int:
+    import optimiser
+    from optimiser.render import assessment_text
+
+    site = _load(options)
+    doses = _given_doses(options.dose) or dict(site.today)
+    if not doses:
+        _say("no doses: give --dose REAGENT=MG_PER_L, or write them under `today` in the site file")
+        return BAD_INPUT
+    unknown = _unknown_reagents(doses, site)
+    if unknown:
+        _say(unknown)
+        return BAD_INPUT
+    found = optimiser.assess(site, doses, trim=options.trim)
+    _print(found.to_dict(), options.json, assessment_text)
+    return DONE if found.compliant else NO_PLAN
+
+
+def _given_doses(pairs: Sequence[tuple[str, float]]) -> dict[str, float]:
+    doses: dict[str, float] = {}
+    for key, value in pairs:
+        doses[key] = doses.get(key, 0.0) + value
+    return doses
+
+
+def _unknown_reagents(doses: Mapping[str, float], site: Site) -> str:
+    for key in doses:
+        reagent, at, stage = key.partition("@")
+        if reagent not in site.reagents:
+            near = difflib.get_close_matches(reagent, site.reagents, n=1, cutoff=0.5)
+            hint = f"did you mean `{near[0]}`?" if near else ""
+            return f"--dose {key}: unknown reagent; {hint or 'known: ' + ', '.join(site.reagents)}"
+        if at and stage != "trim":
+            return f"--dose {key}: unknown stage {stage!r}; a dose is REAGENT or REAGENT@trim"
+    return ""
+
+
+def _curves(options: argparse.Namespace) -> int:
+    from optimiser.curves import build_curves
+    from optimiser.render_curves import curves_text
+
+    curves = build_curves(_load(options), options.ph)
+    if options.csv is not None:
+        curves.to_frame().to_csv(options.csv, index=False, lineterminator="\n")
+    _print(curves.to_dict(), options.json, curves_text)
+    return DONE
+
+
+def _print(
+    data: Mapping[str, Any], as_json: bool, text: Callable[[Mapping[str, Any], Ink], str]
+) -> None:
+    if as_json:
+        _print_json(data)
+    else:
+        sys.stdout.write(text(data, _ink()))
+
+
+def _check(options: argparse.Namespace) -> int:
+    from optimiser.render_site import site_text
+
+    sys.stdout.write(site_text(_load(options)))
+    return DONE
+
+
+def _new(options: argparse.Namespace) -> int:
+    from optimiser.starter import write_starter
+
+    for path in write_starter(options.directory):
+        sys.stdout.write(f"{path}\n")
+    return DONE
+
+
+_COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
+    "plan": _plan,
+    "assess": _assess,
+    "curves": _curves,
+    "check": _check,
+    "new": _new,
+}

@@ -1,0 +1,181 @@
+"""The commands and options of the command line, and how their values are read.
+
+Owns what can be typed and the refusals of what cannot; running the commands is `optimiser.cli`.
+"""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+from typing import Any, NoReturn
+
+BAD_USAGE = 2
+PROGRAM = "dosewright"
+
+_DESCRIPTION = """\
+Pick precipitation reagents, doses and supplier offers that bring the dissolved metals
+of a wastewater under every limit at the least yearly cost.
+"""
+_EXIT_CODES = """\
+exit codes:
+  0  a plan, or doses that meet every limit
+  1  a fault of the program
+  2  a mistake in the input or in the command
+  3  no plan meets every limit, or the doses assessed miss one
+  4  stopped before a verified plan was found
+"""
+
+
+class _Parser(argparse.ArgumentParser):
+    """A parser whose refusals are one line with a remedy."""
+
+    def error(self, message: str) -> NoReturn:
+        """Refuse the command line."""
+        hint = f"`{self.prog} --help` lists what it takes."
+        self.exit(BAD_USAGE, f"{self.prog}: {message}\n    {hint}\n")
+
+
+def _positive(text: str) -> float:
+    value = _finite(text)
+    if value <= 0.0:
+        raise argparse.ArgumentTypeError(f"expected a number above 0, found {text!r}")
+    return value
+
+
+def _count(text: str) -> int:
+    if not text.isdecimal() or int(text) < 1:
+        raise argparse.ArgumentTypeError(f"expected a whole number from 1, found {text!r}")
+    return int(text)
+
+
+def _ph(text: str) -> float:
+    value = _finite(text)
+    if not 0.0 <= value <= 14.0:
+        raise argparse.ArgumentTypeError(f"expected a pH from 0 to 14, found {text!r}")
+    return value
+
+
+def _finite(text: str) -> float:
+    try:
+        value = float(text)
+    except ValueError:
+        value = float("nan")
+    if value - value != 0.0:
+        raise argparse.ArgumentTypeError(f"expected a number, found {text!r}")
+    return value
+
+
+def _dose(text: str) -> tuple[str, float]:
+    key, equals, amount = text.partition("=")
+    if not key or not equals:
+        raise argparse.ArgumentTypeError(
+            f"expected REAGENT=MG_PER_L such as caustic_soda=420, found {text!r}"
+        )
+    value = _finite(amount.strip().removesuffix("mg/L").strip())
+    if value < 0.0:
+        raise argparse.ArgumentTypeError(f"a dose is 0 mg/L or more, found {text!r}")
+    return key.strip(), value
+
+
+def build_parser() -> argparse.ArgumentParser:
+    """Build the parser of all commands."""
+    parser = _Parser(
+        prog=PROGRAM,
+        description=_DESCRIPTION,
+        epilog=_EXIT_CODES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    parser.add_argument("--version", action="store_true", help="print the version and leave")
+    commands = parser.add_subparsers(dest="command", metavar="COMMAND", parser_class=_Parser)
+    _add_plan(commands)
+    _add_assess(commands)
+    _add_curves(commands)
+    _add_command(commands, "check", "read a site and report every problem found", "check site.yaml")
+    new = _add_command(
+        commands, "new", "write a commented starter site with its price book", "new my-plant",
+        site=False,
+    )  # fmt: skip
+    new.add_argument("directory", metavar="DIR", type=Path, help="folder to write; made if absent")
+    return parser
+
+
+_Commands = Any  # argparse keeps the type of its sub-parsers private
+
+
+def _add_command(
+    commands: _Commands,
+    name: str,
+    what: str,
+    example: str,
+    *,
+    site: bool = True,
+) -> argparse.ArgumentParser:
+    parser: argparse.ArgumentParser = commands.add_parser(
+        name,
+        help=what,
+        description=f"{what[0].upper()}{what[1:]}.",
+        epilog=f"example:\n  {PROGRAM} {example}",
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    parser.add_argument("--debug", action="store_true", help="show the traceback of a fault")
+    if site:
+        parser.add_argument(
+            "site", metavar="SITE", type=Path, help="site file (YAML) or its folder"
+        )
+    return parser
+
+
+def _add_json(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument(
+        "--json", action="store_true", help="print the result as JSON, nothing else"
+    )
+
+
+def _add_plan(commands: _Commands) -> None:
+    parser = _add_command(
+        commands, "plan", "find the cheapest plan that the equilibrium confirms",
+        "plan catalogs/sites/DEMO/site.yaml --most-reagents 2",
+    )  # fmt: skip
+    _add_json(parser)
+    parser.add_argument(
+        "--most-reagents", metavar="N", type=_count, help="at most N reagents (default: the site's)"
+    )
+    parser.add_argument(
+        "--solver", choices=("highs", "cbc"), help="mixed-integer solver (default: the site's)"
+    )
+    parser.add_argument(
+        "--time-limit", metavar="S", type=_positive, help="seconds to search (default: the site's)"
+    )
+
+
+def _add_assess(commands: _Commands) -> None:
+    parser = _add_command(
+        commands, "assess", "verify and price doses that you give",
+        "assess site.yaml --dose caustic_soda=420 --dose soda_ash=150",
+    )  # fmt: skip
+    parser.add_argument(
+        "--dose", metavar="REAGENT=MG_PER_L", type=_dose, action="extend", nargs="+", default=[],
+        help="dose in mg/L of the pure compound as fed, REAGENT or REAGENT@trim; repeat it for "
+        "more (default: the doses under `today` in the site file)",
+    )  # fmt: skip
+    parser.add_argument(
+        "--trim", choices=("auto", "none"), default="auto",
+        help="whether the discharge pH is trimmed where it needs it (default: auto)",
+    )  # fmt: skip
+    _add_json(parser)
+
+
+def _add_curves(commands: _Commands) -> None:
+    parser = _add_command(
+        commands, "curves",
+        "tabulate residual against dose, residual against pH, and alkali demand",
+        "curves site.yaml --ph 9 --csv curves.csv",
+    )  # fmt: skip
+    parser.add_argument(
+        "--ph", metavar="PH", type=_ph,
+        help="pH held while other reagents are swept (default: middle of the set-point window)",
+    )  # fmt: skip
+    parser.add_argument(
+        "--csv", metavar="FILE", type=Path, help="write every state to FILE as well"
+    )
+    _add_json(parser)
