@@ -248,6 +248,16 @@ class Entry:
                 chosen[word] = None
         return tuple(chosen)
 
+    def value(self, key: str, *, expected: str = "") -> Iterator[tuple[Node, Spot]]:
+        """Hand out a value as it stands, with its place; nothing when it is left out.
+
+        With ``expected`` it must be there.
+        """
+        if self.has(key) or expected:
+            node = self._take(key, expected)
+            if node is not None:
+                yield node, self.at(key)
+
     def items(self, key: str, *, required: bool = False) -> Iterator[tuple[Node, Spot]]:
         """Walk a list: its values and their places."""
         if not self.has(key) and not required:
@@ -291,6 +301,18 @@ class Entry:
             if is_known(name, options, what, spot):
                 values[name] = to_number(node, spot, allowed)
         return values
+
+    def knows(self, key: str, options: Collection[str], what: str) -> bool:
+        """Tell whether a key of the user's is a known name, recording a problem when not."""
+        return is_known(key, options, what, self.at(key))
+
+    def blocks_by_name(self, options: Collection[str], what: str) -> Iterator[tuple[str, Entry]]:
+        """Walk a block of known names that each hold a block."""
+        for name, node, spot in self.pairs():
+            if is_known(name, options, what, spot):
+                entry = open_block(node, spot)
+                if entry is not None:
+                    yield name, entry
 
     def finish(self) -> None:
         """Report missing keys and keys that nobody asked for."""

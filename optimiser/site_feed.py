@@ -1,0 +1,261 @@
+"""The feed block of a site file: flow, analysis, acid, and the refusals that precede planning.
+
+Owns reading and checking that block; closing the charge is `chemistry.feed`.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+from catalogs.entries import NON_NEGATIVE, PH, POSITIVE, Entry, Range, to_day, to_number
+from catalogs.positions import Items, Node, Table, describe
+from catalogs.problems import Spot, did_you_mean, echo, listed
+from chemistry.errors import WaterError
+from chemistry.feed import ANALYTES, METALS, Measurement, WaterAnalysis
+from optimiser.quantities import Concentration, read_alkalinity, read_concentration
+
+STATES_OF_ELEMENT: Mapping[str, tuple[str, ...]] = {
+    "Fe": ("Fe(II)", "Fe(III)"),
+    "Cr": ("Cr(III)", "Cr(VI)"),
+}
+"""Elements that are limited as a sum and analysed by oxidation state."""
+
+STANDS_FOR = ("average", "peak")
+PRETREATMENT_MG_PER_L: Mapping[str, tuple[float, str]] = {
+    "Cr(VI)": (0.05, "reduce it to Cr(III) first"),
+    "CN": (0.05, "destroy it first, by oxidation"),
+}
+"""Dissolved amounts that must be pretreated, and how (hydroxide and sulfide leave both alone)."""
+
+CLOSING_IONS = tuple(a.analyte for a in ANALYTES.values() if a.is_modelled and not a.is_metal)
+_TEMPERATURE_DEGC = Range(low=0.0, high=60.0)
+_DAYS_PER_YEAR = Range(above=0.0, high=366.0)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FeedBlock:
+    """What the feed block says; ``analysis`` is None when something in it is wrong."""
+
+    stands_for: str
+    flow_m3_per_d: float
+    operating_days_per_year: float
+    temperature_degc: float
+    analysis: WaterAnalysis | None
+    analysed: Mapping[str, Spot]
+    aerated: bool
+    closing_analyte: str
+    pretreated: Mapping[str, str]
+    analysis_spot: Spot
+    notes: tuple[str, ...]
+
+
+def read_feed(entry: Entry) -> FeedBlock:
+    """Read the feed block of a site file.
+
+    Parameters
+    ----------
+    entry
+        The block; its log takes the problems.
+    """
+    before = len(entry.spot.log.problems)
+    stands_for = entry.choice("stands_for", STANDS_FOR, "kinds of feed")
+    flow = entry.number("flow_m3_per_d", POSITIVE)
+    days = entry.number("operating_days_per_year", _DAYS_PER_YEAR)
+    temperature = entry.number("temperature_degc", _TEMPERATURE_DEGC)
+    aerated = entry.flag_or("aerated", default=False)
+    closing = entry.choice("close_charge_with", CLOSING_IONS, "closing ions")
+    analysed: dict[str, Spot] = {}
+    measurements = _read_measurements(entry, analysed)
+    pretreated, notes = _read_pretreated(entry, measurements, analysed)
+    draft = _Draft(
+        measurements=measurements, close_charge_with=closing, temperature_degc=temperature,
+        aerated=aerated,
+    )  # fmt: skip
+    analysis = _read_water(entry, draft)
+    entry.finish()
+    if len(entry.spot.log.problems) > before:
+        analysis = None
+    return FeedBlock(
+        stands_for=stands_for, flow_m3_per_d=flow, operating_days_per_year=days,
+        temperature_degc=temperature, analysis=analysis, analysed=analysed, aerated=aerated,
+        closing_analyte=closing, pretreated=pretreated, analysis_spot=entry.at("analysis"),
+        notes=notes,
+    )  # fmt: skip
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Draft:
+    """The part of an analysis that is read before its acid."""
+
+    measurements: Mapping[str, Measurement]
+    close_charge_with: str
+    temperature_degc: float
+    aerated: bool
+
+
+def _read_water(entry: Entry, draft: _Draft) -> WaterAnalysis | None:
+    """Read the acid and the sum parameters, then put the analysis together."""
+    before = len(entry.spot.log.problems)
+    ph = entry.number_or("ph", None, PH)
+    acidity = entry.number_or("acidity_meq_per_l", None, NON_NEGATIVE)
+    end_ph = entry.number_or("acidity_end_ph", 8.3, PH)
+    titration = _read_titration(entry)
+    alkalinity = None
+    for node, spot in entry.value("alkalinity"):
+        alkalinity = read_alkalinity(node, spot)
+    tss = entry.number_or("tss_mg_per_l", 0.0, NON_NEGATIVE)
+    if ph is None and acidity is None and not titration and not entry.has("titration"):
+        entry.at("ph").problem(
+            "no acid", "ph, acidity_meq_per_l or titration", "Add the measured `ph` here."
+        )
+    if len(entry.spot.log.problems) > before or not draft.close_charge_with:
+        return None
+    try:
+        return WaterAnalysis(
+            measurements=draft.measurements, close_charge_with=draft.close_charge_with,
+            temperature_degc=draft.temperature_degc, ph=ph, acidity_meq_per_l=acidity,
+            acidity_end_ph=end_ph, titration=titration,
+            alkalinity_mg_per_l_as_caco3=alkalinity, tss_mg_per_l=tss, aerated=draft.aerated,
+        )  # fmt: skip
+    except WaterError as error:
+        entry.at("analysis").problem(str(error), "a water that can exist", "Correct the analysis.")
+        return None
+
+
+def _read_titration(entry: Entry) -> tuple[tuple[float, float], ...]:
+    points: list[tuple[float, float]] = []
+    for node, spot in entry.items("titration"):
+        if not isinstance(node, Items) or len(node.nodes) != 2:
+            spot.problem(
+                describe(node), "a pair [base in meq/L, pH]", "Write each point as [4.5, 3.1]."
+            )
+            continue
+        base = to_number(node.nodes[0], spot, NON_NEGATIVE)
+        ph = to_number(node.nodes[1], spot, PH)
+        if points and (base <= points[-1][0] or ph < points[-1][1]):
+            spot.problem(
+                f"{base:g} meq/L at pH {ph:g} after {points[-1][0]:g} meq/L at {points[-1][1]:g}",
+                "points that rise in base and in pH",
+                "Sort the points; leave out those where the pH fell.",
+            )
+        elif math.isfinite(base) and math.isfinite(ph):
+            points.append((base, ph))
+    return tuple(points)
+
+
+def _read_measurements(entry: Entry, analysed: dict[str, Spot]) -> dict[str, Measurement]:
+    before = len(entry.spot.log.problems)
+    block = entry.block("analysis")
+    found: dict[str, Measurement] = {}
+    for name, node, spot in block.pairs() if block else ():
+        if not _is_analyte(name, spot):
+            continue
+        analysed[name] = spot
+        measurement = _measurement(name, node, spot)
+        if measurement is not None:
+            found[name] = measurement
+    sound = len(entry.spot.log.problems) == before
+    if block is not None and sound and not any(name in METALS for name in analysed):
+        block.spot.problem(
+            "no metal", "at least one metal", f"Add what was measured: {listed(METALS)}."
+        )
+    return found
+
+
+def _is_analyte(name: str, spot: Spot) -> bool:
+    if name in ANALYTES:
+        return True
+    if name in STATES_OF_ELEMENT:
+        first, second = STATES_OF_ELEMENT[name]
+        spot.problem(
+            f"{name} without its oxidation state",
+            f"{first} and {second} apart",
+            f"Give {first} and {second}; where one was measured, the other is the rest of the"
+            f" total {name}.",
+        )
+        return False
+    near = did_you_mean(name, ANALYTES, what="analytes")
+    spot.problem(
+        echo(name),
+        "an analyte",
+        f"{near} Leave out an ion that is not listed; the closing ion stands for its charge.",
+    )
+    return False
+
+
+def _measurement(name: str, node: Node, spot: Spot) -> Measurement | None:
+    analyte = ANALYTES[name]
+    if not isinstance(node, Table):
+        single = read_concentration(node, spot, analyte)
+        return None if single is None else _measured(single, single)
+    entry = Entry(node, spot)
+    parts: dict[str, Concentration] = {}
+    for key in ("dissolved", "total"):
+        for part, place in entry.value(key, expected="a quantity such as 38 mg/L"):
+            value = read_concentration(part, place, analyte)
+            if value is not None:
+                parts[key] = value
+    entry.finish()
+    if len(parts) < 2:
+        return None
+    dissolved, total = parts["dissolved"], parts["total"]
+    if dissolved.mg_per_l > total.mg_per_l and not dissolved.is_below:
+        spot.problem(
+            f"dissolved {dissolved.as_written} above total {total.as_written}",
+            "dissolved at most total",
+            "Check the units and whether the two values were swapped.",
+        )
+        return None
+    return _measured(dissolved, total)
+
+
+def _measured(dissolved: Concentration, total: Concentration) -> Measurement:
+    """Put both values together; a reporting limit above the total gives way to the total."""
+    return Measurement(
+        dissolved_mg_per_l=min(dissolved.mg_per_l, total.mg_per_l),
+        total_mg_per_l=total.mg_per_l,
+        below_reporting_limit=dissolved.is_below,
+        as_written=dissolved.as_written
+        if dissolved is total
+        else f"dissolved {dissolved.as_written}, total {total.as_written}",
+    )
+
+
+def _read_pretreated(
+    entry: Entry, measurements: Mapping[str, Measurement], analysed: Mapping[str, Spot]
+) -> tuple[dict[str, str], tuple[str, ...]]:
+    """Read what was pretreated, and refuse what must be and was not."""
+    days: dict[str, str] = {}
+    named: set[str] = set()
+    block = entry.block_or_none("pretreated")
+    for name, node, spot in block.pairs() if block else ():
+        if name in PRETREATMENT_MG_PER_L:
+            named.add(name)
+            days[name] = to_day(node, spot)
+        else:
+            remedy = did_you_mean(name, PRETREATMENT_MG_PER_L, what="pretreatments")
+            spot.problem(echo(name), "Cr(VI) or CN", remedy)
+    notes: list[str] = []
+    for name, (most, how) in PRETREATMENT_MG_PER_L.items():
+        if name not in measurements or measurements[name].dissolved_mg_per_l <= most:
+            continue
+        value = measurements[name].as_written
+        if name not in named:
+            _refuse(name, value, most, how, analysed[name])
+        elif days[name]:
+            notes.append(
+                f"{name}: {value} is above {most:g} mg/L; the site states pretreatment on"
+                f" {days[name]}. Precipitation does not remove it"
+            )
+    return days, tuple(notes)
+
+
+def _refuse(name: str, value: str, most: float, how: str, spot: Spot) -> None:
+    advice = f"Precipitation does not remove it: {how}, then give the analysis after that"
+    spot.problem(
+        value,
+        f"at most {most:g} mg/L dissolved {ANALYTES[name].name}",
+        f"{advice}, and name the day in feed: `pretreated: {{{name}: 2026-05-04}}`.",
+    )

@@ -1,0 +1,220 @@
+"""Reading a site file: from YAML and price book to a validated problem, or all its problems.
+
+Owns the top level of the file, what must agree between its blocks, and the chemical system of the
+site. The blocks themselves are read by `site_feed`, `site_limits`, `site_treatment` and
+`offers_reader`.
+"""
+
+from __future__ import annotations
+
+import datetime
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+
+from catalogs.constants import load_system
+from catalogs.entries import NON_NEGATIVE, Entry
+from catalogs.positions import load_yaml
+from catalogs.problems import ProblemLog, echo
+from catalogs.reagents import Reagent, load_reagents
+from chemistry.errors import WaterError
+from chemistry.feed import ANALYTES, BURDENS, feed_water
+from chemistry.system import System
+from optimiser.offers_reader import OFFER_COLUMNS, expired_notes, read_offers
+from optimiser.site import Disposal, Offer, Site, SolverSettings
+from optimiser.site_feed import FeedBlock, read_feed
+from optimiser.site_limits import Foreseen, LimitsBlock, read_limits
+from optimiser.site_treatment import (
+    TreatmentBlock,
+    read_disposal,
+    read_solver,
+    read_treatment,
+)
+
+ALWAYS_COMPONENTS = ("H+", "Na+", "CO3-2")
+"""Components of every site's system, whatever was analysed: water, caustic and air bring them."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Blocks:
+    """The blocks of a site file; None where one is missing."""
+
+    name: str
+    currency: str
+    feed: FeedBlock | None
+    treatment: TreatmentBlock | None
+    limits: LimitsBlock | None
+    disposal: Disposal | None
+    charges: Mapping[str, float]
+    offers: tuple[Offer, ...]
+    solver: SolverSettings
+    doses_today: Mapping[str, float]
+
+
+def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
+    """Read and validate a site file and its price book.
+
+    Parameters
+    ----------
+    path
+        The site file; its price book is looked up beside it.
+    on_day
+        Day that the validity of offers is held against; today when left out.
+
+    Returns
+    -------
+    Site
+        A problem that `plan` and `assess` can work on.
+
+    Raises
+    ------
+    InputFileError
+        Everything that is wrong in both files, with file, line and field, all at once.
+    """
+    log = ProblemLog()
+    file = Path(path)
+    table = load_yaml(file, log)
+    log.raise_if_any()
+    if table is None:
+        raise AssertionError("a file that cannot be read leaves a problem")
+    reagents = load_reagents()
+    entry = Entry.top(table, str(path), log)
+    blocks = _read_blocks(entry, file, reagents)
+    system = _checked_system(blocks, reagents)
+    log.raise_if_any()
+    return _site(blocks, file, reagents, system, on_day or datetime.date.today())
+
+
+def _read_blocks(entry: Entry, file: Path, reagents: Mapping[str, Reagent]) -> _Blocks:
+    name, currency = entry.text("site"), entry.text("currency")
+    feed_entry = entry.block("feed")
+    feed = None if feed_entry is None else read_feed(feed_entry)
+    treatment_entry = entry.block("treatment")
+    treatment = None if treatment_entry is None else read_treatment(treatment_entry, reagents)
+    limits_entry = entry.block("limits")
+    foreseen = _foreseen(feed, treatment, reagents)
+    limits = None if limits_entry is None else read_limits(limits_entry, foreseen)
+    disposal_entry = entry.block("disposal")
+    disposal = None if disposal_entry is None else read_disposal(disposal_entry)
+    known = treatment.allowed_at if treatment else {}
+    blocks = _Blocks(
+        name=name, currency=currency, feed=feed, treatment=treatment, limits=limits,
+        disposal=disposal, charges=entry.numbers("burden_charges_per_kg", BURDENS, "burdens"),
+        offers=_read_price_book(entry, file, reagents, treatment),
+        solver=read_solver(entry.block_or_none("solver")),
+        doses_today=entry.numbers("today", known, "reagents allowed in treatment", NON_NEGATIVE),
+    )  # fmt: skip
+    entry.finish()
+    return blocks
+
+
+def _foreseen(
+    feed: FeedBlock | None, treatment: TreatmentBlock | None, reagents: Mapping[str, Reagent]
+) -> Foreseen | None:
+    if feed is None or treatment is None:
+        return None
+    brought = {c for name in treatment.allowed_at for c in reagents[name].components}
+    if feed.closing_analyte:
+        brought.add(ANALYTES[feed.closing_analyte].component)
+    return Foreseen(analysed=tuple(feed.analysed), brought_components=brought)
+
+
+def _read_price_book(
+    entry: Entry, file: Path, reagents: Mapping[str, Reagent], treatment: TreatmentBlock | None
+) -> tuple[Offer, ...]:
+    """Read the price book beside the site file; every allowed reagent must be in it."""
+    name = entry.text("offers")
+    if not name:
+        return ()
+    book = file.parent / name
+    if not book.exists():
+        entry.at("offers").problem(
+            f"no file {echo(name)} beside the site file",
+            "a price book",
+            f"Write one with the columns {','.join(OFFER_COLUMNS)}, or correct the name.",
+        )
+        return ()
+    log = entry.spot.log
+    before = len(log.problems)
+    offers, sold = read_offers(book, reagents, log)
+    if not sold and len(log.problems) > before:
+        return offers  # the table itself could not be read: that was said
+    for reagent, spot in (treatment.allowed_at if treatment else {}).items():
+        if reagent not in sold:
+            spot.problem(
+                f"{reagent}, which no offer sells",
+                f"at least one offer of it in {name}",
+                "Add an offer, or take the reagent out of the list.",
+            )
+    return offers
+
+
+def _checked_system(blocks: _Blocks, reagents: Mapping[str, Reagent]) -> System | None:
+    """Build the site's system, and record it when the feed cannot be electroneutral in it."""
+    feed = blocks.feed
+    if feed is None or feed.analysis is None:
+        return None
+    allowed = blocks.treatment.allowed_at if blocks.treatment else {}
+    system = load_system(feed.temperature_degc, components=site_components(feed, allowed, reagents))
+    try:
+        feed_water(feed.analysis, system)
+    except WaterError as error:
+        feed.analysis_spot.problem(
+            f"an analysis that does not hold ({error})",
+            "a water that the closing ion can make electroneutral",
+            "Check units, the pH and missing ions; or name another ion in `close_charge_with`.",
+        )
+    return system
+
+
+def site_components(
+    feed: FeedBlock, allowed: Mapping[str, object], reagents: Mapping[str, Reagent]
+) -> tuple[str, ...]:
+    """Components that a site needs: those analysed, dosed, closed with, and the usual ones."""
+    found = dict.fromkeys(ALWAYS_COMPONENTS)
+    found |= dict.fromkeys(
+        ANALYTES[name].component for name in feed.analysed if ANALYTES[name].is_modelled
+    )
+    if feed.closing_analyte:
+        found[ANALYTES[feed.closing_analyte].component] = None
+    for name in allowed:
+        found |= dict.fromkeys(reagents[name].components)
+    if feed.aerated and "Fe+2" in found:
+        found["Fe+3"] = None
+    return tuple(found)
+
+
+def _site(
+    blocks: _Blocks, file: Path, reagents: Mapping[str, Reagent], system: System | None,
+    day: datetime.date,
+) -> Site:  # fmt: skip
+    feed, treatment, limits, disposal = (
+        blocks.feed, blocks.treatment, blocks.limits, blocks.disposal,
+    )  # fmt: skip
+    if not (feed and treatment and limits and disposal and system and feed.analysis):
+        raise AssertionError("a block that is missing leaves a problem")
+    return Site(
+        name=blocks.name, path=file, currency=blocks.currency,
+        flow_m3_per_d=feed.flow_m3_per_d, operating_days_per_year=feed.operating_days_per_year,
+        stands_for=feed.stands_for, analysis=feed.analysis, system=system,
+        reagents={name: reagents[name] for name in treatment.allowed_at},
+        limits=limits.limits, ph_window=limits.ph_window, design_margin=limits.design_margin,
+        variability=limits.variability, floors_mg_per_l=limits.floors_mg_per_l,
+        treatment=treatment.treatment, disposal=disposal,
+        burden_charges_per_kg=blocks.charges, offers=blocks.offers, solver=blocks.solver,
+        pretreated=feed.pretreated, today=blocks.doses_today,
+        notes=(
+            *feed.notes, *limits.notes, *_closing_notes(feed, limits),
+            *expired_notes(blocks.offers, day),
+        ),
+    )  # fmt: skip
+
+
+def _closing_notes(feed: FeedBlock, limits: LimitsBlock) -> list[str]:
+    ion = feed.closing_analyte
+    if all(limit.parameter != ion for limit in limits.limits):
+        return []
+    return [
+        f"the charge is closed with {ion}, which has a limit: whether it is met leans on the"
+        " charge balance of the analysis"
+    ]
