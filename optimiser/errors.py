@@ -1,0 +1,128 @@
+"""Errors of the optimiser and the messages of its solver and purchasing parts.
+
+OptimiserError
+├── NoPlan              no doses meet every limit with what the site allows      (exit code 3)
+├── NoPurchase          the offers cannot cover the demand                       (exit code 3)
+├── FeedRefused         a feed that must not be planned on as it stands          (exit code 2)
+├── Interrupted         stopped by the user or a time limit before a result      (exit code 4)
+├── ModelError          a model that was put together wrongly                    (exit code 1)
+└── SolverError
+    ├── SolverUnavailable   the solver asked for is not installed                (exit code 2)
+    └── SolverFault         the solver failed or returned what does not hold     (exit code 1)
+
+Mistakes in files and tables that users write are `catalogs.problems.InputFileError` (exit code 2).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from typing import ClassVar
+
+_MOST_SHOWN = 5
+
+
+class OptimiserError(Exception):
+    """Any problem that the optimiser reports to its caller."""
+
+    exit_code: ClassVar[int] = 1
+
+
+class NoPlan(OptimiserError):  # noqa: N818 - a public name that says what happened
+    """No doses were found that meet every limit with what the site allows.
+
+    ``reasons`` holds one sentence for each limit that clashes; ``diagnosis`` whatever the search
+    can say beyond that (lowest reachable values, least relaxation).
+    """
+
+    exit_code: ClassVar[int] = 3
+
+    def __init__(
+        self, message: str, *, reasons: Iterable[str] = (), diagnosis: object = None
+    ) -> None:
+        self.reasons: tuple[str, ...] = tuple(reasons)
+        self.diagnosis = diagnosis
+        super().__init__(_with_reasons(message, self.reasons))
+
+
+class NoPurchase(OptimiserError):  # noqa: N818 - a public name that says what happened
+    """The offers at hand cannot cover the demand; ``reasons`` holds every cause found."""
+
+    exit_code: ClassVar[int] = 3
+
+    def __init__(self, reasons: Iterable[str]) -> None:
+        self.reasons: tuple[str, ...] = tuple(reasons)
+        super().__init__(_with_reasons("no purchase covers this demand:", self.reasons))
+
+
+class FeedRefused(OptimiserError):  # noqa: N818 - named after what happened, like its siblings
+    """A feed that precipitation must not be planned on as it stands."""
+
+    exit_code: ClassVar[int] = 2
+
+
+class Interrupted(OptimiserError):  # noqa: N818 - named after what happened, like its siblings
+    """Stopped by the user or a time limit before a verified result was found."""
+
+    exit_code: ClassVar[int] = 4
+
+
+class ModelError(OptimiserError):
+    """A mixed-integer model that was put together wrongly; never the user's fault."""
+
+
+class SolverError(OptimiserError):
+    """Any problem between the optimiser and the solver."""
+
+
+class SolverUnavailable(SolverError):  # noqa: N818 - named after what happened
+    """The solver asked for cannot be used here.
+
+    ``tried`` names the solver, ``how_to_install`` the command that brings it.
+    """
+
+    exit_code: ClassVar[int] = 2
+
+    def __init__(self, tried: str, why: str, how_to_install: str) -> None:
+        self.tried = tried
+        self.how_to_install = how_to_install
+        super().__init__(f"solver {tried} cannot be used: {why}\n    {how_to_install}")
+
+
+class SolverFault(SolverError):  # noqa: N818 - named after what happened
+    """The solver failed, or what it returned does not hold when checked."""
+
+    def __init__(self, solver: str, model: str, what: str, details: Sequence[str] = ()) -> None:
+        self.solver = solver
+        self.details: tuple[str, ...] = tuple(details)
+        shown = list(self.details[:_MOST_SHOWN])
+        if len(self.details) > _MOST_SHOWN:
+            shown.append(f"and {len(self.details) - _MOST_SHOWN} more")
+        super().__init__(_with_reasons(f"{solver} on model {model!r}: {what}", shown))
+
+
+def unknown_solver(name: str, known: Iterable[str]) -> str:
+    """Say that no solver goes by this name."""
+    return f"there is no solver {name!r}; choose one of: {', '.join(known)}"
+
+
+def no_offer(reagent: str, sold: Sequence[str]) -> str:
+    """Say that nobody sells a reagent that is needed."""
+    offered = ", ".join(sold) if sold else "nothing"
+    return f"{reagent}: no offer sells it; the offers sell {offered}"
+
+
+def bad_demand(reagent: str, demand: object) -> str:
+    """Say that a demand is no amount."""
+    return f"{reagent}: a demand in kg pure per year is a number of 0 or more, found {demand!r}"
+
+
+def unbounded_demand(reagent: str, offer: str) -> str:
+    """Say that a least order needs an upper end of the demand."""
+    return (
+        f"offer {offer!r} has a least order, so the demand of {reagent} must have an upper end; "
+        "give the variables behind it finite upper bounds"
+    )
+
+
+def _with_reasons(message: str, reasons: Sequence[str]) -> str:
+    return "\n".join([message, *(f"    {reason}" for reason in reasons)])
