@@ -24,13 +24,15 @@ class Batch:
     """Waters being solved: totals, what is held fixed, and the current iterate.
 
     ``ph_ln`` is ln a(H+) where pH is held, else nan; ``co2_ln`` is ln a(CO3) + 2 ln a(H) where
-    pCO2 is held, else nan; ``titrant`` is what is added to hold the pH, per mole.
+    pCO2 is held, else nan; ``titrant`` is what is added to hold the pH, per mole, and ``pivot`` the
+    component whose balance tells its dose.
     """
 
     totals: FloatArray
     ph_ln: FloatArray
     co2_ln: FloatArray
     titrant: FloatArray
+    pivot: IntArray
     present: BoolArray
     ln_activity: FloatArray
     ionic_strength: FloatArray
@@ -72,7 +74,37 @@ def new_batch(
     strength = np.clip(0.5 * np.abs(totals) @ system.component_charges**2, 1e-7, 1.0)
     p = len(system.solids)
     return Batch(
-        totals=totals, ph_ln=ph_ln, co2_ln=ln_co2, titrant=titrant, present=present,
+        totals=totals, ph_ln=ph_ln, co2_ln=ln_co2, titrant=titrant,
+        pivot=pivots(system, titrant, ~np.isnan(ln_co2)), present=present,
         ln_activity=guess, ionic_strength=strength, solids=np.zeros((n, p)),
         active=np.zeros((n, p), dtype=bool), converged=np.zeros(n, dtype=bool),
     )  # fmt: skip
+
+
+def pivots(system: System, titrant: FloatArray, holds_co2: BoolArray) -> IntArray:
+    """Component whose balance tells the dose of the titrant: H+, else what moves the pH most.
+
+    Where pCO2 is held the carbonate balance is open, so the carbonate of the titrant counts as the
+    protons that it takes up. A titrant that cannot move the pH gets -1.
+    """
+    carried = titrant.copy()
+    proton, carbonate = system.index.get("H+", -1), system.index.get("CO3-2", -1)
+    if proton < 0:
+        return np.full(titrant.shape[0], -1, dtype=np.int64)
+    if carbonate >= 0:
+        carried[holds_co2, proton] -= 2.0 * carried[holds_co2, carbonate]
+        carried[holds_co2, carbonate] = 0.0
+    moved = np.abs(carried * proton_coupling(system))
+    pivot = np.where(moved.max(axis=1) > 0.0, np.argmax(moved, axis=1), -1)
+    return np.asarray(np.where(carried[:, proton] != 0.0, proton, pivot), dtype=np.int64)
+
+
+def proton_coupling(system: System) -> FloatArray:
+    """Protons in the species that each component forms with protons alone, (components,).
+
+    Positive for bases (carbonate: HCO3-, CO2), negative for acids (ferric iron: its hydroxides).
+    """
+    formation, proton = system.formation, system.index["H+"]
+    partners = np.delete(formation, proton, axis=1) != 0.0
+    alone = (partners.sum(axis=1) == 1) & (formation[:, proton] != 0.0)
+    return np.asarray((formation[alone] > 0.0).T @ formation[alone, proton], dtype=float)

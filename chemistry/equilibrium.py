@@ -14,8 +14,6 @@ and 2, `chemistry.newton` step 3, `chemistry.state` what callers see.
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 import numpy as np
 
 from chemistry.batch import Batch, IntArray, new_batch
@@ -52,9 +50,7 @@ def _retry(kernel: Kernel, batch: Batch, rows: IntArray) -> None:
     for number, settings in enumerate(RETRIES):
         if rows.size == 0:
             return
-        part = batch.take(rows)
-        fresh = new_batch(kernel.system, part.totals, -part.ph_ln / LN10, part.co2_ln, part.titrant)
-        part = replace(fresh, ln_activity=fresh.ln_activity)
+        part = _afresh(kernel, batch, rows)
         start(kernel, part, rounds=START_ROUNDS * (2 + 4 * number))
         interior(kernel, part, **settings)
         finish(kernel, part)
@@ -65,10 +61,18 @@ def _retry(kernel: Kernel, batch: Batch, rows: IntArray) -> None:
 def solve_warm(kernel: Kernel, batch: Batch) -> None:
     """Solve from the iterate already in the batch; rows that fail start cold."""
     with np.errstate(all="ignore"):
-        finish(kernel, batch)
+        for begin in range(0, batch.totals.shape[0], CHUNK_STATES):
+            rows = np.arange(begin, min(begin + CHUNK_STATES, batch.totals.shape[0]))
+            part = batch.take(rows)
+            finish(kernel, part)
+            batch.put(rows, part)
     rows = np.flatnonzero(~batch.converged)
     if rows.size:
-        part = batch.take(rows)
-        cold = new_batch(kernel.system, part.totals, -part.ph_ln / LN10, part.co2_ln, part.titrant)
+        cold = _afresh(kernel, batch, rows)
         solve(kernel, cold)
         batch.put(rows, cold)
+
+
+def _afresh(kernel: Kernel, batch: Batch, rows: IntArray) -> Batch:
+    part = batch.take(rows)
+    return new_batch(kernel.system, part.totals, -part.ph_ln / LN10, part.co2_ln, part.titrant)

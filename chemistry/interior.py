@@ -9,7 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from chemistry.batch import Batch, BoolArray, FloatArray, IntArray
+from chemistry.batch import Batch, BoolArray, FloatArray, IntArray, proton_coupling
 from chemistry.kernel import Kernel
 from chemistry.linear import solve_batch
 
@@ -26,11 +26,16 @@ def start(kernel: Kernel, batch: Batch, rounds: int = START_ROUNDS) -> None:
         batch.ln_activity[ph, kernel.proton] = batch.ph_ln[ph]
         held[ph, kernel.proton] = True
     move = batch.present & ~held
+    dosed = np.flatnonzero(ph & (np.count_nonzero(batch.titrant, axis=1) > 1))
     for turn in range(rounds):
         m = kernel.molalities(batch.ln_activity, batch.ionic_strength)
+        if dosed.size:
+            totals[dosed] = _with_titrant(kernel, batch.take(dosed), m[dosed])
         gain = m @ kernel.positive + np.maximum(-totals, 0.0)
         loss = m @ kernel.negative + np.maximum(totals, 0.0)
         ratio = np.log(np.maximum(loss, 1e-300) / np.maximum(gain, 1e-300)) / kernel.largest
+        if dosed.size:
+            _drive_by_protons(kernel, batch, ratio, dosed)
         small = np.exp(-np.abs(ratio))
         theta = 0.9 - 0.5 * (1.0 - small) * (turn % 3 != 0)
         step = np.where(move, theta * np.clip(ratio, -30.0, 30.0), 0.0)
@@ -40,6 +45,24 @@ def start(kernel: Kernel, batch: Batch, rounds: int = START_ROUNDS) -> None:
         batch.ionic_strength = 0.5 * (batch.ionic_strength + strength)
         if np.max(np.abs(np.where(move, ratio, 0.0)), initial=0.0) < 0.02:
             break
+
+
+def _with_titrant(kernel: Kernel, part: Batch, m: FloatArray) -> FloatArray:
+    """Totals with the titrant that the species so far call for; other components stay positive."""
+    filled = part.totals + kernel.added(part, m @ kernel.formation)
+    least = np.where(part.present, 1e-3 * part.totals + 1e-12, 0.0)
+    filled = np.maximum(filled, least)
+    filled[:, kernel.proton] = part.totals[:, kernel.proton]
+    return np.asarray(filled, dtype=float)
+
+
+def _drive_by_protons(kernel: Kernel, batch: Batch, ratio: FloatArray, dosed: IntArray) -> None:
+    """Let the proton balance move the pivot of a titrant that carries no protons, in place."""
+    pivot = batch.pivot[dosed]
+    rows, pivot = dosed[pivot != kernel.proton], pivot[pivot != kernel.proton]
+    if rows.size:
+        sign = np.sign(proton_coupling(kernel.system))[pivot]
+        ratio[rows, pivot] = np.clip(sign * ratio[rows, kernel.proton], -2.0, 2.0)
 
 
 def _hold_start(kernel: Kernel, batch: Batch) -> None:

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from chemistry.batch import Batch, FloatArray
+from chemistry.batch import Batch, FloatArray, IntArray
 from chemistry.system import System
 
 LN_MOLALITY_CAP = 30.0
@@ -73,37 +73,52 @@ class Kernel:
 
     # -- held pH and pCO2 ----------------------------------------------------------------------
 
+    def doses(self, batch: Batch, gap: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Titrant and carbon dioxide that fill a gap in the balances, each (n,). [mol/L]
+
+        Notes
+        -----
+        ``gap = d v + e w`` with the titrant ``v`` and ``w`` = 1 carbonate + 2 protons. The
+        carbonate row gives ``e``, the row ``batch.pivot`` gives ``d`` once ``e`` is eliminated.
+        """
+        titrant, co2 = np.zeros(gap.shape[0]), np.zeros(gap.shape[0])
+        h, c = self.proton, self.carbonate
+        ph = np.flatnonzero(~np.isnan(batch.ph_ln))
+        if ph.size:
+            v = self.reduced_titrant(batch, ph)
+            rest = gap[ph].copy()
+            if c >= 0:
+                rest[:, h] -= np.where(np.isnan(batch.co2_ln[ph]), 0.0, 2.0 * rest[:, c])
+            p = batch.pivot[ph, None]
+            titrant[ph] = (np.take_along_axis(rest, p, 1) / np.take_along_axis(v, p, 1))[:, 0]
+        opened = np.flatnonzero(~np.isnan(batch.co2_ln))
+        if opened.size:
+            co2[opened] = gap[opened, c] - titrant[opened] * batch.titrant[opened, c]
+        return titrant, co2
+
+    def reduced_titrant(self, batch: Batch, rows: IntArray) -> FloatArray:
+        """Titrant of some rows less the carbon dioxide that a held pressure removes, (k, comps)."""
+        v = batch.titrant[rows].copy()
+        if self.carbonate >= 0:
+            opened = ~np.isnan(batch.co2_ln[rows])
+            v[opened, self.proton] -= 2.0 * v[opened, self.carbonate]
+            v[opened, self.carbonate] = 0.0
+        return v
+
     def added(self, batch: Batch, total: FloatArray) -> FloatArray:
         """What must be added to the totals to hold pH and pCO2, (n, components). [mol/L]"""
-        gap = total - batch.totals
-        result = np.zeros_like(gap)
-        held_ph, held_co2 = ~np.isnan(batch.ph_ln), ~np.isnan(batch.co2_ln)
-        h, c = self.proton, self.carbonate
-        if held_co2.any():
-            both = held_co2 & held_ph
-            only = held_co2 & ~held_ph
-            result[only, c] = gap[only, c]
-            result[only, h] = 2.0 * gap[only, c]
-            v = batch.titrant[both]
-            # gap_h = d v_h + 2 e, gap_c = d v_c + e
-            pivot = v[:, h] - 2.0 * v[:, c]
-            d = (gap[both, h] - 2.0 * gap[both, c]) / pivot
-            e = gap[both, c] - d * v[:, c]
-            filled = d[:, None] * v
-            filled[:, c] += e
-            filled[:, h] += 2.0 * e
-            result[both] = filled
-        plain = held_ph & ~held_co2
-        if plain.any():
-            v = batch.titrant[plain]
-            result[plain] = (gap[plain, h] / v[:, h])[:, None] * v
+        titrant, co2 = self.doses(batch, total - batch.totals)
+        result = titrant[:, None] * batch.titrant
+        if self.carbonate >= 0:
+            result[:, self.carbonate] += co2
+            result[:, self.proton] += 2.0 * co2
         return result
 
     def misses(self, batch: Batch, total: FloatArray) -> FloatArray:
         """Error of the balances that nothing held opens, (n, components). [mol/L]"""
         miss = np.where(batch.present, batch.totals + self.added(batch, total) - total, 0.0)
-        if self.proton >= 0:
-            miss[~np.isnan(batch.ph_ln), self.proton] = 0.0
+        ph = np.flatnonzero(~np.isnan(batch.ph_ln))
+        miss[ph, batch.pivot[ph]] = 0.0
         if self.carbonate >= 0:
             miss[~np.isnan(batch.co2_ln), self.carbonate] = 0.0
         return miss
@@ -112,8 +127,8 @@ class Kernel:
         """Replace the balances that a held pH or pCO2 opens, in place.
 
         ``matrix`` (n, components or more, k) and ``rhs`` (n, components or more) hold the
-        linearised balances in their first rows. A row of the titrant is eliminated with the proton
-        row, then the proton (carbonate) row becomes the condition itself.
+        linearised balances in their first rows. The titrant's other rows are eliminated with its
+        pivot row, then the pivot (carbonate) row becomes the condition itself.
         """
         h, c = self.proton, self.carbonate
         co2 = np.flatnonzero(~np.isnan(batch.co2_ln))
@@ -122,19 +137,17 @@ class Kernel:
             rhs[co2, h] -= 2.0 * rhs[co2, c]
         ph = np.flatnonzero(~np.isnan(batch.ph_ln))
         if ph.size:
-            v = batch.titrant[ph].copy()
-            opened = ~np.isnan(batch.co2_ln[ph])
-            if c >= 0:
-                v[opened, h] -= 2.0 * v[opened, c]
-            factor = v / v[:, h : h + 1]
-            factor[:, h] = 0.0
+            p = batch.pivot[ph]
+            v = self.reduced_titrant(batch, ph)
+            factor = v / np.take_along_axis(v, p[:, None], 1)
+            factor[np.arange(ph.size), p] = 0.0
             if np.any(factor):
                 count = factor.shape[1]
-                matrix[ph, :count] -= factor[:, :, None] * matrix[ph, h][:, None, :]
-                rhs[ph, :count] -= factor * rhs[ph, h][:, None]
-            matrix[ph, h] = 0.0
-            matrix[ph, h, h] = 1.0
-            rhs[ph, h] = batch.ph_ln[ph] - batch.ln_activity[ph, h]
+                matrix[ph, :count] -= factor[:, :, None] * matrix[ph, p][:, None, :]
+                rhs[ph, :count] -= factor * rhs[ph, p][:, None]
+            matrix[ph, p] = 0.0
+            matrix[ph, p, h] = 1.0
+            rhs[ph, p] = batch.ph_ln[ph] - batch.ln_activity[ph, h]
         if co2.size:
             matrix[co2, c] = 0.0
             matrix[co2, c, c] = 1.0

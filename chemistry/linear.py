@@ -16,21 +16,32 @@ def left_inverse(basis: FloatArray) -> FloatArray:
 
 
 def solve_batch(matrix: FloatArray, rhs: FloatArray) -> FloatArray:
-    """Solve a batch of small systems; singular ones are regularised, not raised."""
-    try:
-        return _solve(matrix, rhs)
-    except np.linalg.LinAlgError:
-        count = matrix.shape[1]
-        nudged = matrix.copy()
-        nudged[:, range(count), range(count)] += 1e-12
-        try:
-            return _solve(nudged, rhs)
-        except np.linalg.LinAlgError:
-            return np.asarray(np.einsum("nij,nj->ni", np.linalg.pinv(nudged), rhs), dtype=float)
+    """Solve a batch of small systems, right-hand sides (n, size) or (n, size, k).
+
+    Singular ones are regularised, not raised; the others come out as if alone.
+    """
+    columns = rhs[:, :, None] if rhs.ndim == 2 else rhs
+    return np.asarray(_solve(matrix, columns).reshape(rhs.shape), dtype=float)
 
 
 def _solve(matrix: FloatArray, rhs: FloatArray) -> FloatArray:
-    return np.asarray(np.linalg.solve(matrix, rhs[:, :, None])[:, :, 0], dtype=float)
+    try:
+        return np.asarray(np.linalg.solve(matrix, rhs), dtype=float)
+    except np.linalg.LinAlgError:
+        if matrix.shape[0] == 1:
+            return _solve_singular(matrix, rhs)
+        half = matrix.shape[0] // 2
+        return np.concatenate(
+            [_solve(matrix[:half], rhs[:half]), _solve(matrix[half:], rhs[half:])]
+        )
+
+
+def _solve_singular(matrix: FloatArray, rhs: FloatArray) -> FloatArray:
+    nudged = matrix + 1e-12 * np.eye(matrix.shape[1])
+    try:
+        return np.asarray(np.linalg.solve(nudged, rhs), dtype=float)
+    except np.linalg.LinAlgError:
+        return np.full_like(rhs, np.nan)
 
 
 def solve_equilibrated(matrix: FloatArray, rhs: FloatArray) -> FloatArray:
