@@ -9,6 +9,8 @@ import pytest
 
 from catalogs.constants import (
     COMPONENTS,
+    SolidInfo,
+    SpeciesInfo,
     enthalpy_unknown,
     load_system,
     solid_info,
@@ -18,10 +20,10 @@ from catalogs.constants import (
 )
 from chemistry import equilibrate
 from chemistry.errors import SystemDefinitionError
-from chemistry.formula import charge_of, check_balance
-from chemistry.system import LN10
+from chemistry.formula import charge_of, check_balance, molar_mass_g_per_mol
+from chemistry.system import LN10, Solid, Species
 
-EVERY_ROW = [*species_table().values(), *solid_table().values()]
+EVERY_ROW: list[SpeciesInfo | SolidInfo] = [*species_table().values(), *solid_table().values()]
 
 
 def test_no_row_and_no_digit_was_lost() -> None:
@@ -63,7 +65,8 @@ def test_names_are_unique_and_made_of_the_catalogs_components() -> None:
     system = load_system(solids=solid_table())
     names = [*system.components, *(row.name for row in EVERY_ROW)]
     assert len(names) == len(set(names))
-    used = {c for item in (*system.species, *system.solids) for c in item.stoichiometry}
+    items: list[Species | Solid] = [*system.species, *system.solids]
+    used = {c for item in items for c in item.stoichiometry}
     assert used == set(COMPONENTS)
 
 
@@ -229,8 +232,32 @@ def test_chloride_takes_silver_down_to_a_best_dose_and_brings_it_back() -> None:
     """Published minima over AgCl: 0.03 to 0.07 mg/L near 2 to 3 mmol/L of chloride."""
     system = load_system(components=["Ag+", "Cl-", "Na+"])
     chloride = np.array([2e-4, 2.5e-3, 0.1])
-    totals = {"Ag+": 1e-4, "Cl-": chloride + 1e-4, "Na+": chloride}
+    totals = np.column_stack([0.0 * chloride, chloride, chloride + 1e-4, 1e-4 + 0.0 * chloride])
     silver = 107868.0 * equilibrate(system, totals, ph=7.0).dissolved["Ag+"].to_numpy()
     assert 0.03 <= silver[1] <= 0.07
     assert silver[0] > 1.5 * silver[1]
     assert silver[2] > 5.0 * silver[1]
+
+
+@pytest.mark.parametrize(
+    ("metal", "best_ph", "least_mg_per_l"),
+    [
+        ("Zn+2", 9.6, 0.41),
+        ("Cr+3", 8.9, 0.0076),
+        ("Cu+2", 9.35, 0.0094),
+        ("Ni+2", 10.3, 0.014),
+        ("Cd+2", 11.85, 0.155),
+        ("Al+3", 6.25, 0.17),
+        ("Mn+2", 11.9, 0.012),
+    ],
+)
+def test_fresh_hydroxides_have_their_least_solubility_where_a_second_solver_found_it(
+    metal: str, best_ph: float, least_mg_per_l: float
+) -> None:
+    """Minima of the same constants at zero ionic strength, from a separate Newton solver."""
+    system = load_system(components=[metal], activity="ideal")
+    ph = np.arange(6.0, 13.0, 0.05)
+    state = equilibrate(system, {metal: np.full(ph.size, 1e-2)}, ph=ph)
+    residual = 1000.0 * molar_mass_g_per_mol(metal) * state.dissolved[metal].to_numpy()
+    assert ph[residual.argmin()] == pytest.approx(best_ph, abs=0.101)
+    assert residual.min() == pytest.approx(least_mg_per_l, rel=0.05)
