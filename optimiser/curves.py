@@ -31,7 +31,11 @@ BoolArray = NDArray[np.bool_]
 PH_STEP = 0.5
 SWEEP_TOP_MG_PER_L = 5000.0
 _SWEEP_DIGITS = (1.0, 2.0, 5.0)
-_ALKALI_STEPS = 12
+_STEP_DIGITS = (1.0, 2.0, 2.5, 5.0)
+_LEAST_STEPS = 10
+# An alkali that buffers needs ever more for the last steps of pH; its sweep ends at this multiple
+# of the dose that reaches the lowest pH of the grid.
+_SWEEP_MULTIPLE = 5.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -39,6 +43,7 @@ class CurvePoint:
     """One equilibrium state of a curve; doses are mg/L of the pure compound, fed."""
 
     dose_mg_per_l: float
+    controller: str
     controller_dose_mg_per_l: float
     ph: float
     residual_mg_per_l: Mapping[str, float]
@@ -49,14 +54,13 @@ class CurvePoint:
 class Curve:
     """States along one reagent's dose or along the pH.
 
-    ``kind`` is ``residual-versus-dose`` or ``residual-versus-ph``; where ``held_ph`` is a number a
-    pH controller held it with ``controllers``, and ``controller_dose_mg_per_l`` is what that took.
+    ``kind`` is ``residual-versus-dose`` or ``residual-versus-ph``; where ``held_ph`` is given the
+    ``controller`` of each point held it, and ``controller_dose_mg_per_l`` is what that took.
     """
 
     kind: str
     reagent: str
     held_ph: float | None
-    controllers: tuple[str, ...]
     points: tuple[CurvePoint, ...]
     unreached: tuple[float, ...]
     """Doses or pH values of the grid that no controller of the site could bring about."""
@@ -64,26 +68,25 @@ class Curve:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Curves:
-    """All curves of a site; ``alkali_demand`` gives per pH the dose of each alkali alone."""
+    """All curves of a site; ``demand_mg_per_l``: per pH the dose of each alkali or acid alone."""
 
     site: str
     feed_ph: float
     metals: tuple[str, ...]
     curves: tuple[Curve, ...]
-    alkali_demand_mg_per_l: Mapping[float, Mapping[str, float | None]] = field(default_factory=dict)
+    demand_mg_per_l: Mapping[float, Mapping[str, float | None]] = field(default_factory=dict)
 
     def to_dict(self) -> dict[str, Any]:
         """Return plain data, ready for JSON."""
         demand = [
-            {"ph": ph, "dose_mg_per_l": dict(doses)}
-            for ph, doses in self.alkali_demand_mg_per_l.items()
+            {"ph": ph, "dose_mg_per_l": dict(doses)} for ph, doses in self.demand_mg_per_l.items()
         ]
         return {
             "site": self.site,
             "feed_ph": self.feed_ph,
             "metals": list(self.metals),
             "curves": [_plain(asdict(curve)) for curve in self.curves],
-            "alkali_demand": demand,
+            "demand": demand,
         }
 
     def to_frame(self) -> pd.DataFrame:
@@ -95,7 +98,7 @@ class Curves:
                 "curve": curve.kind,
                 "reagent": curve.reagent,
                 "dose_mg_per_l": point.dose_mg_per_l,
-                "controllers": " ".join(curve.controllers),
+                "controller": point.controller,
                 "controller_dose_mg_per_l": point.controller_dose_mg_per_l,
                 "ph": point.ph,
                 **{f"{name}_mg_per_l": point.residual_mg_per_l[name] for name in self.metals},
@@ -120,6 +123,11 @@ class _Bench:
     others: tuple[Reagent, ...]
     factors: Mapping[str, float]
     ceilings: Mapping[str, float]
+
+    def movers(self, grid: FloatArray) -> tuple[Reagent, ...]:
+        """Alkalis where the grid lies above the feed's pH, acids where it lies below."""
+        up = self.up if grid.max() > self.feed_ph else ()
+        return (*up, *(self.down if grid.min() < self.feed_ph else ()))
 
     def vector(self, reagent: Reagent) -> FloatArray:
         """Moles of each component per mg fed, (components,). [mol/mg]"""
@@ -158,7 +166,7 @@ def build_curves(site: Site, held_ph: float | None = None) -> Curves:
     window = site.treatment.ph_set_point
     target = 0.5 * (window.low + window.high) if held_ph is None else held_ph
     grid = _ph_grid(window.low, window.high)
-    by_ph = [_along_ph(bench, alkali, grid) for alkali in bench.up]
+    by_ph = [_along_ph(bench, mover, grid) for mover in bench.movers(grid)]
     by_dose = [_along_own_dose(bench, curve) for curve in by_ph]
     by_dose += [_along_dose(bench, reagent, target, site) for reagent in bench.others]
     demand = {
@@ -169,7 +177,7 @@ def build_curves(site: Site, held_ph: float | None = None) -> Curves:
         feed_ph=bench.feed_ph,
         metals=bench.metals,
         curves=(*(curve for curve in by_dose if curve.points), *by_ph),
-        alkali_demand_mg_per_l=demand,
+        demand_mg_per_l=demand,
     )
 
 
@@ -216,28 +224,34 @@ def _ph_grid(low: float, high: float) -> FloatArray:
     return np.unique(np.round(np.concatenate([[low], inner, [high]]), 6))
 
 
-def _along_ph(bench: _Bench, alkali: Reagent, grid: FloatArray) -> Curve:
-    """Raise the pH with one alkali alone."""
-    ceiling = bench.ceilings.get(alkali.reagent, np.inf)
-    wanted = grid[(grid > bench.feed_ph) & (grid <= ceiling)]
-    held = _bring_to(bench, np.tile(bench.totals, (wanted.size, 1)), wanted, alkali)
-    points = _points(bench, held.state, held.dose, np.zeros(wanted.size), held.reached)
-    missing = [float(ph) for ph in grid if ph not in wanted[held.reached]]
+def _along_ph(bench: _Bench, mover: Reagent, grid: FloatArray) -> Curve:
+    """Move the pH with one alkali or acid alone."""
+    ceiling = bench.ceilings.get(mover.reagent, np.inf)
+    away = grid > bench.feed_ph if mover in bench.up else grid < bench.feed_ph
+    wanted = grid[away & (grid <= ceiling)]
+    points: tuple[CurvePoint, ...] = ()
+    if wanted.size:
+        held = _bring_to(bench, np.tile(bench.totals, (wanted.size, 1)), wanted, mover)
+        points = _points(bench, held.state, held.dose, held.reached)
+    reached = [point.ph for point in points]
     return Curve(
-        kind="residual-versus-ph", reagent=alkali.reagent, held_ph=None, controllers=(),
-        points=points, unreached=tuple(missing),
+        kind="residual-versus-ph", reagent=mover.reagent, held_ph=None,
+        points=points,
+        unreached=tuple(float(ph) for ph in grid if not np.isclose(ph, reached, atol=1e-6).any()),
     )  # fmt: skip
 
 
 def _along_own_dose(bench: _Bench, by_ph: Curve) -> Curve:
-    """Sweep an alkali in even steps up to the dose that reaches the top of its pH curve."""
-    alkali = next(reagent for reagent in bench.up if reagent.reagent == by_ph.reagent)
-    top = max((point.dose_mg_per_l for point in by_ph.points), default=0.0)
-    doses = np.linspace(0.0, _round_up(top), _ALKALI_STEPS + 1) if top > 0.0 else np.zeros(0)
-    state = equilibrate(bench.system, bench.totals + doses[:, None] * bench.vector(alkali))
-    points = _points(bench, state, doses, np.zeros(doses.size), state.converged)
+    """Sweep an alkali or acid in even steps up to the dose that reaches the end of its pH curve."""
+    mover = next(r for r in (*bench.up, *bench.down) if r.reagent == by_ph.reagent)
+    needed = [point.dose_mg_per_l for point in by_ph.points]
+    points: tuple[CurvePoint, ...] = ()
+    if needed:
+        doses = even_doses_mg_per_l(min(max(needed), _SWEEP_MULTIPLE * min(needed)))
+        state = equilibrate(bench.system, bench.totals + doses[:, None] * bench.vector(mover))
+        points = _points(bench, state, doses, state.converged)
     return Curve(
-        kind="residual-versus-dose", reagent=alkali.reagent, held_ph=None, controllers=(),
+        kind="residual-versus-dose", reagent=mover.reagent, held_ph=None,
         points=points, unreached=(),
     )  # fmt: skip
 
@@ -248,16 +262,16 @@ def _along_dose(bench: _Bench, reagent: Reagent, ph: float, site: Site) -> Curve
     doses = sweep_doses_mg_per_l(ceiling)
     totals = bench.totals + doses[:, None] * bench.vector(reagent)
     free = equilibrate(bench.system, totals)
-    used: list[str] = []
     points: dict[float, CurvePoint] = {}
     for rows, controllers in ((free.ph < ph, bench.up), (free.ph >= ph, bench.down)):
         if rows.any() and controllers:
             held = _bring_to(bench, totals[rows], np.full(int(rows.sum()), ph), controllers[0])
-            found = _points(bench, held.state, doses[rows], held.dose, held.reached)
+            found = _points(
+                bench, held.state, doses[rows], held.reached, controllers[0].reagent, held.dose
+            )
             points |= {point.dose_mg_per_l: point for point in found}
-            used += [controllers[0].reagent] if found else []
     return Curve(
-        kind="residual-versus-dose", reagent=reagent.reagent, held_ph=ph, controllers=tuple(used),
+        kind="residual-versus-dose", reagent=reagent.reagent, held_ph=ph,
         points=tuple(points[dose] for dose in sorted(points)),
         unreached=tuple(float(dose) for dose in doses if float(dose) not in points),
     )  # fmt: skip
@@ -273,8 +287,9 @@ def _points(
     bench: _Bench,
     state: EquilibriumState,
     doses: FloatArray,
-    controller_doses: FloatArray,
     keep: BoolArray,
+    controller: str = "",
+    controller_doses: FloatArray | None = None,
 ) -> tuple[CurvePoint, ...]:
     residual = {
         name: state.dissolved_mol_per_l[:, bench.system.index[ANALYTES[name].component]]
@@ -285,7 +300,10 @@ def _points(
     return tuple(
         CurvePoint(
             dose_mg_per_l=float(doses[row]),
-            controller_dose_mg_per_l=float(controller_doses[row]),
+            controller=controller,
+            controller_dose_mg_per_l=0.0
+            if controller_doses is None
+            else float(controller_doses[row]),
             ph=float(state.ph[row]),
             residual_mg_per_l={name: float(values[row]) for name, values in residual.items()},
             solids=tuple(str(name) for name in names[state.solids_mol_per_l[row] > 0.0]),
@@ -306,10 +324,17 @@ def sweep_doses_mg_per_l(top: float) -> FloatArray:
     return np.array([0.0, *(step for step in steps if step < top), top])
 
 
-def _round_up(value: float) -> float:
-    """Next value of two significant digits."""
-    unit = 10.0 ** (np.floor(np.log10(value)) - 1.0)
-    return float(np.ceil(value / unit) * unit)
+def even_doses_mg_per_l(top: float) -> FloatArray:
+    """Doses in round even steps from zero, the last at or above ``top``. [mg/L]
+
+    Examples
+    --------
+    >>> even_doses_mg_per_l(408.0)[[0, 1, -1]].tolist()
+    [0.0, 25.0, 425.0]
+    """
+    power = 10.0 ** np.floor(np.log10(top / _LEAST_STEPS))
+    step = max(digit * power for digit in _STEP_DIGITS if digit * power <= top / _LEAST_STEPS)
+    return np.asarray(step * np.arange(np.ceil(top / step) + 1.0))
 
 
 def _dose_at(curve: Curve, ph: float) -> float | None:

@@ -30,18 +30,17 @@ def curves_text(data: Data, ink: Ink = PLAIN) -> str:
     )
     for curve in data["curves"]:
         lines += ["", ink.heading(_title(curve)), *_curve(curve, data["metals"])]
-    lines += ["", ink.heading("Alkali demand: mg/L of each alkali alone"), *_demand(data)]
+    lines += ["", ink.heading("Alkali and acid demand: mg/L of each one alone"), *_demand(data)]
     return "\n".join(lines) + "\n"
 
 
 def _title(curve: Data) -> str:
     reagent = _words(curve["reagent"])
     if curve["kind"] == "residual-versus-ph":
-        return f"Residual against pH, raised with {reagent}"
+        return f"Residual against pH, moved with {reagent}"
     if curve["held_ph"] is None:
         return f"Residual against the dose of {reagent}"
-    by = f" by {' or '.join(map(_words, curve['controllers']))}" if curve["controllers"] else ""
-    return f"Residual against the dose of {reagent}, pH held at {curve['held_ph']:.2f}{by}"
+    return f"Residual against the dose of {reagent}, pH held at {curve['held_ph']:.2f}"
 
 
 def _words(reagent: str) -> str:
@@ -57,8 +56,9 @@ def _curve(curve: Data, metals: Sequence[str]) -> list[str]:
             _leading(curve, point) + [number(point["residual_mg_per_l"][name]) for name in shown]
             for point in curve["points"]
         ]
+        headers = [*_leading_headers(curve), *shown]
         lines += ([""] if lines else []) + table(
-            [*_leading_headers(curve), *shown], rows, text_columns=()
+            headers, rows, text_columns=(2,) if "held by" in headers else ()
         )
     if curve["unreached"]:
         what = "pH" if curve["kind"] == "residual-versus-ph" else "doses"
@@ -69,23 +69,24 @@ def _curve(curve: Data, metals: Sequence[str]) -> list[str]:
 def _leading_headers(curve: Data) -> list[str]:
     if curve["kind"] == "residual-versus-ph":
         return ["pH", "dose"]
-    return ["dose", "pH"] if curve["held_ph"] is None else ["dose", "to hold pH"]
+    return ["dose", "pH"] if curve["held_ph"] is None else ["dose", "to hold pH", "held by"]
 
 
 def _leading(curve: Data, point: Data) -> list[str]:
-    dose = number(point["dose_mg_per_l"], _DOSE_DIGITS)
     if curve["kind"] == "residual-versus-ph":
-        return [f"{point['ph']:.2f}", dose]
+        return [f"{point['ph']:.2f}", number(point["dose_mg_per_l"], _DOSE_DIGITS)]
+    dose = given(point["dose_mg_per_l"])
     if curve["held_ph"] is None:
         return [dose, f"{point['ph']:.2f}"]
-    return [dose, number(point["controller_dose_mg_per_l"], _DOSE_DIGITS)]
+    held = number(point["controller_dose_mg_per_l"], _DOSE_DIGITS)
+    return [dose, held, _words(point["controller"])]
 
 
 def _demand(data: Data) -> list[str]:
-    rows = data["alkali_demand"]
+    rows = data["demand"]
     names = list(rows[0]["dose_mg_per_l"]) if rows else []
     if not names:
-        return paragraph("This site allows no alkali that a pH controller may drive.")
+        return paragraph("This site allows no alkali or acid that a pH controller may drive.")
     cells = [
         [f"{row['ph']:.2f}", *(number(row["dose_mg_per_l"][name], _DOSE_DIGITS) for name in names)]
         for row in rows
@@ -93,5 +94,7 @@ def _demand(data: Data) -> list[str]:
     headers = ["pH", *("\n".join(_words(name).rsplit(" ", 1)) for name in names)]
     return [
         *table(headers, cells, text_columns=()),
-        *paragraph("-: not needed, out of reach, or above the practical ceiling of the alkali."),
+        *paragraph(
+            "-: on the other side of the feed, out of reach, or above the practical ceiling."
+        ),
     ]

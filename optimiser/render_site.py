@@ -35,7 +35,10 @@ def site_text(site: Site) -> str:
         f"{', '.join(dict.fromkeys(offer.reagent for offer in site.offers))}.",
         f"Disposal classes: {', '.join(rule.sludge_class for rule in site.disposal.rules)}.",
     ]
-    lines += bullets([*facts, *site.notes, *(n for n in feed.notes if n not in site.notes)])
+    lines += bullets(facts)
+    notes = dict.fromkeys([*site.notes, *feed.notes])
+    if notes:
+        lines += ["Worth knowing:", *bullets(list(notes))]
     return "\n".join(lines) + "\n"
 
 
