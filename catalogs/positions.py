@@ -143,7 +143,8 @@ def _build(events: Iterator[yaml.Event], spot: Spot) -> Node | None:
         elif isinstance(event, yaml.ScalarEvent):
             node = Scalar(event.value, line, plain=bool(event.implicit[0]))
         elif isinstance(event, yaml.CollectionEndEvent):
-            node = _closed(stack.pop(), spot)
+            part = stack.pop()
+            node = _closed(part, spot.at(_path(stack), part.line))
         if node is not None and stack:
             stack[-1].nodes.append(node)
         elif node is not None:
@@ -153,6 +154,18 @@ def _build(events: Iterator[yaml.Event], spot: Spot) -> Node | None:
             "nothing in the file", "`key: value` lines", "Start from `dosewright new DIR`."
         )
     return root
+
+
+def _path(stack: list[_Open]) -> str:
+    """Say where in the tree the parser stands: ``limits.own[2]``."""
+    path = ""
+    for part in stack:
+        if not part.is_table:
+            path += f"[{len(part.nodes) + 1}]"
+        elif len(part.nodes) % 2:
+            key = part.nodes[-1]
+            path += f".{key.text}" if isinstance(key, Scalar) else ".?"
+    return path.lstrip(".")
 
 
 def _check_event(event: yaml.Event, spot: Spot, depth: int, *, has_root: bool) -> None:
@@ -189,7 +202,7 @@ def _closed(part: _Open, spot: Spot) -> Node:
     nodes: dict[str, Node] = {}
     lines: dict[str, int] = {}
     for key, value in zip(part.nodes[::2], part.nodes[1::2], strict=True):
-        place = spot.at("", key.line)
+        place = Spot(log=spot.log, file=spot.file, line=key.line, field=spot.field)
         if not isinstance(key, Scalar) or (key.plain and _NOT_A_NAME.fullmatch(key.text)):
             _refuse_key(key, value, place)
         elif key.text in nodes:

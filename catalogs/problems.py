@@ -110,7 +110,7 @@ class Spot:
 
     def at(self, key: str, line: int | None = None) -> Spot:
         """Return the place of a key (or ``[3]``) inside this one."""
-        joint = "" if not self.field or key.startswith("[") else "."
+        joint = "" if not (self.field and key) or key.startswith("[") else "."
         return Spot(
             log=self.log,
             file=self.file,

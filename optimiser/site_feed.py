@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from catalogs.entries import NON_NEGATIVE, PH, POSITIVE, Entry, Range, to_day, to_number
 from catalogs.positions import Items, Node, Table, describe
 from catalogs.problems import Spot, did_you_mean, echo, listed
+from chemistry.analysis import ACIDITY_END_PH
 from chemistry.errors import WaterError
 from chemistry.feed import ANALYTES, METALS, Measurement, WaterAnalysis
 from optimiser.quantities import Concentration, read_alkalinity, read_concentration
@@ -69,14 +70,14 @@ def read_feed(entry: Entry) -> FeedBlock:
     analysed: dict[str, Spot] = {}
     measurements = _read_measurements(entry, analysed)
     pretreated, notes = _read_pretreated(entry, measurements, analysed)
-    draft = _Draft(
-        measurements=measurements, close_charge_with=closing, temperature_degc=temperature,
-        aerated=aerated,
-    )  # fmt: skip
-    analysis = _read_water(entry, draft)
+    acid = _read_acid(entry)
     entry.finish()
-    if len(entry.spot.log.problems) > before:
-        analysis = None
+    analysis = None
+    if len(entry.spot.log.problems) == before:
+        analysis = _water(
+            acid, entry.at("analysis"), measurements=measurements, close_charge_with=closing,
+            temperature_degc=temperature, aerated=aerated,
+        )  # fmt: skip
     return FeedBlock(
         stands_for=stands_for, flow_m3_per_d=flow, operating_days_per_year=days,
         temperature_degc=temperature, analysis=analysis, analysed=analysed, aerated=aerated,
@@ -86,41 +87,51 @@ def read_feed(entry: Entry) -> FeedBlock:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class _Draft:
-    """The part of an analysis that is read before its acid."""
+class _Acid:
+    """The sum parameters of an analysis: its acid, its alkalinity, its solids."""
 
-    measurements: Mapping[str, Measurement]
-    close_charge_with: str
-    temperature_degc: float
-    aerated: bool
+    ph: float | None
+    acidity_meq_per_l: float | None
+    acidity_end_ph: float
+    titration: tuple[tuple[float, float], ...]
+    alkalinity_mg_per_l_as_caco3: float | None
+    tss_mg_per_l: float
 
 
-def _read_water(entry: Entry, draft: _Draft) -> WaterAnalysis | None:
-    """Read the acid and the sum parameters, then put the analysis together."""
-    before = len(entry.spot.log.problems)
-    ph = entry.number_or("ph", None, PH)
-    acidity = entry.number_or("acidity_meq_per_l", None, NON_NEGATIVE)
-    end_ph = entry.number_or("acidity_end_ph", 8.3, PH)
-    titration = _read_titration(entry)
+def _read_acid(entry: Entry) -> _Acid:
     alkalinity = None
     for node, spot in entry.value("alkalinity"):
         alkalinity = read_alkalinity(node, spot)
-    tss = entry.number_or("tss_mg_per_l", 0.0, NON_NEGATIVE)
-    if ph is None and acidity is None and not titration and not entry.has("titration"):
+    acid = _Acid(
+        ph=entry.number_or("ph", None, PH),
+        acidity_meq_per_l=entry.number_or("acidity_meq_per_l", None, NON_NEGATIVE),
+        acidity_end_ph=entry.number_or("acidity_end_ph", ACIDITY_END_PH, PH),
+        titration=_read_titration(entry),
+        alkalinity_mg_per_l_as_caco3=alkalinity,
+        tss_mg_per_l=entry.number_or("tss_mg_per_l", 0.0, NON_NEGATIVE),
+    )
+    if not any(entry.has(key) for key in ("ph", "acidity_meq_per_l", "titration")):
         entry.at("ph").problem(
             "no acid", "ph, acidity_meq_per_l or titration", "Add the measured `ph` here."
         )
-    if len(entry.spot.log.problems) > before or not draft.close_charge_with:
-        return None
+    return acid
+
+
+def _water(
+    acid: _Acid, spot: Spot, *, measurements: Mapping[str, Measurement], close_charge_with: str,
+    temperature_degc: float, aerated: bool,
+) -> WaterAnalysis | None:  # fmt: skip
+    """Put the analysis together; what only its own checks find is a problem too."""
     try:
         return WaterAnalysis(
-            measurements=draft.measurements, close_charge_with=draft.close_charge_with,
-            temperature_degc=draft.temperature_degc, ph=ph, acidity_meq_per_l=acidity,
-            acidity_end_ph=end_ph, titration=titration,
-            alkalinity_mg_per_l_as_caco3=alkalinity, tss_mg_per_l=tss, aerated=draft.aerated,
+            measurements=measurements, close_charge_with=close_charge_with,
+            temperature_degc=temperature_degc, aerated=aerated, ph=acid.ph,
+            acidity_meq_per_l=acid.acidity_meq_per_l, acidity_end_ph=acid.acidity_end_ph,
+            titration=acid.titration, tss_mg_per_l=acid.tss_mg_per_l,
+            alkalinity_mg_per_l_as_caco3=acid.alkalinity_mg_per_l_as_caco3,
         )  # fmt: skip
     except WaterError as error:
-        entry.at("analysis").problem(str(error), "a water that can exist", "Correct the analysis.")
+        spot.problem(str(error), "a water that can exist", "Correct the analysis.")
         return None
 
 

@@ -37,6 +37,7 @@ class Foreseen:
 
     analysed: Collection[str]
     brought_components: Collection[str]
+    cyanide_mg_per_l: float = 0.0
 
     def holds(self, parameter: str) -> bool:
         """Tell whether anything of a parameter can be in the treated water."""
@@ -91,6 +92,8 @@ def read_limits(entry: Entry, foreseen: Foreseen | None) -> LimitsBlock:
     sets = load_limit_sets()
     chosen = [sets[name] for name in entry.names("sets", sets, "limit sets")]
     limits, notes = _from_sets(chosen, foreseen)
+    if foreseen is not None:
+        _check_cyanide(chosen, foreseen.cyanide_mg_per_l, entry.at("sets"))
     own: list[Limit] = []
     for block in entry.blocks("own"):
         limit = _own_limit(block, foreseen)
@@ -139,6 +142,19 @@ def _from_sets(
             f"limit set {limit_set.limit_set} leaves out: {text}" for text in limit_set.not_covered
         ]
     return limits, notes
+
+
+def _check_cyanide(chosen: Collection[LimitSet], cyanide_mg_per_l: float, spot: Spot) -> None:
+    """Refuse a cyanide above its limit: nothing that is planned here lowers it."""
+    for limit_set in chosen:
+        for row in limit_set.limits:
+            ends = [v for v in (row.daily_mg_per_l, row.monthly_mg_per_l) if v is not None]
+            if row.parameter == "CN" and cyanide_mg_per_l > min(ends):
+                spot.problem(
+                    f"CN {cyanide_mg_per_l:g} mg/L in the feed",
+                    f"at most {min(ends):g} mg/L, its limit in {limit_set.limit_set}",
+                    "Destroy it first and give the analysis after that: precipitation leaves it.",
+                )
 
 
 def _not_planned(limit_set: LimitSet, row: SetLimit) -> str:

@@ -15,7 +15,7 @@ from pathlib import Path
 from catalogs.constants import load_system
 from catalogs.entries import NON_NEGATIVE, Entry
 from catalogs.positions import load_yaml
-from catalogs.problems import ProblemLog, echo
+from catalogs.problems import InputFileError, ProblemLog, echo
 from catalogs.reagents import Reagent, load_reagents
 from chemistry.errors import WaterError
 from chemistry.feed import ANALYTES, BURDENS, feed_water
@@ -74,9 +74,8 @@ def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
     log = ProblemLog()
     file = Path(path)
     table = load_yaml(file, log)
-    log.raise_if_any()
     if table is None:
-        raise AssertionError("a file that cannot be read leaves a problem")
+        raise InputFileError(log.problems)
     reagents = load_reagents()
     entry = Entry.top(table, str(path), log)
     blocks = _read_blocks(entry, file, reagents)
@@ -116,7 +115,12 @@ def _foreseen(
     brought = {c for name in treatment.allowed_at for c in reagents[name].components}
     if feed.closing_analyte:
         brought.add(ANALYTES[feed.closing_analyte].component)
-    return Foreseen(analysed=tuple(feed.analysed), brought_components=brought)
+    cyanide = feed.analysis.measurements.get("CN") if feed.analysis else None
+    return Foreseen(
+        analysed=tuple(feed.analysed),
+        brought_components=brought,
+        cyanide_mg_per_l=cyanide.total_mg_per_l if cyanide else 0.0,
+    )
 
 
 def _read_price_book(
@@ -161,8 +165,8 @@ def _checked_system(blocks: _Blocks, reagents: Mapping[str, Reagent]) -> System 
     except WaterError as error:
         feed.analysis_spot.problem(
             f"an analysis that does not hold ({error})",
-            "a water that the closing ion can make electroneutral",
-            "Check units, the pH and missing ions; or name another ion in `close_charge_with`.",
+            f"a water that can exist, its charge closed with {feed.closing_analyte}",
+            "Check its units and look for missing ions; then correct what is named above.",
         )
     return system
 

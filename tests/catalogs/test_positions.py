@@ -61,7 +61,7 @@ def test_a_byte_order_mark_and_windows_line_ends_are_accepted(tmp_path: Path) ->
 def test_every_repeated_key_is_reported_with_both_lines(tmp_path: Path) -> None:
     table, problems = read_yaml(tmp_path, "a: 1\nb: 2\na: 3\nc: {x: 1, x: 2}\n")
     assert problems == [
-        "a.yaml:4: x: found the key 'x' twice in one block, expected each key once\n"
+        "a.yaml:4: c.x: found the key 'x' twice in one block, expected each key once\n"
         "    It already stands in line 4: delete one of them.",
         "a.yaml:3: a: found the key 'a' twice in one block, expected each key once\n"
         "    It already stands in line 1: delete one of them.",
@@ -81,7 +81,7 @@ def test_keys_that_are_not_names_are_refused(tmp_path: Path, key: str) -> None:
 def test_a_decimal_comma_inside_braces_is_explained(tmp_path: Path) -> None:
     _, problems = read_yaml(tmp_path, "a: {daily: 0,5}\n")
     assert problems == [
-        "a.yaml:1: file: found '5' as a key, expected a name as a key\n"
+        "a.yaml:1: a: found '5' as a key, expected a name as a key\n"
         "    If a decimal comma was meant, write a decimal point: 0.5, not 0,5."
     ]
 
