@@ -15,7 +15,7 @@ Mistakes in files and tables that users write are `catalogs.problems.InputFileEr
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from typing import ClassVar
 
 _MOST_SHOWN = 5
@@ -30,17 +30,21 @@ class OptimiserError(Exception):
 class NoPlan(OptimiserError):  # noqa: N818 - a public name that says what happened
     """No doses were found that meet every limit with what the site allows.
 
-    ``reasons`` holds one sentence for each limit that clashes; ``diagnosis`` whatever the search
-    can say beyond that (lowest reachable values, least relaxation).
+    ``reasons`` holds one sentence for each cause found; ``clashes`` one mapping for each limit that
+    cannot be met (``limit``, ``lowest_reachable``, ``target``, ``stopped_by``).
     """
 
     exit_code: ClassVar[int] = 3
 
     def __init__(
-        self, message: str, *, reasons: Iterable[str] = (), diagnosis: object = None
+        self,
+        message: str,
+        *,
+        reasons: Iterable[str] = (),
+        clashes: Iterable[Mapping[str, object]] = (),
     ) -> None:
         self.reasons: tuple[str, ...] = tuple(reasons)
-        self.diagnosis = diagnosis
+        self.clashes: tuple[Mapping[str, object], ...] = tuple(clashes)
         super().__init__(_with_reasons(message, self.reasons))
 
 

@@ -21,9 +21,9 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from optimiser.backend import Claim, RawOutcome, SolveRequest
 from optimiser.errors import SolverFault, SolverUnavailable
 from optimiser.linear_model import Model, Row, Sense
-from optimiser.solver import Claim, RawOutcome, SolveRequest
 
 _INSTALL = "Install it with: python -m pip install 'pulp[highs]>=3.3.2,<4'"
 _THREADS = 1
@@ -43,7 +43,7 @@ class HighsBackend:
     name: str = "highs"
 
     def run(self, model: Model, request: SolveRequest) -> RawOutcome:
-        """Solve a model; see `optimiser.solver.Backend`."""
+        """Solve a model; see `optimiser.backend.Backend`."""
         pulp = _load_pulp(self.name)
         if not pulp.HiGHS.hscb:
             raise SolverUnavailable("highs", "the package highspy is missing", _INSTALL)
@@ -111,7 +111,7 @@ class CbcBackend:
     name: str = "cbc"
 
     def run(self, model: Model, request: SolveRequest) -> RawOutcome:
-        """Solve a model; see `optimiser.solver.Backend`."""
+        """Solve a model; see `optimiser.backend.Backend`."""
         pulp = _load_pulp(self.name)
         path = self.path or str(pulp.PULP_CBC_CMD.pulp_cbc_path)
         translated = _Translation(pulp, model)

@@ -1,7 +1,7 @@
-"""The solver port: what is asked of a solver, what it may answer, and the check of every answer.
+"""The solver port: outcomes in our own words, and an independent check of every answer.
 
-Owns the vocabulary of outcomes and the independent check of returned solutions; the programs that
-do the solving stand behind `Backend` (see `optimiser.pulp_backends`).
+Owns what the rest of the optimiser sees of solving; the programs that do it stand behind
+`optimiser.backend` (see `optimiser.pulp_backends`).
 """
 
 from __future__ import annotations
@@ -13,6 +13,7 @@ from dataclasses import dataclass, field
 from enum import Enum
 from typing import TYPE_CHECKING, Protocol
 
+from optimiser.backend import Backend, Claim, RawOutcome, SolveRequest
 from optimiser.errors import SolverFault, SolverUnavailable, unknown_solver
 from optimiser.linear_model import FEASIBILITY_TOLERANCE, Model
 from optimiser.solution_check import (
@@ -42,54 +43,6 @@ class Termination(Enum):
     def has_solution(self) -> bool:
         """Whether values come with this outcome."""
         return self in {Termination.OPTIMAL, Termination.TIME_LIMIT_WITH_SOLUTION}
-
-
-class Claim(Enum):
-    """What a backend says about its run, before anything is checked."""
-
-    OPTIMAL = "optimal"
-    STOPPED_WITH_VALUES = "stopped by the time limit with values"
-    STOPPED_EMPTY = "stopped by the time limit without values"
-    INFEASIBLE = "infeasible"
-    UNBOUNDED = "unbounded"
-    INFEASIBLE_OR_UNBOUNDED = "infeasible or unbounded"
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class SolveRequest:
-    """Limits of one solve. Threads are not among them: backends always use one."""
-
-    time_limit_s: float = 60.0
-    relative_gap: float = 1e-6
-    seed: int = 1
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class RawOutcome:
-    """What a backend returns, unchecked.
-
-    ``bound`` is a lower bound on the objective with its constant, where the program gives one;
-    ``marginal_values`` per row only for models without integers.
-    """
-
-    claim: Claim
-    version: str
-    values: Mapping[str, float] = field(default_factory=dict)
-    bound: float | None = None
-    marginal_values: Mapping[str, float] | None = None
-
-
-class Backend(Protocol):
-    """A program that solves models; it may be wrong, `Solver` checks it."""
-
-    @property
-    def name(self) -> str:
-        """Name that users write."""
-        ...
-
-    def run(self, model: Model, request: SolveRequest) -> RawOutcome:
-        """Solve a model with at least one variable."""
-        ...
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -151,7 +104,7 @@ class Solver:
     """
 
     backend: Backend
-    request: SolveRequest = SolveRequest()
+    request: SolveRequest = field(default_factory=SolveRequest)
 
     def solve(self, model: Model) -> SolveReport:
         """Minimise the cost of a model and check the answer.
@@ -195,19 +148,19 @@ class Solver:
             return self._report(Termination.TIME_LIMIT_WITHOUT_SOLUTION, raw, started)
         if wrong:
             raise self._fault(model, "returned a solution that does not hold", wrong)
-        if raw.claim is Claim.OPTIMAL:
-            termination = Termination.OPTIMAL
-        else:
-            termination = Termination.TIME_LIMIT_WITH_SOLUTION
-        prices = {} if model.integers or raw.marginal_values is None else raw.marginal_values
-        reduced = reduced_costs(model, prices) if prices or not model.integers else {}
+        proven = raw.claim is Claim.OPTIMAL
+        termination = Termination.OPTIMAL if proven else Termination.TIME_LIMIT_WITH_SOLUTION
         bound = raw.bound
-        if raw.claim is Claim.OPTIMAL and not model.integers and raw.marginal_values is not None:
+        prices: Mapping[str, float] = {}
+        reduced: Mapping[str, float] = {}
+        if proven and not model.integers and raw.marginal_values is not None:
+            prices = raw.marginal_values
+            reduced = reduced_costs(model, prices)
             bound = dual_bound(model, values, prices, reduced)
         return self._report(
             termination, raw, started,
             values=values, objective=model.objective.value(values),
-            bound=self._believable_bound(model, values, bound, proven=raw.claim is Claim.OPTIMAL),
+            bound=self._believable_bound(model, values, bound, proven=proven),
             marginal_values=prices, reduced=reduced,
         )  # fmt: skip
 
