@@ -178,7 +178,10 @@ def linearise(response: Response, component: str, tolerance_ln: float = 0.05) ->
        they are how far the curve reaches below and above the chord, up to that misfit.
     3. *Check.* ``y`` is solved at the quarter points. Other solids there split the piece. Else the
        largest misfit of ``H`` there, times 4, plus rounding, widens the reach. A piece is done when
-       its reach is half of the tolerance, else it is halved.
+       its reach is half of the tolerance, else it is halved. Where the curve is so steep that the
+       closure of the mass balances (1e-12 of the amounts) alone is more than that, as at the exact
+       equivalence of a sulfide, halving gains nothing: a piece over which the curve moves by less
+       than the tolerance is then done, its rounding is in the lines, and the tolerance is missed.
     4. *Lines.* At a breakpoint the lower line takes the lowest reach of the two pieces that meet,
        the upper line the highest: each line then lies outside the curve on both sides. Their
        distance is linear between breakpoints, so the largest distance at breakpoints bounds the
@@ -242,7 +245,11 @@ def _examine(
     inner = points.add(doses.ravel()).reshape(count, CHECK_POINTS.size)
     same = ~np.any([points.differ(left, inner[:, k]) for k in range(CHECK_POINTS.size)], axis=0)
     below, above = _reach(points, left, right, inner)
-    accept = (same & (above - below <= 0.5 * tolerance_ln)) | points.too_narrow(left, right)
+    rounding = _rounding(points, left, right)
+    below, above = below - rounding, above + rounding
+    flat = np.abs(points.ln[right] - points.ln[left]) <= tolerance_ln
+    small = above - below - 2.0 * rounding * flat <= 0.5 * tolerance_ln
+    accept = (same & small) | points.too_narrow(left, right)
     pieces = _Pieces(left[accept], right[accept], below[accept], above[accept])
     halve = ~accept & same
     chain = np.column_stack([left, inner, right])
@@ -255,7 +262,7 @@ def _examine(
 def _reach(
     points: _Points, left: IntArray, right: IntArray, inner: IntArray
 ) -> tuple[FloatArray, FloatArray]:
-    """How far the curve lies below (negative) and above its chord, padded, (pieces,)."""
+    """How far the curve may lie below (negative) and above its chord, (pieces,)."""
     width = points.dose[right] - points.dose[left]
     rise = points.ln[right] - points.ln[left]
     a = points.slope[left] * width - rise
@@ -266,7 +273,7 @@ def _reach(
     misfit = np.abs(points.ln[inner] - chord - cubic).max(axis=1)
     roots = _extremes(a, b)
     extreme = _over_chord(roots, a[:, None], b[:, None])
-    pad = SAFETY * misfit + _rounding(points, left, right)
+    pad = SAFETY * misfit
     return np.minimum(extreme.min(axis=1), 0.0) - pad, np.maximum(extreme.max(axis=1), 0.0) + pad
 
 

@@ -192,6 +192,26 @@ def test_a_tighter_tolerance_takes_more_breakpoints_and_lies_inside() -> None:
     assert np.all(np.diff(tight.doses_mol_per_l) > 0.0)
 
 
+def test_where_balances_cannot_resolve_the_curve_the_lines_part_and_say_so() -> None:
+    # Silver at the equivalence of sulfide falls to 1e-17 mol/L: the balances close to 1e-12.
+    sulfide = System(
+        ["H+", "Na+", "Ag+", "HS-"],
+        [Species.from_reaction(*WATER), Species.from_reaction("HS- + H+ = H2S(aq)", 6.99)],
+        [Solid.from_reaction("2 Ag+ + HS- = Ag2S(s) + H+", 36.03)],
+    )
+    found = response(
+        sulfide, {"Ag+": 4.5e-3, "Na+": 1e-3}, {"Na+": 1, "HS-": 1}, [0.0, 0.02], ph=8.6
+    )
+    envelope = linearise(found, "Ag+")
+    assert not envelope.within_tolerance
+    wide = envelope.safe_ln - envelope.optimistic_ln > envelope.tolerance_ln
+    assert envelope.doses_mol_per_l[wide] == pytest.approx(2.25e-3, rel=1e-6)
+    doses = np.concatenate([np.linspace(0.0, 0.02, 200), 2.25e-3 + np.linspace(-1e-9, 1e-9, 200)])
+    true, _, _ = found.ln_residual("Ag+", doses)
+    assert np.all(envelope.optimistic_at(doses) <= true)
+    assert np.all(true <= envelope.safe_at(doses))
+
+
 def test_a_held_ph_asks_for_base_and_keeps_the_ph() -> None:
     system, totals, additions, highest, _ = LADDERS["lead"]
     found = response(system, totals, additions, [0.0, 0.5 * highest, highest], ph=9.0)
