@@ -167,9 +167,15 @@ class Solver:
     def _repaired(
         self, model: Model, values: Mapping[str, float], wrong: list[str]
     ) -> tuple[Mapping[str, float], list[str]]:
-        """Solve again with the integers rounded, when rounding them broke a row."""
-        if any(not math.isfinite(values[key]) for key in model.integers):
-            return values, wrong
+        """Solve again with the integers as they are, when rounding them broke a row.
+
+        A binary within tolerance of 0 lets a little through behind a large coefficient. Integers
+        that are no whole numbers in their ranges are not repaired.
+        """
+        for variable in model.variables.values():
+            x = values[variable.key]
+            if variable.integer and not (variable.low <= x <= variable.high and x == round(x)):
+                return values, wrong
         fixed = model.with_integers_fixed(values)
         again = self.backend.run(fixed, self.request)
         if again.claim is not Claim.OPTIMAL:
