@@ -47,14 +47,17 @@ class Assembled:
     rhs: FloatArray
 
 
-def finish(kernel: Kernel, batch: Batch) -> None:
+def finish(
+    kernel: Kernel, batch: Batch, *, newton_rounds: int = NEWTON_ROUNDS,
+    exchange_rounds: int = EXCHANGE_ROUNDS,
+) -> None:  # fmt: skip
     """Exact state by Newton steps with exchange of solids, in place."""
     rows = np.arange(batch.totals.shape[0])
     keep_independent(kernel, batch)
     batch.converged[:] = False
-    for _ in range(EXCHANGE_ROUNDS):
+    for _ in range(exchange_rounds):
         part = batch.take(rows)
-        solved = _newton(kernel, part)
+        solved = _newton(kernel, part, newton_rounds)
         settled = exchange(kernel, part, solved)
         part.converged = solved & settled
         batch.put(rows, part)
@@ -63,14 +66,14 @@ def finish(kernel: Kernel, batch: Batch) -> None:
             break
 
 
-def _newton(kernel: Kernel, part: Batch) -> BoolArray:
+def _newton(kernel: Kernel, part: Batch, rounds: int) -> BoolArray:
     slots, used = slots_of(part.active)
     part.solids[:] = np.where(part.active, part.solids, 0.0)
     solved = np.zeros(part.totals.shape[0], dtype=bool)
     rows = np.arange(part.totals.shape[0])
-    for turn in range(NEWTON_ROUNDS):
+    for turn in range(rounds):
         here = part.take(rows)
-        last = turn == NEWTON_ROUNDS - 1
+        last = turn == rounds - 1
         tolerance = MASS_TOLERANCE_LAST if last else MASS_TOLERANCE
         done = _newton_step(kernel, here, slots[rows], used[rows], tolerance)
         part.put(rows, here)

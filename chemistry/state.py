@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -174,6 +174,30 @@ class EquilibriumState:
         )  # fmt: skip
 
 
+class Start(Protocol):
+    """What a warm start reads: a state, or values picked from states."""
+
+    @property
+    def log_activity(self) -> FloatArray:
+        """Natural log activities, (n, components)."""
+        ...
+
+    @property
+    def ionic_strength(self) -> FloatArray:
+        """(n,)."""
+        ...
+
+    @property
+    def solids_mol_per_l(self) -> FloatArray:
+        """(n, solids)."""
+        ...
+
+    @property
+    def active(self) -> BoolArray:
+        """Which solids are present, (n, solids)."""
+        ...
+
+
 def equilibrate(
     system: System,
     totals: Totals,
@@ -182,7 +206,7 @@ def equilibrate(
     on_failure: str = "raise",
     *,
     titrant: FloatArray | None = None,
-    start: EquilibriumState | None = None,
+    start: Start | None = None,
 ) -> EquilibriumState:
     """Find the equilibrium of a batch of waters.
 
@@ -241,7 +265,7 @@ def equilibrate(
     return state
 
 
-def _begin_at(kernel: Kernel, batch: Batch, start: EquilibriumState) -> None:
+def _begin_at(kernel: Kernel, batch: Batch, start: Start) -> None:
     states = batch.totals.shape[0]
     if start.log_activity.shape != batch.ln_activity.shape:
         raise WaterError(

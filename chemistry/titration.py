@@ -1,38 +1,89 @@
 """Titration: the dose of one reagent that brings a water to a pH, and derivatives at that pH.
 
-Each step holds the pH (a convex problem that always has a solution) and asks how many protons
-that takes; the dose follows from the proton balance, so the search is on a nearly linear scale.
-The result is a plain state of the dosed water, certified on its true totals.
+Newton's method on the balances with the dose as one more unknown is tried first. Where it fails,
+each step holds the pH (a convex problem that always has a solution) and asks how many protons that
+takes; the dose follows from the proton balance, so the search is on a nearly linear scale. The
+result is a plain state of the dosed water, certified on its true totals.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from chemistry.state import EquilibriumState, Sensitivity, equilibrate
+from chemistry.batch import new_batch
+from chemistry.newton import finish
+from chemistry.state import EquilibriumState, Sensitivity, equilibrate, kernel_of
 from chemistry.system import System
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
+IntArray = NDArray[np.int64]
 
 DOSE_ROUNDS = 25
-LARGEST_DOSE_MOL_PER_L = 20.0
+DIRECT_TRIES = (1, 5)  # rounds after which the direct Newton method is tried
+DIRECT_NEWTON_ROUNDS = 12
+DIRECT_EXCHANGES = 10
+LARGEST_DOSE_MOL_PER_L = 2.0
 BALANCE_TOLERANCE = 1e-12
 
 
 @dataclass(frozen=True, eq=False)
 class Titration:
-    """Doses (n,) [mol/L] and the states of the dosed waters; ``reached`` tells which hold the pH.
+    """Doses (n,) in units of the reagent per litre, and the states of the dosed waters.
 
-    A dose is 0 and ``reached`` False where no positive dose brings the water to the pH.
+    ``reached`` tells which waters hold the pH; a dose is 0 where no positive dose brings it there.
     """
 
     dose: FloatArray
     state: EquilibriumState
     reached: BoolArray
+
+
+@dataclass(slots=True)
+class StartValues:
+    """What a warm start reads of a state; rows may be picked and improved."""
+
+    totals: FloatArray
+    log_activity: FloatArray
+    ionic_strength: FloatArray
+    solids_mol_per_l: FloatArray
+    active: BoolArray
+
+    @classmethod
+    def of(cls, state: EquilibriumState) -> StartValues:
+        """Take the values of a state."""
+        return cls(
+            state.totals, state.log_activity, state.ionic_strength, state.solids_mol_per_l,
+            state.active,
+        )  # fmt: skip
+
+    @classmethod
+    def join(cls, parts: Sequence[StartValues]) -> StartValues:
+        """Put rows of several one after the other."""
+        return cls(*(np.concatenate([getattr(p, f) for p in parts]) for f in cls.__slots__))
+
+    def rows(self, picked: IntArray | BoolArray) -> StartValues:
+        """Return some rows (copies)."""
+        return StartValues(*(getattr(self, f)[picked] for f in self.__slots__))
+
+    def without_solids(self) -> StartValues:
+        """The same liquid for a system that has no solids."""
+        n = self.totals.shape[0]
+        return StartValues(
+            self.totals, self.log_activity, self.ionic_strength, np.zeros((n, 0)),
+            np.zeros((n, 0), dtype=bool),
+        )  # fmt: skip
+
+    def put(self, rows: IntArray, state: EquilibriumState | StartValues) -> None:
+        """Write solved rows."""
+        self.log_activity[rows] = state.log_activity
+        self.ionic_strength[rows] = state.ionic_strength
+        self.solids_mol_per_l[rows] = state.solids_mol_per_l
+        self.active[rows] = state.active
 
 
 def titrate(
@@ -41,7 +92,7 @@ def titrate(
     ph: FloatArray,
     reagent: FloatArray,
     *,
-    start: EquilibriumState | None = None,
+    start: EquilibriumState | StartValues | None = None,
 ) -> Titration:
     """Find the dose of a reagent that brings each water to its pH.
 
@@ -51,85 +102,137 @@ def titrate(
         Totals before the dose. [mol/L]
     ph : ndarray, shape (n,)
     reagent : ndarray, shape (components,) or (n, components)
-        Moles of each component per mole of reagent.
+        Moles of each component per unit of reagent; doses come in that unit per litre.
     start
-        States of neighbouring dosed waters at the same pH (n of them).
+        States of neighbouring dosed waters (n of them).
 
     Notes
     -----
     With ``P(d)`` the proton total that the pH needs when the other components carry the dose, the
     dose solves ``P(d) = T_H + d v_H``. Newton steps use the exact derivative of ``P``.
     """
-    n = totals.shape[0]
-    vectors = np.broadcast_to(reagent, (n, system_size := len(system.components)))
-    proton = system.index["H+"]
-    others = vectors.copy()
-    others[:, proton] = 0.0
-    per_mole = vectors[:, proton]
-    dose = np.zeros(n)
+    work = _Work(system, totals, ph, reagent)
     if start is not None:
-        dose = _first_dose(totals, vectors, start)
-    reached = np.zeros(n, dtype=bool)
-    alive = np.ones(n, dtype=bool)
-    log_activity = np.zeros((n, system_size))
-    strength = np.zeros(n)
-    solids = np.zeros((n, len(system.solids)))
-    active = np.zeros((n, len(system.solids)), dtype=bool)
-    low, high = np.zeros(n), np.full(n, np.inf)
-    warm = start
-    rows = np.arange(n)
-    for _ in range(DOSE_ROUNDS):
-        state = equilibrate(
-            system, totals[rows] + dose[rows, None] * others[rows], ph[rows],
-            on_failure="flag", start=warm,
+        work.begin_at(start)
+        work.try_directly()
+    work.search()
+    return work.result()
+
+
+class _Work:
+    """A batch of titrations under way."""
+
+    def __init__(
+        self, system: System, totals: FloatArray, ph: FloatArray, reagent: FloatArray
+    ) -> None:
+        n, count, solids = totals.shape[0], len(system.components), len(system.solids)
+        self.system, self.totals, self.ph = system, totals, ph
+        self.proton = system.index["H+"]
+        given = np.broadcast_to(reagent, (n, count))
+        self.size = np.maximum(np.abs(given).max(axis=1), 1e-300)
+        self.vectors = given / self.size[:, None]  # moles of the largest component
+        self.dose = np.zeros(n)
+        self.reached = np.zeros(n, dtype=bool)
+        self.hopeless = np.zeros(n, dtype=bool)
+        self.iterate = StartValues(
+            totals, np.zeros((n, count)), np.zeros(n), np.zeros((n, solids)),
+            np.zeros((n, solids), dtype=bool),
         )  # fmt: skip
-        log_activity[rows], strength[rows] = state.log_activity, state.ionic_strength
-        solids[rows], active[rows] = state.solids_mol_per_l, state.active
-        miss = state.totals[:, proton] - totals[rows, proton] - dose[rows] * per_mole[rows]
+
+    @property
+    def open_rows(self) -> IntArray:
+        """Rows neither solved nor given up."""
+        return np.flatnonzero(~self.reached & ~self.hopeless)
+
+    def begin_at(self, start: EquilibriumState | StartValues) -> None:
+        """Take the iterate of neighbouring waters."""
+        self.iterate.put(np.arange(self.ph.size), start)
+
+    def try_directly(self) -> None:
+        """Newton with the dose as an unknown, from the iterate; keeps what succeeds."""
+        rows = self.open_rows
+        if not rows.size:
+            return
+        kernel = kernel_of(self.system)
+        nothing = np.full(rows.size, np.nan)
+        batch = new_batch(
+            self.system, self.totals[rows].copy(), self.ph[rows], nothing, self.vectors[rows]
+        )
+        seen = self.iterate.log_activity[rows] > -500.0
+        batch.ln_activity = np.where(
+            batch.present & seen, self.iterate.log_activity[rows], batch.ln_activity
+        )
+        batch.ionic_strength = np.maximum(self.iterate.ionic_strength[rows], 1e-9)
+        gone = (~batch.present).astype(float) @ kernel.solid_absolute.T > 0.0
+        batch.active = self.iterate.active[rows] & ~gone
+        batch.solids = np.where(batch.active, self.iterate.solids_mol_per_l[rows], 0.0)
+        # a row that overflows is caught by its certificate, so numpy need not warn of it
+        with np.errstate(all="ignore"):
+            finish(
+                kernel, batch, newton_rounds=DIRECT_NEWTON_ROUNDS, exchange_rounds=DIRECT_EXCHANGES
+            )
+            sums, _ = kernel.amounts(
+                kernel.molalities(batch.ln_activity, batch.ionic_strength), batch.solids
+            )
+            dose, _ = kernel.doses(batch, sums - batch.totals)
+        good = batch.converged & (dose >= 0.0) & (dose <= LARGEST_DOSE_MOL_PER_L)
+        kept = rows[good]
+        self.reached[kept], self.dose[kept] = True, dose[good]
+        self.iterate.log_activity[kept] = batch.ln_activity[good]
+        self.iterate.ionic_strength[kept] = batch.ionic_strength[good]
+        self.iterate.solids_mol_per_l[kept] = batch.solids[good]
+        self.iterate.active[kept] = batch.active[good]
+
+    def search(self) -> None:
+        """Bracketed Newton on the proton balance at held pH, row by row of what is open."""
+        others = self.vectors.copy()
+        others[:, self.proton] = 0.0
+        low, high = np.zeros(self.ph.size), np.full(self.ph.size, np.inf)
+        self.dose[self.open_rows] = 0.0
+        warm: EquilibriumState | None = None
+        previous = self.open_rows
+        for turn in range(DOSE_ROUNDS):
+            if turn in DIRECT_TRIES:
+                self.try_directly()
+            rows = self.open_rows
+            if not rows.size:
+                return
+            if warm is not None:
+                warm = warm.rows(np.isin(previous, rows))
+            state = equilibrate(
+                self.system, self.totals[rows] + self.dose[rows, None] * others[rows],
+                self.ph[rows], on_failure="flag", start=warm,
+            )  # fmt: skip
+            self._step(rows, state, others, low, high)
+            warm, previous = state, rows
+
+    def _step(
+        self, rows: IntArray, state: EquilibriumState, others: FloatArray, low: FloatArray,
+        high: FloatArray,
+    ) -> None:  # fmt: skip
+        self.iterate.put(rows, state)
+        dose, per_mole = self.dose[rows], self.vectors[rows, self.proton]
+        miss = state.totals[:, self.proton] - self.totals[rows, self.proton] - dose * per_mole
         _, scale = state.kernel.amounts(state.species_mol_per_l, state.solids_mol_per_l)
-        near = np.abs(miss) <= BALANCE_TOLERANCE * scale[:, proton]
-        sens = state.sensitivity(others[rows][:, None, :])
-        slope = sens.titrant[:, 0] - per_mole[rows]
-        low[rows] = np.where(miss < 0, np.maximum(low[rows], dose[rows]), low[rows])
-        high[rows] = np.where(miss > 0, np.minimum(high[rows], dose[rows]), high[rows])
+        slope = state.sensitivity(others[rows][:, None, :]).titrant[:, 0] - per_mole
+        low[rows] = np.where(miss < 0, np.maximum(low[rows], dose), low[rows])
+        high[rows] = np.where(miss > 0, np.minimum(high[rows], dose), high[rows])
         step = np.where(np.abs(slope) > 1e-9, -miss / np.where(slope == 0, 1.0, slope), np.inf)
-        new = dose[rows] + step
-        new = _inside(new, dose[rows], low[rows], high[rows], miss)
-        stuck = (new <= 0.0) & (miss >= 0.0) | (new > LARGEST_DOSE_MOL_PER_L) | ~state.converged
-        same = np.abs(new - dose[rows]) <= 1e-15 * np.maximum(np.abs(new), 1e-9)
-        reached[rows] = (near | (same & (np.abs(miss) < 1e-9 * scale[:, proton]))) & ~stuck
-        alive[rows] = ~reached[rows] & ~stuck
-        dose[rows] = np.where(alive[rows], new, dose[rows])
-        keep = alive[rows]
-        rows = rows[keep]
-        if rows.size == 0:
-            break
-        warm = state.rows(keep)
-    guess = _StartValues(log_activity, strength, solids, active, totals)
-    dose = np.where(reached, dose, 0.0)
-    final = equilibrate(
-        system, totals + dose[:, None] * vectors, on_failure="flag", start=guess,  # type: ignore[arg-type]
-    )  # fmt: skip
-    return Titration(dose, final, reached & final.converged)
+        new = _inside(dose + step, dose, low[rows], high[rows], miss)
+        lost = (new <= 0.0) & (miss >= 0.0) | (new > LARGEST_DOSE_MOL_PER_L) | ~state.converged
+        same = np.abs(new - dose) <= 1e-15 * np.maximum(np.abs(new), 1e-9)
+        size = np.abs(miss) / np.maximum(scale[:, self.proton], 1e-300)
+        near = (size <= BALANCE_TOLERANCE) | (same & (size < 1e-9))
+        self.reached[rows] = near & ~(lost & ~near)
+        self.hopeless[rows] = lost & ~near
+        self.dose[rows] = np.where(near | lost, dose, new)
 
-
-@dataclass(slots=True)
-class _StartValues:
-    """The part of a state that a warm start reads."""
-
-    log_activity: FloatArray
-    ionic_strength: FloatArray
-    solids_mol_per_l: FloatArray
-    active: BoolArray
-    totals: FloatArray
-
-
-def _first_dose(totals: FloatArray, vectors: FloatArray, start: EquilibriumState) -> FloatArray:
-    """Dose that the neighbouring states carry, read off a component that nothing else adds."""
-    gap = start.totals - totals
-    weight = np.square(vectors)
-    guess = (gap * vectors).sum(axis=1) / np.maximum(weight.sum(axis=1), 1e-300)
-    return np.maximum(guess, 0.0)
+    def result(self) -> Titration:
+        """Plain states of the dosed waters."""
+        dose = np.where(self.reached, self.dose, 0.0)
+        dosed = self.totals + dose[:, None] * self.vectors
+        state = equilibrate(self.system, dosed, on_failure="flag", start=self.iterate)
+        return Titration(dose / self.size, state, self.reached & state.converged)
 
 
 def _inside(

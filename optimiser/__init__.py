@@ -11,14 +11,14 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from optimiser.errors import NoPlan as NoPlan
-    from optimiser.evaluate import assess as assess
+    from optimiser.assessment import assess as assess
     from optimiser.planning import plan as plan
     from optimiser.purchasing import purchase as purchase
     from optimiser.site_reader import load_site as load_site
 
 _HOMES = {
     "NoPlan": "optimiser.errors",
-    "assess": "optimiser.evaluate",
+    "assess": "optimiser.assessment",
     "load_site": "optimiser.site_reader",
     "plan": "optimiser.planning",
     "purchase": "optimiser.purchasing",

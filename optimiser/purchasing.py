@@ -241,7 +241,7 @@ def purchase(
     >>> round(deal.buys[0].surplus_kg_pure_per_year, 6)
     1980.0
     """
-    given = _offers(offers)
+    given = read_offers(offers)
     needed = counted_demand(demand, {offer.reagent for offer in given})
     port = open_solver(solver, relative_gap=_COMPARISON_GAP) if isinstance(solver, str) else solver
     model = Model("purchase")
@@ -290,7 +290,8 @@ def _delivered_per_kg(offer: Offer) -> float:
     return (offer.price_per_t + offer.freight_per_t) / (KG_PER_T * offer.strength_fraction)
 
 
-def _offers(given: str | PathLike[str] | pd.DataFrame | Sequence[Offer]) -> tuple[Offer, ...]:
+def read_offers(given: str | PathLike[str] | pd.DataFrame | Sequence[Offer]) -> tuple[Offer, ...]:
+    """Offers from a price book file, a frame with its columns, or offers."""
     if isinstance(given, (str, PathLike)):
         from optimiser.offers_reader import load_offers
 

@@ -81,6 +81,7 @@ class Treatment:
     scrubber: str = ""
     h2s_limit_ppm: float = 10.0
     inert_solids_dilute: bool = False
+    salty_water_allowed: bool = False
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

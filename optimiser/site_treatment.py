@@ -80,6 +80,7 @@ def read_treatment(entry: Entry, reagents: Mapping[str, Reagent]) -> TreatmentBl
         separator=_read_separator(entry),
         scrubber=entry.text_or("scrubber"),
         inert_solids_dilute=entry.flag_or("inert_solids_dilute", default=False),
+        salty_water_allowed=entry.flag_or("salty_water_allowed", default=False),
         **_plain_numbers(entry),
     )  # fmt: skip
     if len(required) > treatment.most_reagents:

@@ -1,0 +1,203 @@
+"""Yearly cost of operating points by cause: goods, freight, disposal, equipment, burden.
+
+Owns what a plan costs once doses, solids and effluent are known; offers themselves are bought in
+`optimiser.purchasing`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from chemistry.burden import BURDENS
+from chemistry.sludge import Sludge, sludge
+from optimiser.plant import CLOSED_FORMED, VENTED_FORMED, Block, Plant, Points, Rows
+from optimiser.quality import Judged
+from optimiser.site import DisposalRule, Offer
+
+FloatArray = NDArray[np.float64]
+
+TOTAL = "total"
+FREIGHT, DISPOSAL, FEES = "freight", "disposal", "disposal fees"
+EQUIPMENT, SEPARATOR, POLYMER, BURDEN = "equipment", "separator", "polymer", "burden charges"
+
+
+@dataclass(frozen=True, eq=False)
+class Priced:
+    """Costs of points: ``by_cause`` arrays (points,) per year, ``total`` their sum.
+
+    ``doses`` and ``trim_doses`` (points, reagents) are fed, mg/L; ``offers`` the offer chosen per
+    reagent (index into the site's offers, -1 none); ``sludges`` the dearest end's sludge per point
+    with the rule that set its class.
+    """
+
+    by_cause: dict[str, FloatArray]
+    total: FloatArray
+    doses: FloatArray
+    trim_doses: FloatArray
+    sludges: list[tuple[Sludge, int, DisposalRule] | None]
+
+
+class Pricing:
+    """A site's prices as arrays."""
+
+    def __init__(self, plant: Plant) -> None:
+        self.plant = plant
+        site = plant.site
+        self.offers: tuple[Offer, ...] = site.offers
+        self.by_reagent = [[o for o in site.offers if o.reagent == name] for name in plant.names]
+        self.equipment = np.array(
+            [site.treatment.equipment_cost_per_year.get(name, 0.0) for name in plant.names]
+        )
+        self.kg_per_mg_per_l = site.flow_m3_per_year / 1000.0
+
+    def purchase(self, reagent: int, kg: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Goods and freight of the cheapest offer for a demand in kg pure per year, (n,) each.
+
+        With one price per tonne and a least order per offer, one offer alone is cheapest: costs are
+        linear above the least order, so splitting a demand never beats the cheaper of its parts.
+        """
+        goods = np.zeros_like(kg)
+        freight = np.zeros_like(kg)
+        best = np.full(kg.shape, np.inf)
+        for offer in self.by_reagent[reagent]:
+            tonnes = np.maximum(kg / (1000.0 * offer.strength_fraction), offer.least_order_t)
+            cost = tonnes * (offer.price_per_t + offer.freight_per_t)
+            better = cost < best
+            goods = np.where(better, tonnes * offer.price_per_t, goods)
+            freight = np.where(better, tonnes * offer.freight_per_t, freight)
+            best = np.where(better, cost, best)
+        used = kg > 0.0
+        unsold = used & ~np.isfinite(best)
+        goods = np.where(unsold, np.inf, goods)
+        return np.where(used, goods, 0.0), np.where(used, freight, 0.0)
+
+    def price(
+        self, points: Points, rows: Rows, blocks: Sequence[Block], judged: Sequence[Judged]
+    ) -> Priced:
+        """Cost of every point from its nominal states, the dearest end where ends differ."""
+        plant = self.plant
+        doses = plant.fed_doses(points, rows, blocks)
+        trim = self._trim_doses(points, rows, blocks)
+        by_cause: dict[str, FloatArray] = {}
+        freight = np.zeros(len(points))
+        for i, name in enumerate(plant.names):
+            kg = (doses[:, i] + trim[:, i]) * self.kg_per_mg_per_l
+            if not kg.any():
+                continue
+            goods, carriage = self.purchase(i, kg)
+            by_cause[name] = goods
+            freight += carriage
+        by_cause[FREIGHT] = freight
+        sludges, tariff, fees, polymer = self._sludge(points, rows, blocks, doses)
+        by_cause[DISPOSAL], by_cause[FEES], by_cause[POLYMER] = tariff, fees, polymer
+        in_use = (doses > 0.0) | (trim > 0.0)
+        by_cause[EQUIPMENT] = in_use.astype(float) @ self.equipment
+        by_cause[SEPARATOR] = np.full(
+            len(points), plant.treatment.separator.cost_per_year, dtype=float
+        )
+        by_cause[BURDEN] = self._burden(points, rows, judged)
+        total = np.sum(list(by_cause.values()), axis=0)
+        return Priced(by_cause, total, doses, trim, sludges)
+
+    def _trim_doses(self, points: Points, rows: Rows, blocks: Sequence[Block]) -> FloatArray:
+        trim = np.zeros((len(points), len(self.plant.names)))
+        for block in blocks:
+            for k in np.flatnonzero(rows.nominal[block.rows] & block.trimmed):
+                point = rows.point[block.rows[k]]
+                reagent = points.trim[point]
+                trim[point, reagent] = max(trim[point, reagent], block.trim_dose[k])
+        return trim
+
+    def unreacted_mg_per_l(self, doses: FloatArray) -> FloatArray:
+        """Slurry fed that does not react and settles, (points,). [mg/L]"""
+        return doses @ self.plant.unreacted
+
+    def rule(self, made: Sludge, row: int) -> DisposalRule:
+        """The first disposal rule whose condition the cake meets.
+
+        A site's last rule has no condition, so one always holds.
+        """
+        content = dict(zip(made.metals, made.metal_mg_per_kg_dry[row], strict=True))
+        for rule in self.plant.site.disposal.rules:
+            if not rule.metals or any(
+                _content(content, m) > rule.above_mg_per_kg_dry for m in rule.metals
+            ):
+                return rule
+        return self.plant.site.disposal.rules[-1]
+
+    def weigh(self, block: Block, picked: NDArray[np.int64], unreacted: FloatArray) -> Sludge:
+        """Sludge of some rows of a block."""
+        plant = self.plant
+        disposal = plant.site.disposal
+        return sludge(
+            block.state.solids_mol_per_l[picked], plant.system,
+            cake_solids_fraction=disposal.cake_solids_fraction,
+            bound_water_factor=disposal.bound_water_factor,
+            unreacted_mg_per_l=unreacted,
+            feed_tss_mg_per_l=plant.site.analysis.tss_mg_per_l,
+            feed_particulate_mg_per_l=plant.feed.particulate_mg_per_l,
+            polymer_g_per_kg=plant.treatment.polymer_g_per_kg_solids,
+        )  # fmt: skip
+
+    def _sludge(
+        self, points: Points, rows: Rows, blocks: Sequence[Block], doses: FloatArray
+    ) -> tuple[list[tuple[Sludge, int, DisposalRule] | None], FloatArray, FloatArray, FloatArray]:
+        n = len(points)
+        found: list[tuple[Sludge, int, DisposalRule] | None] = [None] * n
+        tariff, fees, polymer = np.zeros(n), np.zeros(n), np.zeros(n)
+        unreacted = self.unreacted_mg_per_l(doses)
+        for block in blocks:
+            if block.end not in (CLOSED_FORMED, VENTED_FORMED):
+                continue
+            picked = np.flatnonzero(rows.nominal[block.rows] & block.reached)
+            if not picked.size:
+                continue
+            point = rows.point[block.rows[picked]]
+            made = self.weigh(block, picked, unreacted[point])
+            tonnes = made.wet_mg_per_l * self.kg_per_mg_per_l / 1000.0
+            for row, i in enumerate(point):
+                rule = self.rule(made, row)
+                by_mass, fixed = disposal_cost(rule, float(tonnes[row]))
+                if found[i] is None or by_mass + fixed > tariff[i] + fees[i]:
+                    found[i] = (made, row, rule)
+                    tariff[i], fees[i] = by_mass, fixed
+                    polymer[i] = (
+                        made.polymer_mg_per_l[row]
+                        * self.kg_per_mg_per_l
+                        * self.plant.treatment.polymer_price_per_kg
+                    )
+        return found, tariff, fees, polymer
+
+    def _burden(self, points: Points, rows: Rows, judged: Sequence[Judged]) -> FloatArray:
+        charges = self.plant.site.burden_charges_per_kg
+        cost = np.zeros(len(points))
+        if not charges:
+            return cost
+        for part in judged:
+            nominal = rows.nominal[part.block.rows]
+            here = np.zeros(nominal.size)
+            for name, rate in charges.items():
+                if name in BURDENS:
+                    here += rate * self.kg_per_mg_per_l * np.maximum(part.burden[name], 0.0)
+            point = rows.point[part.block.rows[nominal]]
+            np.maximum.at(cost, point, here[nominal])
+        return cost
+
+
+def _content(content: dict[str, float], metal: str) -> float:
+    from optimiser.quality import SUMMED_STATES
+
+    return sum(content.get(part, 0.0) for part in SUMMED_STATES.get(metal, (metal,)))
+
+
+def disposal_cost(rule: DisposalRule, wet_t_per_year: float) -> tuple[float, float]:
+    """Tariff by mass, and pickups with the yearly fee. [currency per year]
+
+    Pickups are counted as a yearly average, wet tonnes over the load of one, not rounded.
+    """
+    pickups = wet_t_per_year / rule.tonnes_per_pickup
+    return rule.tariff_per_wet_t * wet_t_per_year, rule.pickup_fee * pickups + rule.yearly_fee

@@ -1,0 +1,275 @@
+"""Evaluation of operating points: states, checks, safety rules and cost in one call.
+
+Owns the bundle that search and assessment share, so that a plan and its assessment cannot differ.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from functools import cached_property
+
+import numpy as np
+from numpy.typing import NDArray
+
+from chemistry.state import equilibrate
+from chemistry.titration import StartValues
+from optimiser.costing import Priced, Pricing
+from optimiser.plant import Block, Plant, Points, Rows
+from optimiser.quality import LN10, Judge, Judged
+from optimiser.site import Site
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+IntArray = NDArray[np.int64]
+
+FEASIBLE_RATIO = 1e-9  # a limit is met when ln(value/target) does not exceed this
+LEAST_DOSE_MG_PER_L = 1.0  # least real dose of a reagent in a recipe, unless the site says
+
+
+@dataclass(frozen=True, slots=True)
+class Rule:
+    """A safety or practice rule at points: ``ratio`` (points,) must not exceed 0.
+
+    ``slope`` (points, 1 + reagents) is its change with the set point and the paced doses.
+    """
+
+    label: str
+    ratio: FloatArray
+    slope: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
+class Evaluation:
+    """Everything known of a set of points."""
+
+    points: Points
+    rows: Rows
+    blocks: list[Block]
+    judged: list[Judged]
+    priced: Priced
+    rules: list[Rule] = field(default_factory=list)
+
+    @cached_property
+    def violation(self) -> FloatArray:
+        """Largest ratio of any check or rule of each point, (points,); feasible if <= 0."""
+        worst = np.full(len(self.points), -np.inf)
+        for part in self.judged:
+            if part.ratio.shape[1]:
+                point = self.rows.point[part.block.rows]
+                np.maximum.at(worst, point, part.ratio.max(axis=1))
+            missing = part.block.trim_missing | ~part.block.reached
+            np.maximum.at(worst, self.rows.point[part.block.rows[missing]], 5.0)
+        for rule in self.rules:
+            worst = np.maximum(worst, rule.ratio)
+        return worst
+
+    @cached_property
+    def feasible(self) -> BoolArray:
+        """Which points meet every check and rule, (points,)."""
+        return (self.violation <= FEASIBLE_RATIO) & np.isfinite(self.priced.total)
+
+    @property
+    def total(self) -> FloatArray:
+        """Yearly cost of each point."""
+        return self.priced.total
+
+    def nominal_row(self, block: Block, point: int) -> int | None:
+        """Position in a block of a point's nominal row."""
+        hit = np.flatnonzero((self.rows.point[block.rows] == point) & self.rows.nominal[block.rows])
+        return int(hit[0]) if hit.size else None
+
+
+@dataclass(frozen=True, slots=True)
+class Place:
+    """One point of an evaluation."""
+
+    seen: Evaluation
+    point: int
+
+
+class _Neighbours:
+    """Warm starts of points from evaluated points with the same corners."""
+
+    def __init__(self, rows: Rows, near: Sequence[Place]) -> None:
+        self.rows = rows
+        self.near = near
+        self.first = np.searchsorted(rows.point, np.arange(len(near)))
+
+    def start(self, end: int, rows: IntArray) -> StartValues | None:
+        """Iterates of the neighbours at the same corner and end, else at their first end."""
+        parts = []
+        for point in np.unique(self.rows.point[rows]):
+            place = self.near[int(point)]
+            corner = rows[self.rows.point[rows] == point] - self.first[point]
+            begin = int(np.searchsorted(place.seen.rows.point, place.point))
+            parts.append(_iterates(place.seen, end, begin + corner))
+        return StartValues.join(parts) if parts else None
+
+
+def _iterates(seen: Evaluation, end: int, rows: IntArray) -> StartValues:
+    for block in seen.blocks:
+        if block.end == end and np.isin(rows, block.rows).all():
+            return StartValues.of(block.state).rows(np.searchsorted(block.rows, rows))
+    return StartValues.of(seen.blocks[0].state).rows(rows)
+
+
+class Evaluator:
+    """A site ready to be evaluated: plant, judge and pricing."""
+
+    def __init__(self, site: Site) -> None:
+        self.site = site
+        self.plant = Plant(site)
+        self.judge = Judge(self.plant)
+        self.pricing = Pricing(self.plant)
+        treatment = site.treatment
+        names = self.plant.names
+        self.least = np.array(
+            [treatment.least_doses_mg_per_l.get(n, LEAST_DOSE_MG_PER_L) for n in names]
+        )
+        self.ceiling = np.array([treatment.dose_ceilings_mg_per_l.get(n, np.inf) for n in names])
+
+    def evaluate(
+        self, points: Points, *, full: bool = True, all_ends: bool = True, slopes: bool = False,
+        near: Sequence[Place] | None = None,
+    ) -> Evaluation:  # fmt: skip
+        """Solve, judge and price points.
+
+        ``full`` adds every corner, ``all_ends`` every end, ``slopes`` the derivatives; ``near``
+        names for each point an evaluated one of the same recipe to start from.
+        """
+        rows = self.plant.corners(points, full=full)
+        start = _Neighbours(rows, near) if near is not None else None
+        blocks = self.plant.blocks(points, rows, all_ends=all_ends, warm=start)
+        judged = [self.judge.judge(points, rows, b, slopes=slopes) for b in blocks]
+        priced = self.pricing.price(points, rows, blocks, judged)
+        rules = self._rules(points, rows, judged, priced)
+        return Evaluation(points, rows, blocks, judged, priced, rules)
+
+    # -- rules ---------------------------------------------------------------------------------------
+
+    def _rules(
+        self, points: Points, rows: Rows, judged: Sequence[Judged], priced: Priced
+    ) -> list[Rule]:
+        doses = priced.doses
+        rules = [self._least_rule(points, doses, judged, rows)]
+        rules += self._sulfide_rules(points, rows, judged, doses)
+        rules += self._magnesia_rule(points, rows, judged, doses)
+        return rules
+
+    def _dose_slope(self, points: Points, rows: Rows, judged: Sequence[Judged]) -> FloatArray:
+        """Change of the controller's nominal dose with set point and paced doses, (points, k)."""
+        slope = np.zeros((len(points), 1 + len(self.plant.names)))
+        first = judged[0]
+        nominal = rows.nominal[first.block.rows]
+        if first.dose_slope.shape[1] == slope.shape[1]:
+            slope[rows.point[first.block.rows[nominal]]] = first.dose_slope[nominal]
+        return slope
+
+    def _least_rule(
+        self, points: Points, doses: FloatArray, judged: Sequence[Judged], rows: Rows
+    ) -> Rule:
+        """The controller's dose stays between its least real dose and its ceiling."""
+        n = len(points)
+        slope = np.zeros((n, 1 + len(self.plant.names)))
+        ratio = np.full(n, -np.inf)
+        held = points.controller >= 0
+        if held.any():
+            own = points.controller[held]
+            dose = np.maximum(doses[held, own], 1e-9)
+            low = np.log(self.least[own] / dose)
+            high = np.log(dose / np.minimum(self.ceiling[own], 1e12))
+            ratio[held] = np.maximum(low, high)
+            sign = np.where(low > high, -1.0, 1.0)
+            moved = self._dose_slope(points, rows, judged)[held]
+            slope[held] = (sign / dose)[:, None] * moved
+        paced = (points.doses > 0.0) & (points.doses < self.least * (1.0 - 1e-9))
+        over = points.doses > self.ceiling * (1.0 + 1e-9)
+        ratio = np.where((paced | over).any(axis=1), np.maximum(ratio, 1.0), ratio)
+        return Rule("least real dose and dose ceiling", ratio, slope)
+
+    def _before(
+        self, points: Points, rows: Rows, judged: Sequence[Judged], doses: FloatArray,
+        some: IntArray, without: BoolArray,
+    ) -> tuple[FloatArray, FloatArray]:  # fmt: skip
+        """PH of the feed with every dose but those of ``without``, and its slope."""
+        plant = self.plant
+        kept = np.where(without, 0.0, doses[some])
+        state = equilibrate(plant.system, plant.totals + kept @ plant.reacting, on_failure="flag")
+        plant.states_solved += some.size
+        ph = np.where(state.converged, state.ph, np.nan)
+        used = np.flatnonzero((doses[some] > 0.0).any(axis=0) & ~without)
+        slope = np.zeros((some.size, 1 + len(plant.names)))
+        moved = self._dose_slope(points, rows, judged)[some]
+        if used.size:
+            sens = state.sensitivity(plant.reacting[used])
+            for k, reagent in enumerate(used):
+                slope[:, 1 + reagent] += sens.ph[:, k]
+                own = points.controller[some] == reagent
+                slope[own] += sens.ph[own, k][:, None] * moved[own]
+        return ph, slope
+
+    def _sulfide_rules(
+        self, points: Points, rows: Rows, judged: Sequence[Judged], doses: FloatArray
+    ) -> list[Rule]:
+        plant = self.plant
+        some = np.flatnonzero((doses[:, plant.is_sulfide] > 0.0).any(axis=1))
+        if not some.size:
+            return []
+        least = plant.treatment.sulfide_least_ph
+        n, width = len(points), 1 + len(plant.names)
+        ph, moved = self._before(points, rows, judged, doses, some, plant.is_sulfide)
+        before = np.full(n, -np.inf)
+        before[some] = np.where(np.isnan(ph), 5.0, LN10 * (least - ph))
+        slope = np.zeros((n, width))
+        slope[some] = -LN10 * moved
+        rules = [Rule("pH before the sulfide dose", before, slope)]
+        lowest = np.full(n, np.inf)
+        for part in judged:
+            np.minimum.at(lowest, rows.point[part.block.rows], part.block.state.ph)
+        after = np.full(n, -np.inf)
+        after[some] = LN10 * (least - lowest[some])
+        slope = np.zeros((n, width))
+        slope[some, 0] = -LN10
+        rules.append(Rule("pH after the sulfide dose", after, slope))
+        return rules
+
+    def _magnesia_rule(
+        self, points: Points, rows: Rows, judged: Sequence[Judged], doses: FloatArray
+    ) -> list[Rule]:
+        """A reagent with a practical pH ceiling has all dissolved at or below it."""
+        plant = self.plant
+        rules = []
+        for i, reagent in enumerate(plant.reagents):
+            ceiling = self.ceiling_of(i)
+            if ceiling is None:
+                continue
+            some = np.flatnonzero(doses[:, i] > 0.0)
+            if not some.size:
+                continue
+            n, width = len(points), 1 + len(plant.names)
+            ratio, slope = np.full(n, -np.inf), np.zeros((n, width))
+            own = points.controller[some] == i
+            ratio[some[own]] = LN10 * (points.ph[some[own]] - ceiling)
+            slope[some[own], 0] = LN10
+            paced = some[~own]
+            if paced.size:
+                stronger = np.array(
+                    [
+                        r.ph_control == "up" and self.ceiling_of(j) is None
+                        for j, r in enumerate(plant.reagents)
+                    ]
+                )
+                ph, moved = self._before(points, rows, judged, doses, paced, stronger)
+                ratio[paced] = np.where(np.isnan(ph), 5.0, LN10 * (ph - ceiling))
+                slope[paced] = LN10 * moved
+            rules.append(Rule(f"practical pH ceiling of {reagent.name}", ratio, slope))
+        return rules
+
+    def ceiling_of(self, reagent: int) -> float | None:
+        """Practical pH ceiling of a reagent: the site's for magnesia, else the catalog's."""
+        known = self.plant.reagents[reagent]
+        own = self.plant.treatment.magnesia_ph_ceiling
+        if known.ph_ceiling is not None and own is not None:
+            return own
+        return known.ph_ceiling

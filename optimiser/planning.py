@@ -1,0 +1,117 @@
+"""`plan`: from a site to its cheapest verified plan, or to the reasons why there is none."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from typing import Any
+
+from optimiser.describe import describe
+from optimiser.diagnosis import explain_no_plan
+from optimiser.errors import FeedRefused, Interrupted
+from optimiser.evaluation import Evaluator
+from optimiser.outcome import Plan
+from optimiser.polish import Track
+from optimiser.recipes import recipe_of
+from optimiser.search import SETTLE_STEP, Findings, Search
+from optimiser.site import Site
+from optimiser.solver import solver_from
+
+RUNNERS_UP = 5
+LARGEST_IONIC_STRENGTH = 1.0
+
+
+def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
+    """Find the cheapest plan that the full equilibrium confirms.
+
+    Parameters
+    ----------
+    site
+        A problem from `optimiser.load_site`.
+    progress
+        Called with a line of text now and then.
+
+    Raises
+    ------
+    NoPlan
+        No recipe that the site allows meets every limit; says which clash and what stops them.
+    FeedRefused
+        The water is too salty for the activity model and the site does not say to go on.
+    Interrupted
+        The time limit came before a verified plan was found.
+    """
+    begun = time.perf_counter()
+    evaluator = Evaluator(site)
+    refuse_salty(site, evaluator.plant.feed.ionic_strength, "the feed")
+    search = Search(
+        evaluator, solver_from(site.solver), time_limit_s=site.solver.time_limit_s,
+        progress=progress,
+    )  # fmt: skip
+    findings = search.run()
+    ranked = findings.feasible
+    if not ranked:
+        if findings.stopped_early:
+            raise Interrupted(
+                f"stopped after {site.solver.time_limit_s:g} s before a verified plan was found: "
+                "raise the time limit or allow fewer reagents"
+            )
+        raise explain_no_plan(evaluator, findings)
+    _, best = ranked[0]
+    seen = evaluator.evaluate(best.point, slopes=False)
+    strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)
+    refuse_salty(site, strength, "the plan's water")
+    data = describe(evaluator, seen, 0, proof=_proof(evaluator, findings))
+    data["runners_up"] = _runners_up(evaluator, findings, best)
+    data["proof"]["seconds"] = {
+        **findings.seconds, "total": time.perf_counter() - begun,
+    }  # fmt: skip
+    return Plan(doses=data["doses"], cost=data["cost"], compliant=data["compliant"], data=data)
+
+
+def refuse_salty(site: Site, ionic_strength: float, what: str) -> None:
+    """Refuse waters above the activity model's range unless the site says to go on.
+
+    Raises
+    ------
+    FeedRefused
+        The ionic strength exceeds 1 mol/L.
+    """
+    if ionic_strength > LARGEST_IONIC_STRENGTH and not site.treatment.salty_water_allowed:
+        raise FeedRefused(
+            f"{site.path}: {what} has an ionic strength of {ionic_strength:.2f} mol/L; the "
+            "activity model is trusted to about 0.5 and refused above 1.\n    Set treatment."
+            "salty_water_allowed: true to plan all the same, and confirm by bench tests."
+        )
+
+
+def _proof(evaluator: Evaluator, findings: Findings) -> dict[str, Any]:
+    return {
+        "kind": "searched",
+        "statement": "no cheaper plan was found among the recipes and cells examined",
+        "recipes_examined": len(findings.recipes_examined),
+        "cells_examined": findings.cells_examined,
+        "states_examined": evaluator.plant.states_solved,
+        "smallest_step_percent": 100.0 * SETTLE_STEP,
+        "stopped_early": findings.stopped_early,
+    }
+
+
+def _runners_up(evaluator: Evaluator, findings: Findings, best: Track) -> list[dict[str, Any]]:
+    rows = []
+    for recipe, track in findings.feasible[1 : 1 + RUNNERS_UP]:
+        seen = track.place.seen
+        doses = seen.priced.doses[track.place.point]
+        controlled = int(track.point.controller[0]) >= 0
+        rows.append(
+            {
+                "reagents": list(recipe),
+                "doses": {
+                    name: float(doses[evaluator.plant.index[name]])
+                    for name in recipe_of(evaluator.plant, track.point, 0)
+                },
+                "ph_set_point": float(track.point.ph[0]) if controlled else None,
+                "total": track.total,
+                "difference_percent": 100.0 * (track.total / best.total - 1.0),
+            }
+        )
+    return rows

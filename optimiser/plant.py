@@ -1,0 +1,441 @@
+"""The plant as arrays: what each reagent brings, which ends are planned at, and the tank's states.
+
+Owns the step from doses and set points to certified equilibrium states at every corner and end;
+what those states mean for limits and money is `optimiser.quality` and `optimiser.costing`.
+
+Ends: gypsum and calcite formed or held back to a supersaturation; carbon dioxide from carbonate
+dosed into acid water kept or vented. Corners: pH set point and paced doses, each with tolerance.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from itertools import product
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from catalogs.reagents import Reagent
+from chemistry.feed import FeedWater, feed_water
+from chemistry.state import EquilibriumState, equilibrate
+from chemistry.system import System
+from chemistry.titration import StartValues, titrate
+from optimiser.site import Site
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+IntArray = NDArray[np.int64]
+
+CLOSED_FORMED, CLOSED_HELD, VENTED_FORMED, VENTED_HELD = 0, 1, 2, 3
+END_TEXT = {
+    CLOSED_FORMED: "gas kept, scale formed",
+    CLOSED_HELD: "gas kept, scale held back",
+    VENTED_FORMED: "CO2 vented, scale formed",
+    VENTED_HELD: "CO2 vented, scale held back",
+}
+
+
+@dataclass(frozen=True, eq=False)
+class Points:
+    """Candidate operating points, arrays over points.
+
+    ``doses`` (points, reagents) in mg/L of pure compound fed, for the reagents paced with the flow;
+    ``controller`` the reagent that holds the pH (-1: none), ``ph`` its set point, ``trim`` the
+    reagent that may trim the discharge (-1: none), ``trim_dose`` its fixed dose (mg/L fed; nan: as
+    much as brings the pH into the window).
+    """
+
+    doses: FloatArray
+    controller: IntArray
+    ph: FloatArray
+    trim: IntArray
+    trim_dose: FloatArray = field(default_factory=lambda: np.zeros(0))
+
+    def __post_init__(self) -> None:
+        if self.trim_dose.shape != self.ph.shape:
+            object.__setattr__(self, "trim_dose", np.full(self.ph.shape, np.nan))
+
+    def __len__(self) -> int:
+        return int(self.ph.shape[0])
+
+    def take(self, rows: IntArray | BoolArray | Sequence[int]) -> Points:
+        """Return some points."""
+        index = np.asarray(rows)
+        return Points(
+            self.doses[index], self.controller[index], self.ph[index], self.trim[index],
+            self.trim_dose[index],
+        )  # fmt: skip
+
+    @classmethod
+    def join(cls, parts: Sequence[Points]) -> Points:
+        """Put several sets of points one after the other."""
+        return cls(
+            np.concatenate([p.doses for p in parts]),
+            np.concatenate([p.controller for p in parts]),
+            np.concatenate([p.ph for p in parts]),
+            np.concatenate([p.trim for p in parts]),
+            np.concatenate([p.trim_dose for p in parts]),
+        )
+
+
+@dataclass(frozen=True, eq=False)
+class Rows:
+    """Corners of points: arrays over rows.
+
+    ``factor`` multiplies the paced doses, ``shift`` moves the set point; the row with factor 1
+    and shift 0 is the nominal one.
+    """
+
+    point: IntArray
+    ph: FloatArray
+    doses: FloatArray
+    factor: FloatArray
+    shift: FloatArray
+    nominal: BoolArray
+
+    def __len__(self) -> int:
+        return int(self.point.shape[0])
+
+
+class WarmStart(Protocol):
+    """Knows iterates of neighbouring waters for rows at an end."""
+
+    def start(self, end: int, rows: IntArray) -> StartValues | None:
+        """Iterates for these rows, or None where they are not known."""
+        ...
+
+
+@dataclass(frozen=True, eq=False)
+class Block:
+    """States of some rows at one end.
+
+    ``dose`` is the controller's dose that holds the row's pH, ``trim_dose`` that of the trim
+    reagent (both mg/L pure fed); ``held`` tells which rows the controller holds: where the paced
+    doses alone overshoot the row's pH it rests and the pH is what they make it; ``liquid`` the totals of the separated water and ``effluent``
+    those after trim (rows, components), ``trim_state`` the trimmed waters of ``trimmed`` rows.
+    """
+
+    end: int
+    rows: IntArray
+    state: EquilibriumState
+    dose: FloatArray
+    held: BoolArray
+    reached: BoolArray
+    lost_slope: FloatArray
+    liquid: FloatArray
+    effluent: FloatArray
+    trim_dose: FloatArray
+    trimmed: BoolArray
+    trim_state: EquilibriumState | None
+    trim_missing: BoolArray
+
+
+class Plant:
+    """A site's chemistry ready to be evaluated many times."""
+
+    def __init__(self, site: Site) -> None:
+        self.site = site
+        self.treatment = site.treatment
+        self.system = site.system
+        self.feed: FeedWater = feed_water(site.analysis, site.system)
+        self.totals = np.asarray(self.feed.totals_mol_per_l, dtype=float)
+        wanted = dict.fromkeys((*site.treatment.reagents, *site.treatment.trim_reagents))
+        self.names: tuple[str, ...] = tuple(wanted)
+        self.reagents: tuple[Reagent, ...] = tuple(site.reagents[name] for name in self.names)
+        self.index: Mapping[str, int] = {name: i for i, name in enumerate(self.names)}
+        self.factors = np.array([self.dose_factor(r) for r in self.reagents])
+        self.vectors = np.array([self._vector(r) for r in self.reagents])
+        self.reacting = self.vectors / self.factors[:, None]
+        self.slurry = np.array([r.is_slurry for r in self.reagents])
+        self.unreacted = np.where(self.slurry, 1.0 - 1.0 / self.factors, 0.0)
+        self.surplus = np.where(self.slurry, 0.0, 1.0 - 1.0 / self.factors)
+        # what a soluble reagent's excess leaves in the water still counts in full
+        self.reacting = np.where(self.slurry[:, None], self.reacting, self.vectors)
+        self.states_solved = 0
+
+    def dose_factor(self, reagent: Reagent) -> float:
+        """Fed over reacting: the site's own factor, else the reagent's."""
+        return float(self.treatment.dose_factors.get(reagent.reagent, reagent.dose_factor))
+
+    def _vector(self, reagent: Reagent) -> FloatArray:
+        """Moles of each component per mg of pure compound. [mol/mg]"""
+        vector = np.zeros(len(self.system.components))
+        for component, moles in reagent.components.items():
+            vector[self.system.index[component]] = moles
+        return vector / (1000.0 * reagent.molar_mass_g_per_mol)
+
+    @cached_property
+    def held_system(self) -> System | None:
+        """The system with scale formers held back, None where none can form."""
+        shift = {
+            s.name: self.treatment.scale_supersaturation_si
+            for s in self.system.solids
+            if s.scale_former
+        }
+        return self.system.shifted_solids(shift) if shift else None
+
+    @cached_property
+    def liquid_system(self) -> System:
+        """The system without solids: the separated water."""
+        return self.system.narrowed(solids=())
+
+    @cached_property
+    def scale_columns(self) -> BoolArray:
+        """Which candidate solids are scale formers, (solids,)."""
+        return np.array([s.scale_former for s in self.system.solids], dtype=bool)
+
+    @cached_property
+    def is_carbonate(self) -> BoolArray:
+        """Which reagents bring carbonate, (reagents,)."""
+        return np.array(["CO3-2" in r.components for r in self.reagents])
+
+    @cached_property
+    def is_sulfide(self) -> BoolArray:
+        """Which reagents bring sulfide, (reagents,)."""
+        return np.array(["HS-" in r.components for r in self.reagents])
+
+    # -- corners ---------------------------------------------------------------------------------
+
+    def corners(self, points: Points, *, full: bool = True) -> Rows:
+        """Expand points into rows: the nominal one and, if ``full``, every corner."""
+        point, shift, factors, nominal = [], [], [], []
+        tolerance = self.treatment.dose_tolerance_fraction
+        for i in range(len(points)):
+            one = np.ones(len(self.names))
+            point.append(i)
+            shift.append(0.0)
+            factors.append(one)
+            nominal.append(True)
+            if not full:
+                continue
+            paced = np.flatnonzero(points.doses[i] > 0.0)
+            steps = (-1.0, 1.0) if points.controller[i] >= 0 else (0.0,)
+            for move, signs in product(steps, product((-1.0, 1.0), repeat=paced.size)):
+                if move == 0.0 and not signs:
+                    continue
+                factor = one.copy()
+                factor[paced] += tolerance * np.array(signs)
+                point.append(i)
+                shift.append(move * self.treatment.ph_tolerance)
+                factors.append(factor)
+                nominal.append(False)
+        index = np.array(point, dtype=np.int64)
+        factor_array = np.array(factors).reshape(len(point), len(self.names))
+        shifts = np.array(shift)
+        return Rows(
+            point=index, ph=points.ph[index] + shifts, doses=points.doses[index] * factor_array,
+            factor=factor_array, shift=shifts, nominal=np.array(nominal, dtype=bool),
+        )  # fmt: skip
+
+    # -- states ----------------------------------------------------------------------------------
+
+    def blocks(
+        self, points: Points, rows: Rows, *, all_ends: bool = True,
+        warm: WarmStart | None = None,
+    ) -> list[Block]:  # fmt: skip
+        """States of the rows at every end that differs from the first."""
+        base = self.totals + rows.doses @ self.reacting
+        everything = np.arange(len(rows))
+        none_lost = np.zeros(len(self.names))
+        start = warm.start(CLOSED_FORMED, everything) if warm else None
+        first = self._block(points, rows, base, everything, CLOSED_FORMED, none_lost, start)
+        found = [first]
+        if not all_ends:
+            return found
+        found += self._held(points, rows, base, first, CLOSED_HELD, none_lost, warm)
+        doses = self.fed_doses(points, rows, found)
+        lost, slope = self._vented(points, doses)
+        venting = np.flatnonzero(lost[rows.point] > 1e-9)
+        if venting.size:
+            co2 = np.zeros_like(self.totals)
+            co2[self.system.index["CO3-2"]] = 1.0
+            co2[self.system.index["H+"]] = 2.0
+            vented = base - lost[rows.point][:, None] * co2
+            start = _or_state(warm, VENTED_FORMED, venting, first)
+            block = self._block(points, rows, vented, venting, VENTED_FORMED, slope, start)
+            found.append(block)
+            found += self._held(points, rows, vented, block, VENTED_HELD, slope, warm)
+        return found
+
+    def _held(
+        self, points: Points, rows: Rows, base: FloatArray, formed: Block, end: int,
+        lost_slope: FloatArray, warm: WarmStart | None,
+    ) -> list[Block]:  # fmt: skip
+        if self.held_system is None:
+            return []
+        scaling = formed.state.active[:, self.scale_columns].any(axis=1)
+        some = formed.rows[scaling & formed.reached]
+        if not some.size:
+            return []
+        start = _or_state(warm, end, some, formed)
+        return [self._block(points, rows, base, some, end, lost_slope, start)]
+
+    def _block(
+        self, points: Points, rows: Rows, base: FloatArray, some: IntArray, end: int,
+        lost_slope: FloatArray, start: StartValues | None = None,
+    ) -> Block:  # fmt: skip
+        held = end in (CLOSED_HELD, VENTED_HELD)
+        system = self.held_system if held and self.held_system is not None else self.system
+        controller = points.controller[rows.point[some]]
+        vectors = np.where(
+            (controller >= 0)[:, None], self.reacting[np.maximum(controller, 0)], 0.0
+        )
+        totals = np.maximum(base[some], np.where(self._signed, -np.inf, 0.0))
+        able = np.maximum(controller, 0)
+        upward = np.array([r.ph_control != "down" for r in self.reagents])[able]
+        state, dose, held_rows, reached = self._solve(
+            system, totals, rows.ph[some], vectors, upward, start
+        )
+        self.states_solved += some.size
+        liquid = state.dissolved_mol_per_l
+        return self._trim(
+            points, rows,
+            Block(
+                end=end, rows=some, state=state, dose=dose, held=held_rows, reached=reached,
+                lost_slope=np.broadcast_to(lost_slope, (len(self.names),)),
+                liquid=liquid, effluent=liquid, trim_dose=np.zeros(some.size),
+                trimmed=np.zeros(some.size, dtype=bool), trim_state=None,
+                trim_missing=np.zeros(some.size, dtype=bool),
+            ),
+        )  # fmt: skip
+
+    @cached_property
+    def _signed(self) -> BoolArray:
+        return np.array([c == "H+" for c in self.system.components])
+
+    def _solve(
+        self, system: System, totals: FloatArray, ph: FloatArray, vectors: FloatArray,
+        upward: BoolArray, start: StartValues | None,
+    ) -> tuple[EquilibriumState, FloatArray, BoolArray, BoolArray]:  # fmt: skip
+        """States, controller doses, which rows it holds, and which are as they should be."""
+        controlled = (vectors != 0.0).any(axis=1)
+        dose, held = np.zeros(totals.shape[0]), np.zeros(totals.shape[0], dtype=bool)
+        if controlled.all():
+            result = titrate(system, totals, ph, vectors, start=start)
+            state, dose, held = result.state, result.dose, result.reached
+        else:
+            if controlled.any():
+                begin = start.rows(controlled) if start is not None else None
+                part = titrate(
+                    system, totals[controlled], ph[controlled], vectors[controlled], start=begin
+                )
+                dose[controlled], held[controlled] = part.dose, part.reached
+            dosed = totals + dose[:, None] * vectors
+            state = equilibrate(system, dosed, on_failure="flag", start=start)
+        overshot = np.where(upward, state.ph > ph, state.ph < ph)
+        return state, dose, held, state.converged & (held | ~controlled | overshot)
+
+    def fed_doses(self, points: Points, rows: Rows, blocks: Sequence[Block]) -> FloatArray:
+        """Doses fed at each point's nominal row, dearest end, (points, reagents). [mg/L]"""
+        doses = points.doses.copy()
+        for block in blocks:
+            nominal = rows.nominal[block.rows] & block.reached
+            for row, dose in zip(block.rows[nominal], block.dose[nominal], strict=True):
+                point = rows.point[row]
+                reagent = points.controller[point]
+                if reagent >= 0:
+                    doses[point, reagent] = max(doses[point, reagent], dose)
+        return doses
+
+    def _vented(self, points: Points, doses: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Carbon dioxide that carbonate dosed into the feed may lose, (points,) [mol/L].
+
+        The feed and all carbonate reagents meet before other alkali and come to rest with air of
+        the site's CO2 pressure; what leaves is lost. Also returned: its change per mg/L of each
+        carbonate reagent at the mean point, (reagents,) [mol/mg].
+        """
+        lost = np.zeros(len(points))
+        slope = np.zeros(len(self.names))
+        dosed = np.flatnonzero((doses[:, self.is_carbonate] > 0.0).any(axis=1))
+        if not dosed.size or "CO2(aq)" not in self.system.species_names:
+            return lost, slope
+        mixed = self.totals + (doses[dosed] * self.is_carbonate) @ self.reacting
+        carbonate = self.system.index["CO3-2"]
+        state = equilibrate(
+            self.liquid_system, mixed, pco2_atm=self.treatment.vent_pco2_atm, on_failure="flag"
+        )
+        gone = mixed[:, carbonate] - state.totals[:, carbonate]
+        lost[dosed] = np.where(state.converged, np.clip(gone, 0.0, mixed[:, carbonate]), 0.0)
+        total = (doses[dosed] * self.is_carbonate) @ self.reacting[:, carbonate]
+        share = float(np.mean(np.clip(lost[dosed] / np.maximum(total, 1e-12), 0.0, 1.0)))
+        slope[self.is_carbonate] = share * self.reacting[self.is_carbonate, carbonate]
+        return lost, slope
+
+    # -- trim ------------------------------------------------------------------------------------
+
+    def needs_trim(self, points: Points, rows: Rows, ph: FloatArray, some: IntArray) -> FloatArray:
+        """Target pH of the final trim for each row, nan where none is needed."""
+        window, tolerance = self.site.ph_window, self.treatment.ph_tolerance
+        target = np.full(some.size, np.nan)
+        point = rows.point[some]
+        controlled = points.controller[point] >= 0
+        set_point = np.where(controlled, points.ph[point], ph)
+        high = set_point + tolerance > window.high + 1e-9
+        low = set_point - tolerance < window.low - 1e-9
+        target = np.where(high & (ph > window.high - tolerance), window.high - tolerance, target)
+        return np.where(low & (ph < window.low + tolerance), window.low + tolerance, target)
+
+    def _trim(self, points: Points, rows: Rows, block: Block) -> Block:
+        """Add the final trim: to the window's edge, or by the dose that is fixed."""
+        point = rows.point[block.rows]
+        ph, reagent = block.state.ph, points.trim[point]
+        fixed = ~np.isnan(points.trim_dose[point]) & (reagent >= 0)
+        target = self.needs_trim(points, rows, ph, block.rows)
+        needed = ~np.isnan(target) & block.reached & np.isfinite(ph) & ~fixed
+        wanted = np.where(target < ph, "down", "up")
+        offers = np.array([r.ph_control for r in self.reagents] + [""])[reagent]
+        able = needed & (reagent >= 0) & (offers == wanted)
+        dose = np.where(fixed, points.trim_dose[point], 0.0)
+        missing = needed & ~able
+        work = np.flatnonzero(able)
+        if work.size:
+            begin = StartValues.of(block.state).rows(work).without_solids()
+            result = titrate(
+                self.liquid_system, block.liquid[work], target[work],
+                self.reacting[reagent[work]], start=begin,
+            )  # fmt: skip
+            dose[work] = result.dose
+            missing[work] |= ~result.reached
+        trimmed = (dose > 0.0) & ~missing & block.reached
+        some = np.flatnonzero(trimmed)
+        if not some.size:
+            return self._window(points, rows, replace(block, trim_missing=missing))
+        effluent = block.liquid.copy()
+        effluent[some] += dose[some, None] * self.reacting[reagent[some]]
+        self.states_solved += some.size
+        state = equilibrate(
+            self.liquid_system, effluent[some], on_failure="flag",
+            start=StartValues.of(block.state).rows(some).without_solids(),
+        )  # fmt: skip
+        missing[some] |= ~state.converged
+        block = replace(
+            block, trim_dose=np.where(trimmed, dose, 0.0), effluent=effluent, trimmed=trimmed,
+            trim_state=state, trim_missing=missing,
+        )  # fmt: skip
+        return self._window(points, rows, block)
+
+    def _window(self, points: Points, rows: Rows, block: Block) -> Block:
+        """Mark rows whose discharge pH a fixed trim dose leaves outside the window."""
+        point = rows.point[block.rows]
+        fixed = ~np.isnan(points.trim_dose[point]) & (points.trim[point] >= 0)
+        if not fixed.any():
+            return block
+        ph = block.state.ph.copy()
+        if block.trim_state is not None:
+            ph[block.trimmed] = block.trim_state.ph
+        window = self.site.ph_window
+        outside = (ph < window.low - 1e-6) | (ph > window.high + 1e-6)
+        return replace(block, trim_missing=block.trim_missing | (fixed & outside))
+
+
+def _or_state(
+    warm: WarmStart | None, end: int, rows: IntArray, formed: Block
+) -> StartValues | None:
+    """The known iterates, else those of the same rows at another end."""
+    known = warm.start(end, rows) if warm else None
+    if known is not None:
+        return known
+    return StartValues.of(formed.state).rows(np.searchsorted(formed.rows, rows))

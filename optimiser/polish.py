@@ -1,0 +1,354 @@
+"""Polish: successive linearisation of operating points inside a trust region.
+
+Each step linearises every check in its logarithm with exact derivatives, adds the purchasing block
+and lets the mixed-integer solver move set point and doses; the full equilibrium judges the move.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER
+from optimiser.evaluation import Evaluation, Evaluator, Place
+from optimiser.linear_model import Expression, Model, Sense
+from optimiser.plant import CLOSED_FORMED, VENTED_FORMED, Points
+from optimiser.purchasing import add_purchasing
+from optimiser.solver import SolverPort
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+BACK_OFF = 2e-6  # ratios are brought to minus this, so that rounding does not break a limit
+ROWS_PER_STEP = 80
+NEAR_RATIO = -2.5
+PENALTY = 20.0  # cost of a unit of ratio, as a multiple of the point's cost
+FIRST_RADIUS = 0.5
+LAST_RADIUS = 2e-4
+SET_POINT_STEP = 0.6  # pH per unit of radius
+PATIENCE = 3
+HOPELESS_RATIO = 5e-3
+SHRINKS_BY = 0.8
+
+
+@dataclass(slots=True)
+class Track:
+    """One candidate on its way: its best point so far and how far the next step may go."""
+
+    place: Place
+    radius: float = FIRST_RADIUS
+    alive: bool = True
+    steps: int = 0
+    stalls: int = 0
+    missed: tuple[float, ...] = ()
+
+    @property
+    def point(self) -> Points:
+        """The best point, a set of one."""
+        return self.place.seen.points.take([self.place.point])
+
+    @property
+    def total(self) -> float:
+        """Cost of the best point."""
+        return float(self.place.seen.total[self.place.point])
+
+    @property
+    def violation(self) -> float:
+        """Largest ratio of the best point."""
+        return float(self.place.seen.violation[self.place.point])
+
+    @property
+    def merit(self) -> float:
+        """Cost with a penalty on what is missed."""
+        return self.total * (1.0 + PENALTY * max(0.0, self.violation + BACK_OFF))
+
+    @property
+    def feasible(self) -> bool:
+        """Whether the point meets everything."""
+        return bool(self.place.seen.feasible[self.place.point])
+
+
+def polish(
+    evaluator: Evaluator, starts: Points, solver: SolverPort, *, bounds: Bounds,
+    steps: int = 14, radius: float = FIRST_RADIUS, give_up_above: float = np.inf,
+    known: float = np.inf, near: Sequence[Place] | None = None,
+) -> list[Track]:  # fmt: skip
+    """Polish all starts side by side; returns a track for each.
+
+    ``give_up_above`` drops candidates whose cost stays this factor above the best feasible one
+    (``known``, or one of the candidates).
+    """
+    seen = evaluator.evaluate(starts, slopes=True, near=near)
+    tracks = [Track(Place(seen, i), radius) for i in range(len(starts))]
+    for _ in range(steps):
+        trials: list[Points] = []
+        moving: list[Track] = []
+        for track in tracks:
+            if not track.alive:
+                continue
+            trial = step(evaluator, track, solver, bounds)
+            if trial is None:
+                track.alive = False
+            else:
+                trials.append(trial)
+                moving.append(track)
+        if not trials:
+            break
+        tried = evaluator.evaluate(Points.join(trials), slopes=True, near=[t.place for t in moving])
+        for row, track in enumerate(moving):
+            _accept(track, Place(tried, row))
+        _drop(tracks, give_up_above, known)
+    return tracks
+
+
+def _accept(track: Track, place: Place) -> None:
+    fresh = Track(place)
+    track.steps += 1
+    gain = (track.merit - fresh.merit) / max(track.merit, 1e-12)
+    if np.isfinite(fresh.merit) and gain > 0.0:
+        track.place = place
+        track.radius = min(track.radius * (1.6 if gain > 1e-3 else 1.0), 1.0)
+        track.stalls = track.stalls + 1 if gain < 2e-5 else 0
+    else:
+        track.radius *= 0.3
+        track.stalls = 0
+    if track.radius < LAST_RADIUS or track.stalls >= 2:
+        track.alive = False
+    track.missed = (*track.missed, max(0.0, track.violation))
+    if track.steps >= PATIENCE and track.violation > HOPELESS_RATIO:
+        # a candidate whose worst miss hardly shrinks will not become feasible
+        track.alive &= track.violation < SHRINKS_BY * track.missed[-PATIENCE]
+
+
+def _drop(tracks: list[Track], factor: float, known: float) -> None:
+    best = min([known, *(t.total for t in tracks if t.feasible)])
+    for track in tracks:
+        if track.alive and track.steps >= 3 and track.total > factor * best:
+            track.alive = False
+
+
+@dataclass(frozen=True, eq=False)
+class Bounds:
+    """Where set points and doses may lie."""
+
+    ph_low: Callable[[int, FloatArray], float]
+    ph_high: Callable[[int, FloatArray], float]
+    dose_low: FloatArray
+    dose_high: FloatArray
+
+
+def step(evaluator: Evaluator, track: Track, solver: SolverPort, bounds: Bounds) -> Points | None:
+    """Solve one linearised step from a track's point; None where the model has no solution."""
+    seen, row = track.place.seen, track.place.point
+    model = build_step(evaluator, seen, row, track.radius, bounds)
+    report = solver.solve(model)
+    if not report.termination.has_solution:
+        return None
+    point = seen.points.take([row])
+    doses = point.doses.copy()
+    for j in np.flatnonzero(doses[0] > 0.0):
+        doses[0, j] = report.values[f"dose {evaluator.plant.names[j]}"]
+    ph = point.ph.copy()
+    if "set point" in report.values:
+        ph[0] = report.values["set point"]
+    return Points(doses, point.controller, ph, point.trim)
+
+
+def build_step(
+    evaluator: Evaluator, seen: Evaluation, row: int, radius: float, bounds: Bounds
+) -> Model:
+    """Build the mixed-integer model of one step.
+
+    Notes
+    -----
+    With moves ``v`` of set point and paced doses, every near check asks
+    ``ratio + slope . v <= -back-off + miss``; the controller's, the trim's and the sludge's amounts
+    are at least their linearised values at every end. Costs are the purchasing block, disposal by
+    the tariff of the point's sludge class, burden charges and a penalty on ``miss``.
+    """
+    model = Model("polish step")
+    moves = _add_moves(model, evaluator, seen.points, row, radius, bounds)
+    model.add_variable("miss", high=60.0)
+    total = float(seen.total[row])
+    scale = total if np.isfinite(total) else 1e6
+    model.add_cost("miss", Expression({"miss": PENALTY * scale}))
+    _add_checks(model, seen, row, moves)
+    demand = _add_amounts(model, evaluator, seen, row, moves)
+    add_purchasing(model, evaluator.site.offers, demand)
+    _add_disposal(model, evaluator, seen, row, moves)
+    _add_burden(model, evaluator, seen, row, moves)
+    return model
+
+
+def _add_moves(
+    model: Model, evaluator: Evaluator, points: Points, row: int, radius: float, bounds: Bounds
+) -> dict[int, tuple[str, float]]:
+    """Variables of a step: column of the slopes -> (variable, value at the point)."""
+    moves: dict[int, tuple[str, float]] = {}
+    doses = points.doses[row]
+    if points.controller[row] >= 0:
+        here = float(points.ph[row])
+        controller = int(points.controller[row])
+        low = max(bounds.ph_low(controller, doses), here - SET_POINT_STEP * radius)
+        high = min(bounds.ph_high(controller, doses), here + SET_POINT_STEP * radius)
+        low, high = min(low, here), max(high, here)
+        model.add_variable("set point", low=low, high=high)
+        moves[0] = ("set point", here)
+    for j in np.flatnonzero(doses > 0.0):
+        here = float(doses[j])
+        low = max(float(bounds.dose_low[j]), here / (1.0 + 1.5 * radius))
+        high = min(float(bounds.dose_high[j]), here * (1.0 + 1.5 * radius))
+        key = f"dose {evaluator.plant.names[j]}"
+        model.add_variable(key, low=min(low, here), high=max(high, here))
+        moves[1 + int(j)] = (key, here)
+    return moves
+
+
+def _linear(
+    slope: FloatArray, moves: dict[int, tuple[str, float]]
+) -> tuple[dict[str, float], float]:
+    """Terms and constant of ``slope . (variable - here)``."""
+    terms = {key: float(slope[column]) for column, (key, _) in moves.items()}
+    constant = -sum(float(slope[column]) * here for column, (_, here) in moves.items())
+    return terms, constant
+
+
+def _add_checks(
+    model: Model, seen: Evaluation, row: int, moves: dict[int, tuple[str, float]]
+) -> None:
+    ratios, slopes = [], []
+    for part in seen.judged:
+        mine = np.flatnonzero((seen.rows.point[part.block.rows] == row) & part.block.reached)
+        if mine.size and part.ratio.shape[1]:
+            ratios.append(part.ratio[mine].ravel())
+            slopes.append(part.slope[mine].reshape(-1, part.slope.shape[2]))
+    for rule in seen.rules:
+        if np.isfinite(rule.ratio[row]):
+            ratios.append(rule.ratio[row : row + 1])
+            slopes.append(rule.slope[row : row + 1])
+    if not ratios:
+        return
+    ratio, slope = np.concatenate(ratios), np.concatenate(slopes)
+    order = np.argsort(-ratio, kind="stable")[:ROWS_PER_STEP]
+    for number, k in enumerate(order):
+        if ratio[k] < NEAR_RATIO or not np.all(np.isfinite(slope[k])):
+            continue
+        terms, constant = _linear(np.clip(slope[k], -1e6, 1e6), moves)
+        terms["miss"] = -1.0
+        model.add_row(
+            f"check {number}", terms, Sense.AT_MOST, -BACK_OFF - float(ratio[k]) - constant
+        )
+
+
+def _add_amounts(
+    model: Model, evaluator: Evaluator, seen: Evaluation, row: int,
+    moves: dict[int, tuple[str, float]],
+) -> dict[str, Expression]:  # fmt: skip
+    """Controller and trim doses at every end; returns the demand in kg pure per year."""
+    plant, points = evaluator.plant, seen.points
+    per = evaluator.pricing.kg_per_mg_per_l
+    demand: dict[str, Expression] = {}
+
+    def buy(reagent: int, amount: Expression) -> None:
+        name = plant.names[reagent]
+        demand[name] = demand.get(name, Expression()).plus(amount.times(per))
+
+    for column, (key, _) in moves.items():
+        if column > 0:
+            buy(column - 1, Expression({key: 1.0}))
+    for kind, reagent in (
+        ("controller", int(points.controller[row])), ("trim", int(points.trim[row])),
+    ):  # fmt: skip
+        if reagent < 0:
+            continue
+        rows = _amount_rows(seen, row, kind)
+        if not rows:
+            continue
+        most = max(here for here, _ in rows)
+        key = model.add_variable(f"{kind} dose", high=10.0 * most + 100.0)
+        for number, (here, slope) in enumerate(rows):
+            terms, constant = _linear(slope, moves)
+            terms = {name: -value for name, value in terms.items()}
+            terms[key] = 1.0
+            model.add_row(f"{kind} at end {number}", terms, Sense.AT_LEAST, here + constant)
+        buy(reagent, Expression({key: 1.0}))
+    return demand
+
+
+def _amount_rows(seen: Evaluation, row: int, kind: str) -> list[tuple[float, FloatArray]]:
+    found = []
+    for part in seen.judged:
+        k = seen.nominal_row(part.block, row)
+        if k is None or not part.block.reached[k]:
+            continue
+        if kind == "controller":
+            found.append((float(part.block.dose[k]), part.dose_slope[k]))
+        elif part.block.trimmed[k]:
+            found.append((float(part.block.trim_dose[k]), part.trim_slope[k]))
+    return found
+
+
+def _add_disposal(
+    model: Model, evaluator: Evaluator, seen: Evaluation, row: int,
+    moves: dict[int, tuple[str, float]],
+) -> None:  # fmt: skip
+    chosen = seen.priced.sludges[row]
+    if chosen is None:
+        return
+    made, position, rule = chosen
+    plant, site = evaluator.plant, evaluator.site
+    weight = np.zeros(len(plant.system.solids))
+    amounts = np.eye(len(plant.system.solids))
+    from chemistry.sludge import dry_masses_mg_per_l
+
+    weight = dry_masses_mg_per_l(
+        amounts, plant.system, bound_water_factor=site.disposal.bound_water_factor
+    ).sum(axis=1)
+    polymer = plant.treatment.polymer_g_per_kg_solids / 1000.0
+    key = model.add_variable("dry sludge", high=1e7)
+    for number, part in enumerate(seen.judged):
+        if part.block.end not in (CLOSED_FORMED, VENTED_FORMED):
+            continue
+        k = seen.nominal_row(part.block, row)
+        if k is None or not part.block.reached[k]:
+            continue
+        slope = (1.0 + polymer) * (weight @ part.solid_slope[k])
+        slope[1:] += (1.0 + polymer) * plant.unreacted
+        controller = int(seen.points.controller[row])
+        if controller >= 0:
+            slope = slope + (1.0 + polymer) * plant.unreacted[controller] * part.dose_slope[k]
+        terms, constant = _linear(slope, moves)
+        terms = {name: -value for name, value in terms.items()}
+        terms[key] = 1.0
+        here = float(made.dry_mg_per_l[position])
+        model.add_row(f"sludge at end {number}", terms, Sense.AT_LEAST, here + constant)
+    wet_t = evaluator.pricing.kg_per_mg_per_l / 1000.0 / site.disposal.cake_solids_fraction
+    model.add_cost(DISPOSAL, Expression({key: wet_t * rule.tariff_per_wet_t}))
+    pickup = rule.pickup_fee / rule.tonnes_per_pickup
+    model.add_cost(FEES, Expression({key: wet_t * pickup}, rule.yearly_fee))
+    price = plant.treatment.polymer_price_per_kg * evaluator.pricing.kg_per_mg_per_l
+    model.add_cost(POLYMER, Expression({key: price * polymer / (1.0 + polymer)}))
+
+
+def _add_burden(
+    model: Model, evaluator: Evaluator, seen: Evaluation, row: int,
+    moves: dict[int, tuple[str, float]],
+) -> None:  # fmt: skip
+    charges = evaluator.site.burden_charges_per_kg
+    if not charges:
+        return
+    per = evaluator.pricing.kg_per_mg_per_l
+    key = model.add_variable("burden charges", high=1e12)
+    for number, part in enumerate(seen.judged):
+        k = seen.nominal_row(part.block, row)
+        if k is None or not part.block.reached[k]:
+            continue
+        slope, here = evaluator.judge.burden_charge(part, k, charges)
+        terms, constant = _linear(per * slope, moves)
+        terms = {name: -value for name, value in terms.items()}
+        terms[key] = 1.0
+        model.add_row(f"burden at end {number}", terms, Sense.AT_LEAST, per * here + constant)
+    model.add_cost(BURDEN, Expression({key: 1.0}))

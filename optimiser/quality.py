@@ -1,0 +1,433 @@
+"""What leaves the plant: predictions, limits and safety rules at every state, with slopes.
+
+Owns residual plus carry-over, practical floors, variability and margin; each becomes a check whose
+``ratio`` (natural log of value over target) must not exceed 0. States come from `optimiser.plant`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from chemistry.analysis import ANALYTES, METALS
+from chemistry.burden import BURDENS, burden_weights
+from chemistry.sludge import formula_masses_g_per_mol
+from chemistry.state import H2S_SPECIES
+from optimiser.plant import VENTED_FORMED, VENTED_HELD, Block, Plant, Points, Rows
+from optimiser.site import Limit
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+IntArray = NDArray[np.int64]
+
+SMALLEST_MG_PER_L = 1e-12
+UNREACHED_RATIO = 50.0  # ratio of every check of a state whose set point no dose reaches
+LN10 = float(np.log(10.0))
+
+DAILY, MONTHLY, LOAD, RULE = "daily", "monthly", "daily load", "rule"
+SUMMED_STATES = {"Fe": ("Fe(II)", "Fe(III)"), "Cr": ("Cr(III)", "Cr(VI)")}
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Check:
+    """One ceiling in one averaging: ``target`` is what the mean prediction must not exceed.
+
+    ``target = margin x limit / variability factor``, mg/L (ppm for gas, pH units for pH rules).
+    """
+
+    label: str
+    averaging: str
+    limit: float
+    unit: str
+    target: float
+    variability: float = 1.0
+    source: str = ""
+    metals: tuple[int, ...] = ()
+    burden: str = ""
+
+
+@dataclass(frozen=True, eq=False)
+class Judged:
+    """Values of one block's rows, with slopes by (set point, paced doses...).
+
+    ``value`` and ``ratio`` are (rows, checks); ``slope`` (rows, checks, 1 + reagents) the change of
+    ``ratio``; ``residual``, ``carried`` and ``floor`` (rows, metals) in mg/L; ``dose_slope``
+    (rows, 1 + reagents) the change of the controller's dose, ``trim_slope`` of the trim dose,
+    ``solid_slope`` (rows, solids, 1 + reagents) of the amounts of solids, ``effluent_slope`` of the
+    discharged totals.
+    """
+
+    block: Block
+    value: FloatArray
+    ratio: FloatArray
+    residual: FloatArray
+    carried: FloatArray
+    floor: FloatArray
+    burden: dict[str, FloatArray]
+    slope: FloatArray
+    dose_slope: FloatArray
+    trim_slope: FloatArray
+    solid_slope: FloatArray
+    effluent_slope: FloatArray
+
+
+class Judge:
+    """Compiles a site's limits and judges states by them."""
+
+    def __init__(self, plant: Plant) -> None:
+        self.plant = plant
+        site = plant.site
+        wanted = [m for limit in site.limits for m in (limit.of or (limit.parameter,))]
+        names = [m for m in dict.fromkeys(wanted) if _parts(m)]
+        self.metals: tuple[str, ...] = tuple(names)
+        self.weights = np.array([self._weights(m) for m in names]).reshape(
+            len(names), len(plant.system.components)
+        )
+        particles = plant.feed.particulate_mg_per_l
+        self.particles = np.array([sum(particles.get(p, 0.0) for p in _parts(m)) for m in names])
+        self.dissolved_only = np.array(
+            [sum(plant.feed.unmodelled_mg_per_l.get(p, 0.0) for p in _parts(m)) for m in names]
+        )
+        self.solid_metal = plant.system.solid_formation @ self.weights.T
+        self.solid_mass = self._credited_mass()
+        self.feed_particle_mass = max(site.analysis.tss_mg_per_l, sum(particles.values(), 0.0))
+        self.floors = self._floors()
+        self.families = self._families()
+        self.burden_weights = burden_weights(plant.system)
+        self.checks: tuple[Check, ...] = tuple(self._compile())
+        self.vent_co2 = np.zeros(len(plant.system.components))
+        if "CO3-2" in plant.system.index:
+            self.vent_co2[plant.system.index["CO3-2"]] = 1.0
+            self.vent_co2[plant.system.index["H+"]] = 2.0
+
+    # -- compile -----------------------------------------------------------------------------------
+
+    def _weights(self, metal: str) -> FloatArray:
+        weights = np.zeros(len(self.plant.system.components))
+        for part in _parts(metal):
+            analyte = ANALYTES[part]
+            if analyte.component in self.plant.system.index:
+                weights[self.plant.system.index[analyte.component]] = (
+                    1000.0 * analyte.molar_mass_g_per_mol
+                )
+        return weights
+
+    def _credited_mass(self) -> FloatArray:
+        """Mass per mole of each solid that dilutes the floc's metals, (solids,). [mg/mol]
+
+        Solids that hold a metal of the feed count; gypsum, calcite, brucite and the like are made
+        by excess reagent and count only where the site allows it.
+        """
+        plant = self.plant
+        mass = 1000.0 * formula_masses_g_per_mol(plant.system)
+        if plant.treatment.inert_solids_dilute:
+            return mass
+        feed = plant.totals > 0.0
+        metal = np.array(
+            [
+                any(ANALYTES[m].component == c for m in METALS) and bool(feed[i])
+                for i, c in enumerate(plant.system.components)
+            ]
+        )
+        holds = (plant.system.solid_formation[:, metal] > 0.0).any(axis=1)
+        return np.where(holds, mass, 0.0)
+
+    def _floors(self) -> list[dict[str, float]]:
+        known = self.plant.site.floors_mg_per_l
+        return [dict(known.get(m, {})) for m in self.metals]
+
+    def _families(self) -> tuple[str, ...]:
+        system = self.plant.system
+        found = []
+        for solid in system.solids:
+            parts = solid.stoichiometry
+            for component, family in (
+                ("HS-", "sulfide"), ("SO4-2", "sulfate"), ("CO3-2", "carbonate"),
+                ("Cl-", "chloride"), ("PO4-3", "phosphate"), ("F-", "fluoride"),
+            ):  # fmt: skip
+                if component in parts:
+                    found.append(family)
+                    break
+            else:
+                found.append("hydroxide")
+        return tuple(found)
+
+    def _compile(self) -> list[Check]:
+        checks = []
+        for limit in self.plant.site.limits:
+            checks += self._limit_checks(limit)
+        if "HS-" in self.plant.system.index:
+            for place in ("tank", "after trim"):
+                checks.append(
+                    Check(
+                        label=f"H2S over the water, {place}",
+                        averaging=RULE,
+                        unit="ppm",
+                        limit=self.plant.treatment.h2s_limit_ppm,
+                        target=self.plant.treatment.h2s_limit_ppm,
+                        source="site rule",
+                    )  # fmt: skip
+                )
+        return checks
+
+    def _limit_checks(self, limit: Limit) -> list[Check]:
+        site = self.plant.site
+        parts = limit.of or (limit.parameter,)
+        metals = tuple(self.metals.index(m) for m in parts if m in self.metals)
+        burden = limit.parameter if limit.parameter in BURDENS else ""
+        daily, monthly = self._variability(parts, burden)
+        per_flow = 1000.0 / site.flow_m3_per_d
+        made = []
+        for averaging, value, factor, scale, unit in (
+            (DAILY, limit.daily_mg_per_l, daily, 1.0, "mg/L"),
+            (MONTHLY, limit.monthly_mg_per_l, monthly, 1.0, "mg/L"),
+            (LOAD, limit.daily_load_kg_per_d, daily, per_flow, "kg/d"),
+        ):
+            if value is None:
+                continue
+            target = site.design_margin * value * scale / factor
+            made.append(
+                Check(
+                    label=limit.label,
+                    averaging=averaging,
+                    limit=value,
+                    unit=unit,
+                    target=target,
+                    variability=factor,
+                    source=limit.source,
+                    metals=metals,
+                    burden=burden,
+                )  # fmt: skip
+            )
+        return made
+
+    def _variability(self, parts: Sequence[str], burden: str) -> tuple[float, float]:
+        site = self.plant.site
+        if site.stands_for == "peak":
+            return 1.0, 1.0
+        known = [site.variability[p] for p in parts if p in site.variability]
+        if burden and not known:
+            return 1.0, 1.0
+        if not known:
+            known = [site.variability.get("default", (4.0, 2.0))]
+        return max(k[0] for k in known), max(k[1] for k in known)
+
+    # -- judge --------------------------------------------------------------------------------------
+
+    def judge(self, points: Points, rows: Rows, block: Block, *, slopes: bool = False) -> Judged:
+        """Values, ratios and (if ``slopes``) their derivatives for one block of states."""
+        state = block.state
+        residual = state.dissolved_mol_per_l @ self.weights.T + self.dissolved_only
+        solids = state.solids_mol_per_l
+        share, share_by_mass = self._share(solids)
+        held = solids @ self.solid_metal + self.particles
+        carried = share[:, None] * held
+        floor = self._floor_values(solids)
+        total = np.maximum(residual + carried, floor)
+        burden = self._burden(block.effluent)
+        value = self._values(total, burden, block)
+        target = np.array([c.target for c in self.checks])
+        ratio = np.log(np.maximum(value, SMALLEST_MG_PER_L) / target)
+        bad = ~block.reached
+        ratio[bad] = UNREACHED_RATIO
+        width = 1 + len(self.plant.names)
+        n, count = value.shape
+        judged = Judged(
+            block, value, ratio, residual, carried, floor, burden,
+            np.zeros((n, count, width if slopes else 0)), np.zeros((n, width)),
+            np.zeros((n, width)), np.zeros((n, solids.shape[1], width if slopes else 0)),
+            np.zeros((n, block.effluent.shape[1], width if slopes else 0)),
+        )  # fmt: skip
+        if slopes:
+            self._slopes(points, rows, judged, total, held, share, share_by_mass)
+        return judged
+
+    def _share(self, solids: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Share of the metals' solids that is carried over, and its change with their mass."""
+        separator = self.plant.treatment.separator
+        mass = solids @ self.solid_mass + self.feed_particle_mass
+        most = 1.0 - separator.capture_fraction
+        by_tss = separator.tss_mg_per_l / np.maximum(mass, 1e-12)
+        slope = np.where(by_tss < most, -by_tss / np.maximum(mass, 1e-12), 0.0)
+        return np.minimum(by_tss, most), slope
+
+    def _floor_values(self, solids: FloatArray) -> FloatArray:
+        """Practical floor of each metal by the family of the solid that holds most of it."""
+        n = solids.shape[0]
+        result = np.zeros((n, len(self.metals)))
+        families = sorted(set(self.families))
+        member = np.array([[f == name for f in self.families] for name in families], dtype=float)
+        feed = self.plant.totals @ self.weights.T + self.particles
+        for j in range(len(self.metals)):
+            floors = self.floors[j]
+            if not floors:
+                continue
+            held = (solids * self.solid_metal[:, j]) @ member.T
+            worst = max(floors.values())
+            by_family = np.array([floors.get(name, worst) for name in families])
+            chosen = by_family[np.argmax(held, axis=1)] if families else np.full(n, worst)
+            result[:, j] = np.minimum(np.where(held.sum(axis=1) > 0, chosen, worst), feed[j])
+        return result
+
+    def _burden(self, effluent: FloatArray) -> dict[str, FloatArray]:
+        from chemistry.burden import water_burden
+
+        return water_burden(effluent, self.plant.system)
+
+    def _values(self, total: FloatArray, burden: dict[str, FloatArray], block: Block) -> FloatArray:
+        columns = []
+        gas = iter(self._gas_ppm(block))
+        for check in self.checks:
+            if check.metals:
+                columns.append(total[:, list(check.metals)].sum(axis=1))
+            elif check.burden:
+                columns.append(np.maximum(burden[check.burden], 0.0))
+            elif check.averaging == RULE:
+                columns.append(next(gas))
+            else:
+                columns.append(np.zeros(total.shape[0]))
+        return np.stack(columns, axis=1) if columns else np.zeros((total.shape[0], 0))
+
+    def _gas_ppm(self, block: Block) -> list[FloatArray]:
+        tank = 1e6 * block.state.partial_pressure_atm(H2S_SPECIES)
+        trimmed = tank.copy()
+        if block.trim_state is not None:
+            trimmed[block.trimmed] = 1e6 * block.trim_state.partial_pressure_atm(H2S_SPECIES)
+        return [tank, trimmed]
+
+    # -- slopes -------------------------------------------------------------------------------------
+
+    def _directions(self, points: Points, rows: Rows, block: Block) -> FloatArray:
+        """Change of totals per mg/L of the controller and of every paced reagent."""
+        plant = self.plant
+        n, count = block.rows.size, len(plant.names)
+        ways = np.zeros((n, 1 + count, len(plant.system.components)))
+        controller = points.controller[rows.point[block.rows]]
+        ways[:, 0] = np.where(
+            (controller >= 0)[:, None], plant.reacting[np.maximum(controller, 0)], 0.0
+        )
+        factor = rows.factor[block.rows]
+        ways[:, 1:] = factor[:, :, None] * plant.reacting[None]
+        if block.end in (VENTED_FORMED, VENTED_HELD):
+            ways[:, 1:] -= block.lost_slope[None, :, None] * self.vent_co2
+        return ways
+
+    def _slopes(
+        self, points: Points, rows: Rows, judged: Judged, total: FloatArray, held: FloatArray,
+        share: FloatArray, share_by_mass: FloatArray,
+    ) -> None:  # fmt: skip
+        block = judged.block
+        used = np.flatnonzero((points.doses > 0.0).any(axis=0))
+        columns = np.concatenate([[0], 1 + used])
+        ways = self._directions(points, rows, block)[:, columns]
+        free = block.state.sensitivity(ways)
+        controlled = block.held
+        by_dose = np.where(np.abs(free.ph[:, 0]) < 1e-14, np.inf, free.ph[:, 0])
+        dose = np.where(controlled[:, None], -free.ph / by_dose[:, None], 0.0)
+        dose[:, 0] = np.where(controlled, 1.0 / by_dose, 0.0)
+
+        def hold(array: FloatArray) -> FloatArray:
+            """Slopes at the held pH: column 0 per unit of set point, others per mg/L."""
+            first = array[:, :, 0]
+            moved = array + first[:, :, None] * dose[:, None, :]
+            moved[:, :, 0] = first * dose[:, None, 0]
+            return moved
+
+        liquid = hold(free.dissolved)
+        solids = hold(free.solids)
+        activity = hold(np.swapaxes(free.ln_activity, 1, 2))
+        trim, effluent, trim_activity = self._trim_slopes(points, rows, block, liquid, activity)
+        metal = np.einsum("mc,nck->nmk", self.weights, liquid)
+        mass = np.einsum("p,npk->nk", self.solid_mass, solids)
+        held_slope = np.einsum("pm,npk->nmk", self.solid_metal, solids)
+        metal = metal + share[:, None, None] * held_slope
+        metal += (held[:, :, None] * share_by_mass[:, None, None]) * mass[:, None, :]
+        free_of_floor = (judged.residual + judged.carried) >= judged.floor
+        metal = np.where(free_of_floor[:, :, None], metal, 0.0)
+        slope = self._check_slopes(judged, total, metal, effluent, activity, trim_activity)
+        slope[~block.reached] = 0.0
+        judged.slope[:, :, columns] = slope
+        judged.dose_slope[:, columns] = dose
+        judged.trim_slope[:, columns] = trim
+        judged.solid_slope[:, :, columns] = solids
+        judged.effluent_slope[:, :, columns] = effluent
+
+    def burden_charge(
+        self, judged: Judged, row: int, charges: Mapping[str, float]
+    ) -> tuple[FloatArray, float]:
+        """Charge per litre of a row's effluent, and its slope. [mg/L x currency per kg]"""
+        slope = np.zeros(judged.effluent_slope.shape[2])
+        value = 0.0
+        for name, rate in charges.items():
+            here = float(judged.burden[name][row])
+            if here > 0.0:
+                value += rate * here
+                one = self._burden_slope(name, judged, judged.effluent_slope)
+                slope = slope + rate * one[row]
+        return slope, value
+
+    def _trim_slopes(
+        self, points: Points, rows: Rows, block: Block, liquid: FloatArray, activity: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        n, count, k = liquid.shape
+        trim = np.zeros((n, k))
+        effluent = liquid.copy()
+        trim_activity = activity.copy()
+        if block.trim_state is None or not block.trimmed.any():
+            return trim, effluent, trim_activity
+        some = block.trimmed
+        vector = self.plant.reacting[points.trim[rows.point[block.rows[some]]]]
+        ways = np.concatenate([np.swapaxes(liquid[some], 1, 2), vector[:, None, :]], axis=1)
+        free = block.trim_state.sensitivity(ways)
+        last = np.where(np.abs(free.ph[:, -1]) < 1e-14, np.inf, free.ph[:, -1])
+        trim[some] = -free.ph[:, :-1] / last[:, None]
+        effluent[some] += vector[:, :, None] * trim[some][:, None, :]
+        moved = np.swapaxes(free.ln_activity, 1, 2)
+        trim_activity[some] = moved[:, :, :-1] + moved[:, :, -1:] * trim[some][:, None, :]
+        return trim, effluent, trim_activity
+
+    def _check_slopes(
+        self, judged: Judged, total: FloatArray, metal: FloatArray, effluent: FloatArray,
+        activity: FloatArray, trim_activity: FloatArray,
+    ) -> FloatArray:  # fmt: skip
+        gas = iter((activity, trim_activity))
+        columns = []
+        for number, check in enumerate(self.checks):
+            value = np.maximum(judged.value[:, number], SMALLEST_MG_PER_L)[:, None]
+            if check.metals:
+                columns.append(metal[:, list(check.metals)].sum(axis=1) / value)
+            elif check.burden:
+                columns.append(self._burden_slope(check.burden, judged, effluent) / value)
+            elif check.averaging == RULE:
+                columns.append(self._gas_slope(next(gas)))
+            else:
+                columns.append(np.zeros((total.shape[0], effluent.shape[2])))
+        if not columns:
+            return np.zeros((total.shape[0], 0, effluent.shape[2]))
+        return np.stack(columns, axis=1)
+
+    def _burden_slope(self, burden: str, judged: Judged, effluent: FloatArray) -> FloatArray:
+        slope = np.einsum("c,nck->nk", self.burden_weights[burden], effluent)
+        if burden == "TDS":
+            proton = self.plant.system.index["H+"]
+            acid = judged.block.effluent[:, proton] > 0.0
+            weight = np.where(acid, 1008.0, -17007.0)
+            slope = slope + weight[:, None] * effluent[:, proton]
+        return slope
+
+    def _gas_slope(self, activity: FloatArray) -> FloatArray:
+        system = self.plant.system
+        if H2S_SPECIES not in system.species_names:
+            return np.zeros((activity.shape[0], activity.shape[2]))
+        k = system.species_names.index(H2S_SPECIES)
+        return np.einsum("c,nck->nk", system.formation[k], activity)
+
+
+def _parts(metal: str) -> tuple[str, ...]:
+    if metal in SUMMED_STATES:
+        return SUMMED_STATES[metal]
+    known = ANALYTES.get(metal)
+    return (metal,) if known is not None and known.is_metal else ()
