@@ -6,7 +6,7 @@ Owns the frozen types and the arrays built from them; finds no equilibrium itsel
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -160,7 +160,6 @@ class System:
     solids: tuple[Solid, ...] = ()
     temperature_degc: float = 25.0
     activity: str = "auto"
-    sources: Mapping[str, str] = field(default_factory=dict)
 
     def __init__(
         self,

@@ -28,6 +28,8 @@ DIRECT_TRIES = (1, 5)  # rounds after which the direct Newton method is tried
 DIRECT_NEWTON_ROUNDS = 12
 DIRECT_EXCHANGES = 10
 LARGEST_DOSE_MOL_PER_L = 2.0
+TRACE_DOSE_MOL_PER_L = 1e-9  # where the search begins: the reagent's components are present
+PROBE_MOL_PER_L = 1e-3
 BALANCE_TOLERANCE = 1e-12
 
 
@@ -134,6 +136,7 @@ class _Work:
         self.dose = np.zeros(n)
         self.reached = np.zeros(n, dtype=bool)
         self.hopeless = np.zeros(n, dtype=bool)
+        self.orient = np.zeros(n)
         self.iterate = StartValues(
             totals, np.zeros((n, count)), np.zeros(n), np.zeros((n, solids)),
             np.zeros((n, solids), dtype=bool),
@@ -188,7 +191,8 @@ class _Work:
         others = self.vectors.copy()
         others[:, self.proton] = 0.0
         low, high = np.zeros(self.ph.size), np.full(self.ph.size, np.inf)
-        self.dose[self.open_rows] = 0.0
+        self._orient()
+        self.dose[self.open_rows] = TRACE_DOSE_MOL_PER_L
         warm: EquilibriumState | None = None
         previous = self.open_rows
         for turn in range(DOSE_ROUNDS):
@@ -206,6 +210,25 @@ class _Work:
             self._step(rows, state, others, low, high)
             warm, previous = state, rows
 
+    def _orient(self) -> None:
+        """Which way a large dose moves the proton balance: up for alkali, down for acid.
+
+        Read off the reagent alone at each held pH, where no solid hides its nature.
+        """
+        rows = self.open_rows
+        if not rows.size:
+            return
+        bare = self.system.narrowed(solids=())
+        others = self.vectors[rows].copy()
+        others[:, self.proton] = 0.0
+        ph = np.concatenate([self.ph[rows], self.ph[rows]])
+        amounts = np.concatenate([PROBE_MOL_PER_L * others, 2.0 * PROBE_MOL_PER_L * others])
+        held = equilibrate(bare, amounts, ph, on_failure="flag").totals[:, self.proton]
+        taken = (held[rows.size :] - held[: rows.size]) / PROBE_MOL_PER_L
+        effect = taken - self.vectors[rows, self.proton]
+        self.orient[rows] = np.where(effect < 0.0, -1.0, 1.0)
+        self.hopeless[rows] |= np.abs(effect) < 1e-6
+
     def _step(
         self, rows: IntArray, state: EquilibriumState, others: FloatArray, low: FloatArray,
         high: FloatArray,
@@ -215,11 +238,13 @@ class _Work:
         miss = state.totals[:, self.proton] - self.totals[rows, self.proton] - dose * per_mole
         _, scale = state.kernel.amounts(state.species_mol_per_l, state.solids_mol_per_l)
         slope = state.sensitivity(others[rows][:, None, :]).titrant[:, 0] - per_mole
+        miss, slope = miss * self.orient[rows], slope * self.orient[rows]
+        beyond = (dose <= TRACE_DOSE_MOL_PER_L) & (miss >= 0.0)  # the pH lies the other way
         low[rows] = np.where(miss < 0, np.maximum(low[rows], dose), low[rows])
         high[rows] = np.where(miss > 0, np.minimum(high[rows], dose), high[rows])
         step = np.where(np.abs(slope) > 1e-9, -miss / np.where(slope == 0, 1.0, slope), np.inf)
         new = _inside(dose + step, dose, low[rows], high[rows], miss)
-        lost = (new <= 0.0) & (miss >= 0.0) | (new > LARGEST_DOSE_MOL_PER_L) | ~state.converged
+        lost = beyond | (new > LARGEST_DOSE_MOL_PER_L) | ~state.converged
         same = np.abs(new - dose) <= 1e-15 * np.maximum(np.abs(new), 1e-9)
         size = np.abs(miss) / np.maximum(scale[:, self.proton], 1e-300)
         near = (size <= BALANCE_TOLERANCE) | (same & (size < 1e-9))
@@ -243,9 +268,7 @@ def _inside(
     outside = (new <= low) | (new >= ceiling)
     middle = np.where(np.isfinite(high), 0.5 * (low + high), ceiling)
     bisected = np.where(miss < 0, middle, 0.5 * (low + np.minimum(high, old)))
-    keep_zero = (miss > 0) & (low == 0.0) & (old == 0.0)
-    result = np.where(outside & (np.abs(new - old) > 0), bisected, new)
-    return np.where(keep_zero, np.minimum(new, 0.0), result)
+    return np.where(outside & (np.abs(new - old) > 0), bisected, new)
 
 
 def at_held_ph(free: Sensitivity, titrant_column: int) -> tuple[Sensitivity, FloatArray]:

@@ -103,7 +103,7 @@ class Judge:
             self.vent_co2[plant.system.index["CO3-2"]] = 1.0
             self.vent_co2[plant.system.index["H+"]] = 2.0
 
-    # -- compile -----------------------------------------------------------------------------------
+    # -- compile -------------------------------------------------------------------------------
 
     def _weights(self, metal: str) -> FloatArray:
         weights = np.zeros(len(self.plant.system.components))
@@ -215,7 +215,7 @@ class Judge:
             known = [site.variability.get("default", (4.0, 2.0))]
         return max(k[0] for k in known), max(k[1] for k in known)
 
-    # -- judge --------------------------------------------------------------------------------------
+    # -- judge ---------------------------------------------------------------------------------
 
     def judge(self, points: Points, rows: Rows, block: Block, *, slopes: bool = False) -> Judged:
         """Values, ratios and (if ``slopes``) their derivatives for one block of states."""
@@ -298,7 +298,7 @@ class Judge:
             trimmed[block.trimmed] = 1e6 * block.trim_state.partial_pressure_atm(H2S_SPECIES)
         return [tank, trimmed]
 
-    # -- slopes -------------------------------------------------------------------------------------
+    # -- slopes --------------------------------------------------------------------------------
 
     def _directions(self, points: Points, rows: Rows, block: Block) -> FloatArray:
         """Change of totals per mg/L of the controller and of every paced reagent."""
@@ -372,7 +372,7 @@ class Judge:
     def _trim_slopes(
         self, points: Points, rows: Rows, block: Block, liquid: FloatArray, activity: FloatArray
     ) -> tuple[FloatArray, FloatArray, FloatArray]:
-        n, count, k = liquid.shape
+        n, _, k = liquid.shape
         trim = np.zeros((n, k))
         effluent = liquid.copy()
         trim_activity = activity.copy()

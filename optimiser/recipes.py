@@ -65,11 +65,11 @@ def recipes(plant: Plant, size: int) -> list[Recipe]:
     """All recipes of one size that the site allows, required reagents included."""
     allowed = [plant.index[name] for name in plant.treatment.reagents]
     required = {plant.index[name] for name in plant.treatment.required}
-    found = []
-    for chosen in combinations(allowed, size):
-        if required <= set(chosen):
-            found.append(make_recipe(plant, chosen))
-    return found
+    return [
+        make_recipe(plant, chosen)
+        for chosen in combinations(allowed, size)
+        if required <= set(chosen)
+    ]
 
 
 def set_point_bounds(evaluator: Evaluator) -> Bounds:
