@@ -10,7 +10,7 @@ import pytest
 
 from catalogs.entries import parse_number
 from chemistry.feed import feed_water
-from optimiser import starter
+from optimiser import plan, starter
 from optimiser.site_reader import load_site
 from optimiser.starter import starter_texts, write_starter
 
@@ -116,3 +116,11 @@ def test_a_missing_parent_is_an_error_and_not_made(tmp_path: Path) -> None:
 def test_two_starters_are_the_same_bytes(tmp_path: Path) -> None:
     first, second = write_starter(tmp_path / "a"), write_starter(tmp_path / "b")
     assert [p.read_bytes() for p in first] == [p.read_bytes() for p in second]
+
+
+@pytest.mark.slow
+def test_the_starter_has_a_plan_that_meets_every_limit(tmp_path: Path) -> None:
+    found = plan(load_site(write_starter(tmp_path / "plant")[0]))
+    assert found.cost["total"] > 0.0
+    assert found.limits["meets"].all()
+    assert len(found.runners_up) >= 2
