@@ -10,8 +10,8 @@ from importlib import import_module
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from optimiser.errors import NoPlan as NoPlan
     from optimiser.assessment import assess as assess
+    from optimiser.errors import NoPlan as NoPlan
     from optimiser.planning import plan as plan
     from optimiser.purchasing import purchase as purchase
     from optimiser.site_reader import load_site as load_site

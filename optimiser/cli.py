@@ -192,9 +192,9 @@ def _assess(options: argparse.Namespace) -> int:
     if not doses:
         _say("no doses: give --dose REAGENT=MG_PER_L, or write them under `today` in the site file")
         return BAD_INPUT
-    unknown = _unknown_reagents(doses, site)
-    if unknown:
-        _say(unknown)
+    problem = _dose_problem(doses, site)
+    if problem:
+        _say(problem)
         return BAD_INPUT
     found = optimiser.assess(site, doses, trim=options.trim)
     _print(found.to_dict(), options.json, assessment_text)
@@ -208,7 +208,7 @@ def _given_doses(pairs: Sequence[tuple[str, float]]) -> dict[str, float]:
     return doses
 
 
-def _unknown_reagents(doses: Mapping[str, float], site: Site) -> str:
+def _dose_problem(doses: Mapping[str, float], site: Site) -> str:
     for key in doses:
         reagent, at, stage = key.partition("@")
         if reagent not in site.reagents:
@@ -217,7 +217,8 @@ def _unknown_reagents(doses: Mapping[str, float], site: Site) -> str:
             return f"--dose {key}: unknown reagent; {hint or 'known: ' + ', '.join(site.reagents)}"
         if at and stage != "trim":
             return f"--dose {key}: unknown stage {stage!r}; a dose is REAGENT or REAGENT@trim"
-    return ""
+    trims = [key for key in doses if "@" in key]
+    return f"--dose {' '.join(trims)}: name one trim reagent" if len(trims) > 1 else ""
 
 
 def _curves(options: argparse.Namespace) -> int:

@@ -12,6 +12,7 @@ from optimiser.tables import INDENT, PLAIN, Ink, bullets, given, money, number, 
 
 Data = Mapping[str, Any]
 _DOSE_DIGITS = 4
+_MISSED = "MISSED"
 
 
 def plan_text(data: Data, ink: Ink = PLAIN) -> str:
@@ -34,7 +35,7 @@ def plan_text(data: Data, ink: Ink = PLAIN) -> str:
 def assessment_text(data: Data, ink: Ink = PLAIN) -> str:
     """Write what given doses do and cost, in the same order as a plan."""
     cost = money(data["cost"]["total"])
-    verdict = "meet every limit" if data["compliant"] else "do NOT meet every limit"
+    verdict = "comply" if data["compliant"] else "do NOT comply"
     title = (
         f"{data['site']['name']}: these doses {verdict} and cost "
         f"{data['site']['currency']} {cost} a year"
@@ -72,35 +73,32 @@ def _summary(data: Data, ink: Ink) -> list[str]:
         f"year; the analysis stands for the {site['stands_for']}; "
         f"{given(site['temperature_degc'])} C; activity model: {site['activity_model']}."
     )
-    missed = [limit for limit in data["limits"] if not limit["meets"]]
-    if missed:
-        names = ", ".join(_limit_name(limit) for limit in missed)
-        lines += [ink.bad(line) for line in paragraph(f"Missed: {names}.")]
-    elif data["limits"]:
+    missed = [_limit_name(limit) for limit in data["limits"] if not limit["meets"]]
+    if data["limits"] and not missed:
         tight = min(data["limits"], key=lambda limit: float(limit["margin_percent"]))
         lines += paragraph(
             f"Every limit is met. The tightest is {_limit_name(tight)}: "
-            f"{number(tight['predicted'])} {tight['unit']} predicted, target "
-            f"{number(tight['target'])}, {_percent(tight['margin_percent'])} to spare."
+            f"{number(tight['predicted'])} {tight['unit']} predicted against a target of "
+            f"{number(tight['target'])} and a limit of {given(tight['limit'])}."
         )
+    failures = [f"Limits missed: {', '.join(missed)}."] if missed else []
     if not data["ph"]["meets"]:
-        lines += [ink.bad(line) for line in paragraph(f"Missed: {_ph_sentence(data['ph'])}")]
-    return lines
+        failures.append(f"Window missed: {_ph_sentence(data['ph'])}")
+    failures += [f"Rule missed: {rule.rstrip('.')}." for rule in data["rules_missed"]]
+    return lines + [ink.bad(line) for text in failures for line in paragraph(text)]
 
 
 def _set_points(data: Data) -> list[str]:
     names = _names(data)
     lines = []
     for point in data["set_points"]:
-        led = (
-            f"the pH controller drives {names.get(point['controller'], point['controller'])}"
-            if point["controller"]
-            else "no pH controller: the pH follows from the doses"
-        )
-        lines += paragraph(
-            f"{str(point['stage']).capitalize()}: pH {point['ph_set_point']:.2f}, alarm below "
-            f"{point['ph_alarm_low']:.2f} and above {point['ph_alarm_high']:.2f}; {led}."
-        )
+        stage, ph = str(point["stage"]).capitalize(), f"{point['ph_set_point']:.2f}"
+        alarms = f"alarm below {point['ph_alarm_low']:.2f} and above {point['ph_alarm_high']:.2f}"
+        if point["controller"]:
+            driven = names.get(point["controller"], point["controller"])
+            lines += paragraph(f"{stage}: pH {ph}, {alarms}; the pH controller drives {driven}.")
+        else:
+            lines += paragraph(f"{stage}: no pH controller; the doses bring pH {ph}, {alarms}.")
     for feed in data["feeding"]:
         if feed["paced_by"] == "flow":
             lines += paragraph(
@@ -179,38 +177,37 @@ def _limits(data: Data, ink: Ink) -> list[str]:
             number(limit["variability_factor"], 2),
             number(limit["predicted"]),
             number(limit["target"]),
-            _percent(limit["margin_percent"]),
-            "met" if limit["meets"] else "MISSED",
+            _percent(limit["margin_percent"]) if limit["meets"] else _MISSED,
         ]
         for limit in data["limits"]
     ]
     if not rows:
         return paragraph("No limit applies.")
     headers = ["what", "period", "limit", "residual", "carry-\nover", "floor", "factor",
-               "predicted", "target", "to\nspare", ""]  # fmt: skip
-    lines = table(headers, rows, text_columns=(0, 1, 10))
+               "predicted", "target", "below\nlimit"]  # fmt: skip
+    lines = table(headers, rows, text_columns=(0, 1))
     lines = [_verdict_colour(line, ink) for line in lines]
     lines += paragraph(
         "Residual: what stays dissolved. Carry-over: metal in solids that slip past the separator. "
         "Floor: the least value promised without a jar test of this water. Factor: from the value "
         "of the analysis to that of the period. Target: the limit less its design margin."
     )
-    lines += _grouped("Worst case", data["limits"], "worst_state")
+    lines += _grouped("Worst case", data["limits"], "worst_state", plain=True)
     lines += _grouped("Source of the limit", data["limits"], "source")
     return lines
 
 
 def _verdict_colour(line: str, ink: Ink) -> str:
-    if line.endswith("MISSED"):
-        return line.removesuffix("MISSED") + ink.bad("MISSED")
-    return line.removesuffix("met") + ink.good("met") if line.endswith(" met") else line
+    if line.endswith(_MISSED):
+        return line.removesuffix(_MISSED) + ink.bad(_MISSED)
+    return line
 
 
-def _grouped(title: str, limits: Sequence[Data], key: str) -> list[str]:
-    """One line per different text, naming the limits that share it."""
+def _grouped(title: str, limits: Sequence[Data], key: str, *, plain: bool = False) -> list[str]:
+    """One line per different text, naming the limits that share it; ``plain`` ids as words."""
     groups: dict[str, list[str]] = {}
     for limit in limits:
-        text = str(limit[key] or "")
+        text = str(limit[key] or "").replace("_", " " if plain else "_")
         if text:
             names = groups.setdefault(text, [])
             name = str(limit["parameter"])
@@ -259,6 +256,7 @@ def _burden(data: Data) -> list[str]:
             number(row["effluent_mg_per_l"]),
         ]
         for name, row in data["burden"].items()
+        if any(row.values())
     ]
     return table(["what", "feed", "added", "effluent"], rows) if rows else []
 
@@ -302,12 +300,13 @@ def _proof(data: Data) -> list[str]:
         count = proof.get("states_examined")
         states = f" in {_count(proof, 'states_examined', 'equilibrium state')}" if count else ""
         lines += paragraph(f"Verified{states}; nothing was searched for.")
-    found = proof["certificate"]
+    if proof.get("stopped_early"):
+        lines += paragraph("The time limit ended the search before it was through.")
+    found = {name: f"{value:.0e}" if value else "0" for name, value in proof["certificate"].items()}
     lines += paragraph(
-        f"Certificate, worst over the states of this result: mass balance "
-        f"{found['mass_balance']:.0e}, supersaturation {found['supersaturation']:.0e} and distance "
-        f"of present solids from saturation {found['presence']:.0e} (log10 units), charge "
-        f"{found['charge']:.0e}."
+        f"Certificate, worst over the states of this result: mass balance {found['mass_balance']}, "
+        f"supersaturation {found['supersaturation']} and distance of present solids from "
+        f"saturation {found['presence']} (log10 units), charge {found['charge']}."
     )
     seconds = ", ".join(f"{name} {value:.1f} s" for name, value in proof["seconds"].items())
     return lines + (paragraph(f"Time: {seconds}.") if seconds else [])

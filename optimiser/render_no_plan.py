@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -19,8 +20,15 @@ def no_plan_data(site_name: str, error: NoPlan) -> dict[str, Any]:
         "compliant": False,
         "message": message,
         "reasons": list(error.reasons),
-        "clashes": [dict(clash) for clash in getattr(error, "clashes", ())],
+        "clashes": [
+            {name: _finite_or_none(value) for name, value in clash.items()}
+            for clash in error.clashes
+        ],
     }
+
+
+def _finite_or_none(value: object) -> object:
+    return None if isinstance(value, float) and not math.isfinite(value) else value
 
 
 def no_plan_text(data: Data, ink: Ink = PLAIN) -> str:
@@ -29,15 +37,16 @@ def no_plan_text(data: Data, ink: Ink = PLAIN) -> str:
     rows = [
         [
             str(clash["limit"]),
-            number(clash["lowest_reachable"]),
             number(clash["target"]),
+            number(clash["lowest_reachable"]),
+            number(clash["best_compromise"]),
             str(clash["stopped_by"]),
         ]
         for clash in data["clashes"]
     ]
     if rows:
-        headers = ["limit", "lowest\nreachable", "target", "what stops it"]
-        lines += ["", *table(headers, rows, text_columns=(0, 3))]
+        headers = ["limit", "target", "lowest\nreachable", "nearest\nmiss", "what stops it"]
+        lines += ["", *table(headers, rows, text_columns=(0, 4))]
     if data["reasons"]:
         lines += ["", *bullets(data["reasons"])]
     lines += ["", *paragraph(
@@ -48,4 +57,5 @@ def no_plan_text(data: Data, ink: Ink = PLAIN) -> str:
 
 
 def _sentence(text: str) -> str:
-    return f"{text[0].upper()}{text[1:].rstrip(':.')}." if text else text
+    text = text.removeprefix("no plan: ").rstrip(":.")
+    return f"{text[:1].upper()}{text[1:]}."

@@ -76,14 +76,14 @@ def given(value: float) -> str:
 
 
 def money(value: float) -> str:
-    """Write an amount of money: whole units, two decimals below ten.
+    """Write an amount of money: whole units, two decimals below one.
 
     Examples
     --------
-    >>> [money(x) for x in (48213.4, 812.0, 3.456, 0.0)]
-    ['48,213', '812', '3.46', '0']
+    >>> [money(x) for x in (48213.4, 812.0, 0.456, 0.0)]
+    ['48,213', '812', '0.46', '0']
     """
-    return f"{value:,.2f}" if 0.0 < abs(value) < 10.0 else f"{value:,.0f}"
+    return f"{value:,.2f}" if 0.0 < abs(value) < 1.0 else f"{value:,.0f}"
 
 
 def paragraph(text: str, *, indent: str = INDENT, first: str | None = None) -> list[str]:

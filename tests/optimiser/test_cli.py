@@ -260,10 +260,18 @@ def test_an_unknown_reagent_is_refused_with_a_suggestion(
     assert said in streams.err
 
 
+def test_two_trim_reagents_are_refused(capsys: pytest.CaptureFixture[str]) -> None:
+    doses = ["sulfuric_acid@trim=5", "hydrochloric_acid@trim=5"]
+    assert main(["assess", str(DEMO), "--dose", *doses]) == 2
+    streams = capsys.readouterr()
+    assert streams.out == ""
+    assert "name one trim reagent" in streams.err
+
+
 def test_no_dose_at_all_meets_no_limit() -> None:
     done = run("assess", DEMO, "--dose", "caustic_soda=0", "--trim", "none")
     assert done.returncode == 3
-    assert "do NOT meet every limit" in done.stdout
+    assert "these doses do NOT comply" in done.stdout
     assert "MISSED" in done.stdout
 
 

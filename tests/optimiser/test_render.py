@@ -7,8 +7,9 @@ from typing import Any
 
 import pytest
 
+from optimiser.errors import NoPlan
 from optimiser.render import assessment_text, plan_text
-from optimiser.render_no_plan import no_plan_text
+from optimiser.render_no_plan import no_plan_data, no_plan_text
 from optimiser.tables import WIDTH, Ink, number, table
 
 
@@ -110,6 +111,7 @@ PLAN: dict[str, Any] = {
         _limit("Cu + Ni + Zn", "daily", 1.9, target=2.4, floor=None),
         _limit("SO4", "daily", 1123.0, target=1200.0, residual=None, carry_over=None, floor=None),
     ],
+    "rules_missed": [],
     "ph": {"low": 6.5, "high": 9.5, "lowest": 8.21, "highest": 8.77, "meets": True},
     "water": [
         {
@@ -176,8 +178,8 @@ def test_headline_states_cost_and_the_tightest_limit(data: dict[str, Any]) -> No
     assert first == "Alder Street finishing shop: cheapest plan found, EUR 27,025 a year"
     assert second.startswith("  120 m3/d on 250 days a year; the analysis stands for the average")
     assert third == (
-        "  Every limit is met. The tightest is Ni (monthly): 0.398 mg/L predicted, target 0.400, "
-        "0.4 % to"
+        "  Every limit is met. The tightest is Ni (monthly): 0.398 mg/L predicted against a target "
+        "of 0.400"
     )
 
 
@@ -214,7 +216,7 @@ def test_operator_reads_set_points_and_flow_paced_doses_with_alarms(data: dict[s
 
 def test_a_tank_without_a_controller_says_so(data: dict[str, Any]) -> None:
     data["set_points"][0]["controller"] = None
-    assert "no pH controller: the pH follows from the doses" in plan_text(data)
+    assert "  Tank: no pH controller; the doses bring pH 9.20, alarm below 8.95" in plan_text(data)
 
 
 def test_every_dose_offer_and_cost_of_the_data_is_printed(data: dict[str, Any]) -> None:
@@ -234,7 +236,7 @@ def test_residual_and_carry_over_stand_apart(data: dict[str, Any]) -> None:
     row = next(line for line in plan_text(data).splitlines() if line.startswith("  Cu  "))
     assert row.split() == [
         "Cu", "daily", "0.5", "mg/L", "0.0610", "0.0312", "0.0300", "3.3", "0.304", "0.400",
-        "24", "%", "met",
+        "24", "%",
     ]  # fmt: skip
 
 
@@ -250,19 +252,23 @@ def test_an_assessment_that_fails_names_what_is_missed(data: dict[str, Any]) -> 
     data["compliant"] = False
     lines = assessment_text(data).splitlines()
     assert lines[0] == (
-        "Alder Street finishing shop: these doses do NOT meet every limit and cost "
-        "EUR 27,025 a year"
+        "Alder Street finishing shop: these doses do NOT comply and cost EUR 27,025 a year"
     )
-    assert "  Missed: Cu (daily)." in lines
+    assert "  Limits missed: Cu (daily)." in lines
     assert any(line.startswith("  Cu ") and line.endswith("MISSED") for line in lines)
 
 
 def test_a_missed_ph_window_is_named_at_the_top(data: dict[str, Any]) -> None:
     data["ph"].update(highest=9.71, meets=False)
     data["compliant"] = False
-    assert "Missed: pH at discharge 8.21 to 9.71" in "\n".join(
-        assessment_text(data).splitlines()[:5]
-    )
+    top = "\n".join(assessment_text(data).splitlines()[:6])
+    assert "Window missed: pH at discharge 8.21 to 9.71" in top
+
+
+def test_a_broken_safety_rule_is_named_at_the_top(data: dict[str, Any]) -> None:
+    data["rules_missed"] = ["sulfide dosed below pH 8.5"]
+    data["compliant"] = False
+    assert "  Rule missed: sulfide dosed below pH 8.5." in assessment_text(data).splitlines()[:6]
 
 
 def test_a_search_is_not_called_a_bound(data: dict[str, Any]) -> None:
@@ -272,10 +278,24 @@ def test_a_search_is_not_called_a_bound(data: dict[str, Any]) -> None:
     assert "gap" not in text
 
 
+def test_a_search_that_ran_out_of_time_says_so(data: dict[str, Any]) -> None:
+    said = "The time limit ended the search before it was through."
+    assert said not in plan_text(data)
+    data["proof"]["stopped_early"] = True
+    assert said in plan_text(data)
+
+
+def test_a_value_that_no_state_reaches_is_no_number_in_json() -> None:
+    clash = {"limit": "Ni", "lowest_reachable": float("inf"), "target": 0.2}
+    (kept,) = no_plan_data("Alder Street", NoPlan("no plan", clashes=[clash]))["clashes"]
+    assert kept == {"limit": "Ni", "lowest_reachable": None, "target": 0.2}
+
+
 def test_lines_stay_within_the_width(data: dict[str, Any]) -> None:
     data["cautions"] = ["Never share a bund, sump or drain with acid. " * 6]
     data["purchases"][0]["supplier"] = "The United Hartlebrook Alkali and Washing Soda Works " * 2
     data["feeding"][0]["product"] = "caustic soda 50 % in returnable containers of 1000 litres " * 2
+    data["limits"][0].update(meets=False, margin_percent=-2109.0, averaging="daily load")
     data["limits"][0]["parameter"] = " + ".join(("Cu", "Ni", "Zn", "Pb", "Cd", "Ag", "Cr(III)"))
     assert max(len(line) for line in plan_text(data).splitlines()) <= WIDTH
 
@@ -297,6 +317,7 @@ def test_no_plan_says_how_low_each_limit_can_go_and_why() -> None:
             {
                 "limit": "Ni (monthly)",
                 "lowest_reachable": 0.31,
+                "best_compromise": 0.35,
                 "target": 0.24,
                 "stopped_by": "carry-over at 20 mg/L of suspended solids",
             }
@@ -306,8 +327,8 @@ def test_no_plan_says_how_low_each_limit_can_go_and_why() -> None:
     assert text.startswith("Alder Street: no plan\n  No doses meet every limit.\n")
     assert "  - Ni (monthly) is stopped by carry-over\n" in text
     row = next(line for line in text.splitlines() if line.startswith("  Ni (monthly)"))
-    assert row.split(maxsplit=4) == [
-        "Ni", "(monthly)", "0.310", "0.240", "carry-over at 20 mg/L of suspended solids",
+    assert row.split(maxsplit=5) == [
+        "Ni", "(monthly)", "0.240", "0.310", "0.350", "carry-over at 20 mg/L of suspended solids",
     ]  # fmt: skip
 
 
