@@ -88,14 +88,15 @@ class PurchasingBlock:
 
     def _bought(self, reagent: str, values: Mapping[str, float]) -> dict[str, float]:
         """Tonnes by offer, cheapest delivered compound first, without a solver's rounding."""
+        mine = [key for key, offer in self.offers.items() if offer.reagent == reagent]
         bought = {}
-        for key, columns in self.columns.items():
+        for key in sorted(mine, key=lambda key: _delivered_per_kg(self.offers[key])):
+            columns = self.columns[key]
             tonnes = values[columns.bought]
-            if self.offers[key].reagent == reagent and tonnes > _LEAST_BUY_T:
+            is_used = tonnes > _LEAST_BUY_T if columns.used is None else values[columns.used] > 0.5
+            if is_used:
                 bought[key] = max(tonnes, self.offers[key].least_order_t)
-        return dict(
-            sorted(bought.items(), key=lambda item: _delivered_per_kg(self.offers[item[0]]))
-        )
+        return bought
 
     def _covering(self, bought: dict[str, float], demand_kg: float) -> float:
         """Add to the cheapest offer what a solver's tolerance left short; return the demand."""

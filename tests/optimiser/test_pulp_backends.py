@@ -15,13 +15,20 @@ from pathlib import Path
 
 import pytest
 
+from optimiser import pulp_backends
 from optimiser.backend import Backend, SolveRequest
 from optimiser.errors import SolverFault, SolverUnavailable
 from optimiser.linear_model import Expression, Model, Sense
 from optimiser.pulp_backends import CbcBackend, HighsBackend, native_output_on_stderr
 from optimiser.site import SolverSettings
 from optimiser.solver import SOLVERS, Solver, Termination, open_solver, solver_from
-from tests.optimiser.solver_models import blend, knapsacks, market_split, random_mixed_model
+from tests.optimiser.solver_models import (
+    blend,
+    knapsacks,
+    market_split,
+    random_mixed_model,
+    spread_model,
+)
 
 ROOT = Path(__file__).parents[2]
 
@@ -38,7 +45,7 @@ def run_python(code: str, **environment: str) -> subprocess.CompletedProcess[str
     return subprocess.run(
         [sys.executable, "-W", "error", "-c", textwrap.dedent(code)],
         capture_output=True, text=True, check=False, cwd=ROOT,
-        env={**os.environ, "PYTHONPATH": str(ROOT), **environment},
+        env={**os.environ, "PYTHONPATH": str(ROOT), "PYTHONUNBUFFERED": "", **environment},
     )  # fmt: skip
 
 
@@ -226,3 +233,12 @@ def test_only_one_module_imports_pulp() -> None:
 def test_backends_answer_to_the_protocol() -> None:
     backends: list[Backend] = [HighsBackend(), CbcBackend()]
     assert [backend.name for backend in backends] == list(SOLVERS)
+
+
+def test_cbc_is_told_to_be_as_precise_as_highs(monkeypatch: pytest.MonkeyPatch) -> None:
+    model = spread_model()
+    least = open_solver("highs").solve(model).objective
+    assert open_solver("cbc").solve(model).objective == pytest.approx(least, rel=1e-7)
+    monkeypatch.setattr(pulp_backends, "_CBC_DUAL_TOLERANCE", 1e-7)
+    with pytest.raises(SolverFault, match=r"calls 15\.93\d* optimal, but only -inf is proven"):
+        open_solver("cbc").solve(model)
