@@ -7,7 +7,6 @@ answers at once.
 
 from __future__ import annotations
 
-import difflib
 import os
 import sys
 from collections.abc import Callable, Mapping, Sequence
@@ -212,13 +211,26 @@ def _dose_problem(doses: Mapping[str, float], site: Site) -> str:
     for key in doses:
         reagent, at, stage = key.partition("@")
         if reagent not in site.reagents:
-            near = difflib.get_close_matches(reagent, site.reagents, n=1, cutoff=0.5)
-            hint = f"did you mean `{near[0]}`?" if near else ""
-            return f"--dose {key}: unknown reagent; {hint or 'known: ' + ', '.join(site.reagents)}"
+            return f"--dose {key}: {_unknown_reagent(reagent, site)}"
         if at and stage != "trim":
             return f"--dose {key}: unknown stage {stage!r}; a dose is REAGENT or REAGENT@trim"
     trims = [key for key in doses if "@" in key]
     return f"--dose {' '.join(trims)}: name one trim reagent" if len(trims) > 1 else ""
+
+
+def _unknown_reagent(reagent: str, site: Site) -> str:
+    from catalogs import load_reagents
+    from catalogs.problems import closest
+
+    known = load_reagents()
+    if reagent in known:
+        return (
+            f"this site does not list {reagent}; add it under treatment.reagents or "
+            "treatment.trim_reagents, with an offer in the price book"
+        )
+    near = closest(reagent, known)
+    hint = f"did you mean `{near}`? " if near else ""
+    return f"unknown reagent; {hint}This site lists {', '.join(site.reagents)}"
 
 
 def _curves(options: argparse.Namespace) -> int:

@@ -13,6 +13,7 @@ from optimiser.tables import INDENT, PLAIN, Ink, bullets, given, money, number, 
 Data = Mapping[str, Any]
 _DOSE_DIGITS = 4
 _MISSED = "MISSED"
+_ROUNDING = 1e-9
 
 
 def plan_text(data: Data, ink: Ink = PLAIN) -> str:
@@ -252,13 +253,18 @@ def _burden(data: Data) -> list[str]:
         [
             str(name),
             number(row["feed_mg_per_l"]),
-            number(row["added_mg_per_l"]),
+            number(_without_noise(row["added_mg_per_l"], row["feed_mg_per_l"])),
             number(row["effluent_mg_per_l"]),
         ]
         for name, row in data["burden"].items()
         if any(row.values())
     ]
     return table(["what", "feed", "added", "effluent"], rows) if rows else []
+
+
+def _without_noise(difference: float, of: float) -> float:
+    """Zero where a difference is only rounding of the value it was taken from."""
+    return 0.0 if abs(difference) <= _ROUNDING * abs(of) else difference
 
 
 def _sludge(data: Data) -> list[str]:

@@ -19,6 +19,8 @@ from optimiser.cli_options import build_parser
 
 ROOT = Path(__file__).resolve().parents[2]
 DEMO = ROOT / "catalogs" / "sites" / "plating_rinse"
+QUICK = ROOT / "catalogs" / "sites" / "mercury_lab"
+PLAN_QUICK = ("plan", QUICK / "site.yaml", "--most-reagents", "2", "--time-limit", "600")
 COMMANDS = ("plan", "assess", "curves", "check", "new")
 HEAVY = ("numpy", "scipy", "pandas", "pulp", "highspy", "yaml", "matplotlib")
 
@@ -41,12 +43,12 @@ def run_code(code: str, *arguments: str | Path) -> subprocess.CompletedProcess[s
 
 @pytest.fixture(scope="module")
 def planned() -> subprocess.CompletedProcess[str]:
-    return run("plan", DEMO / "site.yaml")
+    return run(*PLAN_QUICK)
 
 
 @pytest.fixture(scope="module")
 def planned_data() -> dict[str, Any]:
-    done = run("plan", DEMO / "site.yaml", "--json")
+    done = run(*PLAN_QUICK, "--json")
     assert done.returncode == 0, done.stderr
     assert done.stderr == ""
     data: dict[str, Any] = json.loads(done.stdout)
@@ -196,7 +198,9 @@ def test_new_overwrites_nothing(tmp_path: Path, capsys: pytest.CaptureFixture[st
 def test_a_plan_is_the_only_thing_on_stdout(planned: subprocess.CompletedProcess[str]) -> None:
     assert planned.returncode == 0, planned.stderr
     assert planned.stderr == ""
-    assert planned.stdout.startswith("Fenwater Quay plating shop: cheapest plan found, EUR ")
+    assert planned.stdout.startswith(
+        "Hollin Vale dental alloy and assay works: cheapest plan found, "
+    )
     assert max(map(len, planned.stdout.splitlines())) <= 100
     assert "\x1b" not in planned.stdout
 
@@ -212,7 +216,7 @@ def test_text_and_json_show_the_same_plan(
 
 def test_the_doses_of_a_plan_assessed_again_cost_the_same(planned_data: dict[str, Any]) -> None:
     doses = [f"{key}={dose!r}" for key, dose in planned_data["doses"].items()]
-    done = run("assess", DEMO / "site.yaml", "--json", "--dose", *doses)
+    done = run("assess", QUICK, "--json", "--dose", *doses)
     assert done.returncode == 0, done.stderr
     again = json.loads(done.stdout)
     assert again["cost"]["total"] == pytest.approx(planned_data["cost"]["total"], rel=1e-6)
@@ -248,6 +252,11 @@ def test_assess_without_any_dose_asks_for_one(
     ("dose", "said"),
     [
         ("caustic=10", "dosewright: --dose caustic: unknown reagent; did you mean `caustic_soda`?"),
+        (
+            "sulfuric_acid@trim=10",
+            "this site does not list sulfuric_acid; add it under treatment.reagents or "
+            "treatment.trim_reagents, with an offer in the price book",
+        ),
         ("caustic_soda@end=10", "unknown stage 'end'; a dose is REAGENT or REAGENT@trim"),
     ],
 )
@@ -261,7 +270,7 @@ def test_an_unknown_reagent_is_refused_with_a_suggestion(
 
 
 def test_two_trim_reagents_are_refused(capsys: pytest.CaptureFixture[str]) -> None:
-    doses = ["sulfuric_acid@trim=5", "hydrochloric_acid@trim=5"]
+    doses = ["soda_ash@trim=5", "caustic_soda@trim=5"]
     assert main(["assess", str(DEMO), "--dose", *doses]) == 2
     streams = capsys.readouterr()
     assert streams.out == ""
@@ -275,15 +284,24 @@ def test_no_dose_at_all_meets_no_limit() -> None:
     assert "MISSED" in done.stdout
 
 
-def test_an_unreachable_limit_ends_in_exit_code_3_with_the_reason(site: Path) -> None:
-    spoil(site, "  own:\n", "  own:\n    - {parameter: Ni, daily_mg_per_l: 0.0001}\n")
-    text, data = run("plan", site), run("plan", site, "--json")
+def test_no_plan_ends_in_exit_code_3_with_the_reason() -> None:
+    text = run("plan", QUICK, "--most-reagents", "1")
+    data = run("plan", QUICK, "--most-reagents", "1", "--json")
     assert (text.returncode, data.returncode) == (3, 3)
-    assert text.stdout.startswith("Fenwater Quay plating shop: no plan\n")
-    assert "Ni" in text.stdout
+    assert (text.stderr, data.stderr) == ("", "")
+    assert text.stdout.startswith("Hollin Vale dental alloy and assay works: no plan\n")
+    assert "Hg, monthly" in text.stdout
+    assert max(map(len, text.stdout.splitlines())) <= 100
     answer = json.loads(data.stdout)
     assert answer["compliant"] is False
-    assert any(clash["limit"].startswith("Ni") for clash in answer["clashes"])
+    assert any(clash["limit"].startswith("Hg, monthly") for clash in answer["clashes"])
+
+
+def test_a_plan_that_runs_out_of_time_ends_in_exit_code_4() -> None:
+    done = run("plan", QUICK, "--time-limit", "0.001")
+    assert done.returncode == 4
+    assert done.stdout == ""
+    assert done.stderr.startswith("dosewright: stopped after 0.001 s before a verified plan")
 
 
 def test_curves_are_printed_and_written(tmp_path: Path) -> None:

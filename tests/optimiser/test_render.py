@@ -129,7 +129,11 @@ PLAN: dict[str, Any] = {
             "h2s_ppm": None,
         },
     ],
-    "burden": {"Na": {"feed_mg_per_l": 90.0, "effluent_mg_per_l": 391.0, "added_mg_per_l": 301.0}},
+    "burden": {
+        "Na": {"feed_mg_per_l": 90.0, "effluent_mg_per_l": 391.0, "added_mg_per_l": 301.0},
+        "Mg": {"feed_mg_per_l": 4.0, "effluent_mg_per_l": 4.0, "added_mg_per_l": 4e-14},
+        "K": {"feed_mg_per_l": 0.0, "effluent_mg_per_l": 0.0, "added_mg_per_l": 0.0},
+    },
     "sludge": {
         "dry_kg_per_d_by_solid": {"Ni(OH)2(s)": 2.11, "Cu(OH)2(s)": 7.02},
         "unreacted_kg_per_d": 0.0,
@@ -238,6 +242,12 @@ def test_residual_and_carry_over_stand_apart(data: dict[str, Any]) -> None:
         "Cu", "daily", "0.5", "mg/L", "0.0610", "0.0312", "0.0300", "3.3", "0.304", "0.400",
         "24", "%",
     ]  # fmt: skip
+
+
+def test_burden_leaves_out_rounding_and_what_is_not_there(data: dict[str, Any]) -> None:
+    rows = [line.split() for line in plan_text(data).splitlines()]
+    assert ["Mg", "4.00", "0", "4.00"] in rows
+    assert not any(row[:1] == ["K"] for row in rows)
 
 
 def test_worst_cases_are_grouped_by_what_they_are(data: dict[str, Any]) -> None:
