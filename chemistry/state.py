@@ -18,7 +18,15 @@ from chemistry.batch import ABSENT_LN, Batch, BoolArray, FloatArray, new_batch
 from chemistry.equilibrium import solve, solve_warm
 from chemistry.errors import EquilibriumError, WaterError
 from chemistry.kernel import Kernel
-from chemistry.request import CO2_SPECIES, LOG10_HENRY_CO2, Totals, read_request, read_totals
+from chemistry.request import (
+    CO2_SPECIES,
+    LARGEST_TOTAL_MOL_PER_L,
+    LOG10_HENRY_CO2,
+    Totals,
+    co2_formation_ln,
+    read_request,
+    read_totals,
+)
 from chemistry.sensitivity import Sensitivity, sensitivity_of
 from chemistry.system import LN10, System
 
@@ -235,7 +243,8 @@ def equilibrate(
     WaterError
         Totals, pH or pressure that no water can have.
     EquilibriumError
-        A state missed its certificate and ``on_failure`` is ``raise``.
+        A state missed its certificate and ``on_failure`` is ``raise``. A held pH or pressure that
+        only more than 60 mol/L of something could reach counts as missed.
 
     Examples
     --------
@@ -262,6 +271,34 @@ def equilibrate(
     state = _as_state(system, kernel, batch)
     if on_failure == "raise" and not state.converged.all():
         raise EquilibriumError(_failure_text(state))
+    return state
+
+
+def certified_or_solved(
+    system: System, totals: FloatArray, found: Start, trusted: BoolArray
+) -> EquilibriumState:
+    """States at values found elsewhere: kept where they pass the certificate, else solved.
+
+    Parameters
+    ----------
+    totals : ndarray, shape (n, components)
+    found
+        Values of the n waters.
+    trusted : ndarray, shape (n,)
+        Rows worth a try; the others are solved from the values as a start.
+    """
+    kernel = kernel_of(system)
+    asked = read_request(system, totals, None, None, None)
+    batch = new_batch(system, asked.totals, asked.ph, asked.ln_co2, asked.titrant)
+    _begin_at(kernel, batch, found)
+    batch.converged = trusted.copy()
+    state = _as_state(system, kernel, batch)
+    open_rows = np.flatnonzero(~state.converged)
+    if open_rows.size:
+        part = batch.take(open_rows)
+        solve_warm(kernel, part)
+        batch.put(open_rows, part)
+        state = _as_state(system, kernel, batch)
     return state
 
 
@@ -309,6 +346,7 @@ def _as_state(system: System, kernel: Kernel, batch: Batch) -> EquilibriumState:
         (proof["mass_balance"] <= CERTIFIED_MASS_BALANCE)
         & (proof["supersaturation"] <= CERTIFIED_SATURATION)
         & (proof["presence"] <= CERTIFIED_SATURATION)
+        & (np.abs(totals).max(axis=1, initial=0.0) <= LARGEST_TOTAL_MOL_PER_L)
     )
     return state
 
@@ -316,16 +354,32 @@ def _as_state(system: System, kernel: Kernel, batch: Batch) -> EquilibriumState:
 def _failure_text(state: EquilibriumState) -> str:
     rows = np.flatnonzero(~state.converged)
     proof = state.certificate_arrays
-    lines = [f"{rows.size} of {state.converged.size} states missed their certificate"]
-    for i in rows[:3]:
-        water = {
-            name: float(v)
-            for name, v in zip(state.system.components, state.batch.totals[i], strict=True)
-            if v != 0.0
-        }
-        lines.append(
-            f"state {i}: mass balance {proof['mass_balance'][i]:.1e}, supersaturation "
-            f"{proof['supersaturation'][i]:.1e}, presence {proof['presence'][i]:.1e}; "
-            f"totals {water!r}"
-        )
-    return "\n".join(lines)
+    lines = [
+        f"state {i}: mass balance {proof['mass_balance'][i]:.1e}, supersaturation "
+        f"{proof['supersaturation'][i]:.1e}, presence {proof['presence'][i]:.1e}; "
+        f"totals {_water(state, i)!r}{_held_text(state, i)}"
+        for i in rows[:3]
+    ]
+    count = f"{rows.size} of {state.converged.size} states missed their certificate"
+    return "\n".join([count, *lines])
+
+
+def _water(state: EquilibriumState, i: int) -> dict[str, float]:
+    """Totals of one state as they were given, without the zeros."""
+    values = zip(state.system.components, state.batch.totals[i], strict=True)
+    return {name: float(value) for name, value in values if value != 0.0}
+
+
+def _held_text(state: EquilibriumState, i: int) -> str:
+    """What is held in one state, and that no water may be able to hold it."""
+    batch, text = state.batch, ""
+    if not np.isnan(batch.co2_ln[i]):
+        ln_pressure = batch.co2_ln[i] - LN10 * LOG10_HENRY_CO2 + co2_formation_ln(state.system)
+        text += f", pCO2 {np.exp(ln_pressure):.17g} atm held"
+    if not np.isnan(batch.ph_ln[i]):
+        vector = zip(state.system.components, batch.titrant[i], strict=True)
+        titrant = {name: float(value) for name, value in vector if value != 0.0}
+        text += f", pH {-batch.ph_ln[i] / LN10:.17g} held with {titrant!r}"
+    if text:
+        text += ": perhaps no dose reaches it"
+    return text

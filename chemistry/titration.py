@@ -16,7 +16,13 @@ from numpy.typing import NDArray
 
 from chemistry.batch import new_batch
 from chemistry.newton import finish
-from chemistry.state import EquilibriumState, Sensitivity, equilibrate, kernel_of
+from chemistry.state import (
+    EquilibriumState,
+    Sensitivity,
+    certified_or_solved,
+    equilibrate,
+    kernel_of,
+)
 from chemistry.system import System
 
 FloatArray = NDArray[np.float64]
@@ -256,7 +262,7 @@ class _Work:
         """Plain states of the dosed waters."""
         dose = np.where(self.reached, self.dose, 0.0)
         dosed = self.totals + dose[:, None] * self.vectors
-        state = equilibrate(self.system, dosed, on_failure="flag", start=self.iterate)
+        state = certified_or_solved(self.system, dosed, self.iterate, self.reached)
         return Titration(dose / self.size, state, self.reached & state.converged)
 
 

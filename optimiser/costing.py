@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from chemistry.burden import BURDENS
 from chemistry.sludge import Sludge, sludge
 from optimiser.plant import CLOSED_FORMED, VENTED_FORMED, Block, Plant, Points, Rows
+from optimiser.price_book import PriceBook
 from optimiser.quality import Judged
 from optimiser.site import DisposalRule, Offer
 
@@ -47,7 +48,7 @@ class Pricing:
     def __init__(self, plant: Plant) -> None:
         self.plant = plant
         site = plant.site
-        self.offers: tuple[Offer, ...] = site.offers
+        self.book = PriceBook(site.offers)
         self.by_reagent = [[o for o in site.offers if o.reagent == name] for name in plant.names]
         self.equipment = np.array(
             [site.treatment.equipment_cost_per_year.get(name, 0.0) for name in plant.names]
@@ -55,25 +56,8 @@ class Pricing:
         self.kg_per_mg_per_l = site.flow_m3_per_year / 1000.0
 
     def purchase(self, reagent: int, kg: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Goods and freight of the cheapest offer for a demand in kg pure per year, (n,) each.
-
-        With one price per tonne and a least order per offer, one offer alone is cheapest: costs are
-        linear above the least order, so splitting a demand never beats the cheaper of its parts.
-        """
-        goods = np.zeros_like(kg)
-        freight = np.zeros_like(kg)
-        best = np.full(kg.shape, np.inf)
-        for offer in self.by_reagent[reagent]:
-            tonnes = np.maximum(kg / (1000.0 * offer.strength_fraction), offer.least_order_t)
-            cost = tonnes * (offer.price_per_t + offer.freight_per_t)
-            better = cost < best
-            goods = np.where(better, tonnes * offer.price_per_t, goods)
-            freight = np.where(better, tonnes * offer.freight_per_t, freight)
-            best = np.where(better, cost, best)
-        used = kg > 0.0
-        unsold = used & ~np.isfinite(best)
-        goods = np.where(unsold, np.inf, goods)
-        return np.where(used, goods, 0.0), np.where(used, freight, 0.0)
+        """Goods and freight of the cheapest offer for demands in kg pure per year, (n,) each."""
+        return self.book.costs(self.plant.names[reagent], kg)
 
     def price(
         self, points: Points, rows: Rows, blocks: Sequence[Block], judged: Sequence[Judged]
@@ -186,6 +170,12 @@ class Pricing:
             point = rows.point[part.block.rows[nominal]]
             np.maximum.at(cost, point, here[nominal])
         return cost
+
+
+def yearly_cost(offer: Offer, kg_pure: float) -> float:
+    """Goods and freight of one offer for a demand in kg pure per year."""
+    tonnes = max(kg_pure / (1000.0 * offer.strength_fraction), offer.least_order_t)
+    return tonnes * (offer.price_per_t + offer.freight_per_t)
 
 
 def _content(content: dict[str, float], metal: str) -> float:

@@ -16,7 +16,6 @@ from chemistry.burden import BURDENS, water_burden
 from chemistry.state import H2S_SPECIES, EquilibriumState
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator
 from optimiser.plant import END_TEXT
-from optimiser.price_book import PriceBook
 from optimiser.quality import LOAD, RULE
 
 FloatArray = NDArray[np.float64]
@@ -70,7 +69,7 @@ class Describer:
         """What is bought on each offer."""
         strengths = {o.offer: o.strength_fraction for o in self.site.offers}
         rows = []
-        for buy in PriceBook(self.site.offers).cheapest(self._demand()).buys:
+        for buy in self.evaluator.pricing.book.cheapest(self._demand()).buys:
             per_t = 1000.0 * strengths[buy.offer]
             rows.append(
                 {
@@ -166,8 +165,10 @@ class Describer:
         words = []
         if rows.shift[row]:
             words.append(f"set point {rows.shift[row]:+.2f}")
-        for i in np.flatnonzero(rows.factor[row] != 1.0):
-            words.append(f"{self.plant.names[i]} {100.0 * (rows.factor[row, i] - 1.0):+.0f} %")
+        words += [
+            f"{self.plant.names[i]} {100.0 * (rows.factor[row, i] - 1.0):+.0f} %"
+            for i in np.flatnonzero(rows.factor[row] != 1.0)
+        ]
         return f"{', '.join(words) or 'nominal'}; {END_TEXT[end]}"
 
     def ph(self) -> Data:

@@ -12,7 +12,7 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from chemistry.state import equilibrate
+from chemistry.state import EquilibriumState, equilibrate
 from chemistry.titration import StartValues
 from optimiser.costing import Priced, Pricing
 from optimiser.plant import Block, Plant, Points, Rows
@@ -49,6 +49,7 @@ class Evaluation:
     judged: list[Judged]
     priced: Priced
     rules: list[Rule] = field(default_factory=list)
+    before: dict[str, tuple[IntArray, EquilibriumState]] = field(default_factory=dict)
 
     @cached_property
     def violation(self) -> FloatArray:
@@ -97,13 +98,15 @@ class _Neighbours:
         self.first = np.searchsorted(rows.point, np.arange(len(near)))
 
     def start(self, end: int, rows: IntArray) -> StartValues | None:
-        """Iterates of the neighbours at the same corner and end, else at their first end."""
+        """Iterates of the neighbours at the same corner and end, else at the nearest known."""
         parts = []
         for point in np.unique(self.rows.point[rows]):
             place = self.near[int(point)]
             corner = rows[self.rows.point[rows] == point] - self.first[point]
-            begin = int(np.searchsorted(place.seen.rows.point, place.point))
-            parts.append(_iterates(place.seen, end, begin + corner))
+            known = np.flatnonzero(place.seen.rows.point == place.point)
+            # a neighbour known at its nominal state alone lends that to every corner
+            picked = known[corner] if corner.max() < known.size else known[np.zeros_like(corner)]
+            parts.append(_iterates(place.seen, end, picked))
         return StartValues.join(parts) if parts else None
 
 
@@ -143,33 +146,28 @@ class Evaluator:
         blocks = self.plant.blocks(points, rows, all_ends=all_ends, warm=start)
         judged = [self.judge.judge(points, rows, b, slopes=slopes) for b in blocks]
         priced = self.pricing.price(points, rows, blocks, judged)
-        rules = self._rules(points, rows, judged, priced)
-        return Evaluation(points, rows, blocks, judged, priced, rules)
+        seen = Evaluation(points, rows, blocks, judged, priced)
+        self._rules(seen, near)
+        return seen
 
-    # -- rules ---------------------------------------------------------------------------------------
+    # -- rules ------------------------------------------------------------------------------------
 
-    def _rules(
-        self, points: Points, rows: Rows, judged: Sequence[Judged], priced: Priced
-    ) -> list[Rule]:
-        doses = priced.doses
-        rules = [self._least_rule(points, doses, judged, rows)]
-        rules += self._sulfide_rules(points, rows, judged, doses)
-        rules += self._magnesia_rule(points, rows, judged, doses)
-        return rules
+    def _rules(self, seen: Evaluation, near: Sequence[Place] | None) -> None:
+        seen.rules.append(self._least_rule(seen))
+        seen.rules.extend(self._sulfide_rules(seen, near))
+        seen.rules.extend(self._ceiling_rules(seen, near))
 
-    def _dose_slope(self, points: Points, rows: Rows, judged: Sequence[Judged]) -> FloatArray:
+    def _dose_slope(self, seen: Evaluation) -> FloatArray:
         """Change of the controller's nominal dose with set point and paced doses, (points, k)."""
-        slope = np.zeros((len(points), 1 + len(self.plant.names)))
-        first = judged[0]
-        nominal = rows.nominal[first.block.rows]
-        if first.dose_slope.shape[1] == slope.shape[1]:
-            slope[rows.point[first.block.rows[nominal]]] = first.dose_slope[nominal]
+        slope = np.zeros((len(seen.points), 1 + len(self.plant.names)))
+        first = seen.judged[0]
+        nominal = seen.rows.nominal[first.block.rows]
+        slope[seen.rows.point[first.block.rows[nominal]]] = first.dose_slope[nominal]
         return slope
 
-    def _least_rule(
-        self, points: Points, doses: FloatArray, judged: Sequence[Judged], rows: Rows
-    ) -> Rule:
+    def _least_rule(self, seen: Evaluation) -> Rule:
         """The controller's dose stays between its least real dose and its ceiling."""
+        points, doses = seen.points, seen.priced.doses
         n = len(points)
         slope = np.zeros((n, 1 + len(self.plant.names)))
         ratio = np.full(n, -np.inf)
@@ -181,7 +179,7 @@ class Evaluator:
             high = np.log(dose / np.minimum(self.ceiling[own], 1e12))
             ratio[held] = np.maximum(low, high)
             sign = np.where(low > high, -1.0, 1.0)
-            moved = self._dose_slope(points, rows, judged)[held]
+            moved = self._dose_slope(seen)[held]
             slope[held] = (sign / dose)[:, None] * moved
         paced = (points.doses > 0.0) & (points.doses < self.least * (1.0 - 1e-9))
         over = points.doses > self.ceiling * (1.0 + 1e-9)
@@ -189,44 +187,63 @@ class Evaluator:
         return Rule("least real dose and dose ceiling", ratio, slope)
 
     def _before(
-        self, points: Points, rows: Rows, judged: Sequence[Judged], doses: FloatArray,
-        some: IntArray, without: BoolArray,
+        self, seen: Evaluation, label: str, some: IntArray, without: BoolArray,
+        near: Sequence[Place] | None,
     ) -> tuple[FloatArray, FloatArray]:  # fmt: skip
         """PH of the feed with every dose but those of ``without``, and its slope."""
-        plant = self.plant
+        plant, doses = self.plant, seen.priced.doses
         kept = np.where(without, 0.0, doses[some])
-        state = equilibrate(plant.system, plant.totals + kept @ plant.reacting, on_failure="flag")
+        mixed = plant.totals + kept @ plant.reacting
+        start = self._before_start(seen, label, some, near)
+        state = equilibrate(plant.system, mixed, on_failure="flag", start=start)
+        seen.before[label] = (some, state)
         plant.states_solved += some.size
         ph = np.where(state.converged, state.ph, np.nan)
         used = np.flatnonzero((doses[some] > 0.0).any(axis=0) & ~without)
         slope = np.zeros((some.size, 1 + len(plant.names)))
-        moved = self._dose_slope(points, rows, judged)[some]
+        moved = self._dose_slope(seen)[some]
         if used.size:
             sens = state.sensitivity(plant.reacting[used])
             for k, reagent in enumerate(used):
                 slope[:, 1 + reagent] += sens.ph[:, k]
-                own = points.controller[some] == reagent
+                own = seen.points.controller[some] == reagent
                 slope[own] += sens.ph[own, k][:, None] * moved[own]
         return ph, slope
 
-    def _sulfide_rules(
-        self, points: Points, rows: Rows, judged: Sequence[Judged], doses: FloatArray
-    ) -> list[Rule]:
+    def _before_start(
+        self, seen: Evaluation, label: str, some: IntArray, near: Sequence[Place] | None
+    ) -> StartValues:
+        """The same mixture at the neighbours, else the water that all doses make."""
+        nominal = np.flatnonzero(seen.rows.nominal)
+        parts = []
+        for point in some:
+            place = near[int(point)] if near is not None else None
+            known = place.seen.before.get(label) if place is not None else None
+            if known is not None and place is not None and place.point in known[0]:
+                row = np.flatnonzero(known[0] == place.point)
+                parts.append(StartValues.of(known[1]).rows(row))
+            else:
+                row = nominal[[int(point)]]
+                parts.append(StartValues.of(seen.blocks[0].state).rows(row))
+        return StartValues.join(parts)
+
+    def _sulfide_rules(self, seen: Evaluation, near: Sequence[Place] | None) -> list[Rule]:
         plant = self.plant
-        some = np.flatnonzero((doses[:, plant.is_sulfide] > 0.0).any(axis=1))
+        some = np.flatnonzero((seen.priced.doses[:, plant.is_sulfide] > 0.0).any(axis=1))
         if not some.size:
             return []
         least = plant.treatment.sulfide_least_ph
-        n, width = len(points), 1 + len(plant.names)
-        ph, moved = self._before(points, rows, judged, doses, some, plant.is_sulfide)
+        n, width = len(seen.points), 1 + len(plant.names)
+        label = "pH before the sulfide dose"
+        ph, moved = self._before(seen, label, some, plant.is_sulfide, near)
         before = np.full(n, -np.inf)
         before[some] = np.where(np.isnan(ph), 5.0, LN10 * (least - ph))
         slope = np.zeros((n, width))
         slope[some] = -LN10 * moved
-        rules = [Rule("pH before the sulfide dose", before, slope)]
+        rules = [Rule(label, before, slope)]
         lowest = np.full(n, np.inf)
-        for part in judged:
-            np.minimum.at(lowest, rows.point[part.block.rows], part.block.state.ph)
+        for part in seen.judged:
+            np.minimum.at(lowest, seen.rows.point[part.block.rows], part.block.state.ph)
         after = np.full(n, -np.inf)
         after[some] = LN10 * (least - lowest[some])
         slope = np.zeros((n, width))
@@ -234,37 +251,38 @@ class Evaluator:
         rules.append(Rule("pH after the sulfide dose", after, slope))
         return rules
 
-    def _magnesia_rule(
-        self, points: Points, rows: Rows, judged: Sequence[Judged], doses: FloatArray
-    ) -> list[Rule]:
+    def _ceiling_rules(self, seen: Evaluation, near: Sequence[Place] | None) -> list[Rule]:
         """A reagent with a practical pH ceiling has all dissolved at or below it."""
-        plant = self.plant
+        plant, points = self.plant, seen.points
         rules = []
         for i, reagent in enumerate(plant.reagents):
             ceiling = self.ceiling_of(i)
-            if ceiling is None:
-                continue
-            some = np.flatnonzero(doses[:, i] > 0.0)
-            if not some.size:
+            some = np.flatnonzero(seen.priced.doses[:, i] > 0.0)
+            if ceiling is None or not some.size:
                 continue
             n, width = len(points), 1 + len(plant.names)
             ratio, slope = np.full(n, -np.inf), np.zeros((n, width))
+            label = f"practical pH ceiling of {reagent.name}"
             own = points.controller[some] == i
             ratio[some[own]] = LN10 * (points.ph[some[own]] - ceiling)
             slope[some[own], 0] = LN10
             paced = some[~own]
             if paced.size:
-                stronger = np.array(
-                    [
-                        r.ph_control == "up" and self.ceiling_of(j) is None
-                        for j, r in enumerate(plant.reagents)
-                    ]
-                )
-                ph, moved = self._before(points, rows, judged, doses, paced, stronger)
+                ph, moved = self._before(seen, label, paced, self.stronger, near)
                 ratio[paced] = np.where(np.isnan(ph), 5.0, LN10 * (ph - ceiling))
                 slope[paced] = LN10 * moved
-            rules.append(Rule(f"practical pH ceiling of {reagent.name}", ratio, slope))
+            rules.append(Rule(label, ratio, slope))
         return rules
+
+    @cached_property
+    def stronger(self) -> BoolArray:
+        """Alkalis that take the pH above the ceiling of those that have one, (reagents,)."""
+        return np.array(
+            [
+                r.ph_control == "up" and self.ceiling_of(i) is None
+                for i, r in enumerate(self.plant.reagents)
+            ]
+        )
 
     def ceiling_of(self, reagent: int) -> float | None:
         """Practical pH ceiling of a reagent: the site's for magnesia, else the catalog's."""

@@ -113,9 +113,11 @@ class Block:
     """States of some rows at one end.
 
     ``dose`` is the controller's dose that holds the row's pH, ``trim_dose`` that of the trim
-    reagent (both mg/L pure fed); ``held`` tells which rows the controller holds: where the paced
-    doses alone overshoot the row's pH it rests and the pH is what they make it; ``liquid`` the totals of the separated water and ``effluent``
-    those after trim (rows, components), ``trim_state`` the trimmed waters of ``trimmed`` rows.
+    reagent (both mg/L pure fed). ``held`` tells which rows the controller holds: where the paced
+    doses alone overshoot the row's pH it rests, and the pH is what they make it; ``reached`` which
+    rows are as they should be. ``liquid`` holds the totals of the separated water and ``effluent``
+    those after trim (rows, components), ``trim_state`` the trimmed waters of ``trimmed`` rows;
+    ``trim_missing`` rows that would need a trim that nothing gives.
     """
 
     end: int

@@ -7,31 +7,36 @@ and lets the mixed-integer solver move set point and doses; the full equilibrium
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER
+from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER, yearly_cost
 from optimiser.evaluation import Evaluation, Evaluator, Place
 from optimiser.linear_model import Expression, Model, Sense
 from optimiser.plant import CLOSED_FORMED, VENTED_FORMED, Points
 from optimiser.purchasing import add_purchasing
+from optimiser.site import Offer
 from optimiser.solver import SolverPort
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 BACK_OFF = 2e-6  # ratios are brought to minus this, so that rounding does not break a limit
-ROWS_PER_STEP = 80
-NEAR_RATIO = -2.5
+ROWS_PER_STEP = 40
+NEAR_RATIO = -1.5
+NEAR_WORST = 0.7  # rows of a check further than this below its worst are left out
 PENALTY = 20.0  # cost of a unit of ratio, as a multiple of the point's cost
 FIRST_RADIUS = 0.5
 LAST_RADIUS = 2e-4
 SET_POINT_STEP = 0.6  # pH per unit of radius
+MOST_STEPS = 14
 PATIENCE = 3
+DEARER_EARLY, DEARER_LATE = 1.2, 1.06
 HOPELESS_RATIO = 5e-3
 SHRINKS_BY = 0.8
+HOPELESS_RADIUS = 5e-3
 
 
 @dataclass(slots=True)
@@ -73,13 +78,13 @@ class Track:
 
 def polish(
     evaluator: Evaluator, starts: Points, solver: SolverPort, *, bounds: Bounds,
-    steps: int = 14, radius: float = FIRST_RADIUS, give_up_above: float = np.inf,
-    known: float = np.inf, near: Sequence[Place] | None = None,
+    steps: int = MOST_STEPS, radius: float = FIRST_RADIUS, rival: float = np.inf,
+    near: Sequence[Place] | None = None,
 ) -> list[Track]:  # fmt: skip
     """Polish all starts side by side; returns a track for each.
 
-    ``give_up_above`` drops candidates whose cost stays this factor above the best feasible one
-    (``known``, or one of the candidates).
+    Candidates that stay dearer than the best feasible one, or than the plan of cost ``rival`` that
+    is known already, are rested early.
     """
     seen = evaluator.evaluate(starts, slopes=True, near=near)
     tracks = [Track(Place(seen, i), radius) for i in range(len(starts))]
@@ -100,7 +105,7 @@ def polish(
         tried = evaluator.evaluate(Points.join(trials), slopes=True, near=[t.place for t in moving])
         for row, track in enumerate(moving):
             _accept(track, Place(tried, row))
-        _drop(tracks, give_up_above, known)
+        _rest_dear(tracks, rival)
     return tracks
 
 
@@ -112,22 +117,27 @@ def _accept(track: Track, place: Place) -> None:
         track.place = place
         track.radius = min(track.radius * (1.6 if gain > 1e-3 else 1.0), 1.0)
         track.stalls = track.stalls + 1 if gain < 2e-5 else 0
+        track.missed = (*track.missed, max(0.0, track.violation))
     else:
         track.radius *= 0.3
         track.stalls = 0
     if track.radius < LAST_RADIUS or track.stalls >= 2:
         track.alive = False
-    track.missed = (*track.missed, max(0.0, track.violation))
-    if track.steps >= PATIENCE and track.violation > HOPELESS_RATIO:
+    if track.violation > HOPELESS_RATIO:
         # a candidate whose worst miss hardly shrinks will not become feasible
-        track.alive &= track.violation < SHRINKS_BY * track.missed[-PATIENCE]
+        stuck = len(track.missed) >= PATIENCE and (
+            track.violation > SHRINKS_BY * track.missed[-PATIENCE]
+        )
+        track.alive &= not stuck and track.radius > HOPELESS_RADIUS
 
 
-def _drop(tracks: list[Track], factor: float, known: float) -> None:
-    best = min([known, *(t.total for t in tracks if t.feasible)])
+def _rest_dear(tracks: list[Track], rival: float) -> None:
+    """Rest candidates that fall behind: far dearer early on, a little dearer later."""
+    best = min([rival, *(t.total for t in tracks if t.feasible)])
     for track in tracks:
-        if track.alive and track.steps >= 3 and track.total > factor * best:
-            track.alive = False
+        if track.alive and track.steps >= PATIENCE:
+            late = track.steps >= 2 * PATIENCE
+            track.alive = track.total <= (DEARER_LATE if late else DEARER_EARLY) * best
 
 
 @dataclass(frozen=True, eq=False)
@@ -177,7 +187,7 @@ def build_step(
     model.add_cost("miss", Expression({"miss": PENALTY * scale}))
     _add_checks(model, seen, row, moves)
     demand = _add_amounts(model, evaluator, seen, row, moves)
-    add_purchasing(model, evaluator.site.offers, demand)
+    add_purchasing(model, _offers_near(evaluator, seen, row, radius), demand)
     _add_disposal(model, evaluator, seen, row, moves)
     _add_burden(model, evaluator, seen, row, moves)
     return model
@@ -220,11 +230,17 @@ def _add_checks(
     model: Model, seen: Evaluation, row: int, moves: dict[int, tuple[str, float]]
 ) -> None:
     ratios, slopes = [], []
+    parts = []
     for part in seen.judged:
         mine = np.flatnonzero((seen.rows.point[part.block.rows] == row) & part.block.reached)
         if mine.size and part.ratio.shape[1]:
-            ratios.append(part.ratio[mine].ravel())
-            slopes.append(part.slope[mine].reshape(-1, part.slope.shape[2]))
+            parts.append((part.ratio[mine], part.slope[mine]))
+    if parts:
+        worst = np.max([ratio.max(axis=0) for ratio, _ in parts], axis=0)
+        for ratio, slope in parts:
+            near = ratio > np.maximum(worst - NEAR_WORST, NEAR_RATIO)
+            ratios.append(ratio[near])
+            slopes.append(slope[near])
     for rule in seen.rules:
         if np.isfinite(rule.ratio[row]):
             ratios.append(rule.ratio[row : row + 1])
@@ -276,6 +292,34 @@ def _add_amounts(
             model.add_row(f"{kind} at end {number}", terms, Sense.AT_LEAST, here + constant)
         buy(reagent, Expression({key: 1.0}))
     return demand
+
+
+def _offers_near(evaluator: Evaluator, seen: Evaluation, row: int, radius: float) -> list[Offer]:
+    """Offers that a step of this radius may buy from.
+
+    Where one offer is cheapest at both ends of the demand and above its least order throughout, it
+    stands alone without its least order, so that the step needs no binaries.
+    """
+    pricing = evaluator.pricing
+    fed = seen.priced.doses[row] + seen.priced.trim_doses[row]
+    found: list[Offer] = []
+    for i, dose in enumerate(fed):
+        mine = pricing.by_reagent[i]
+        ends = [dose * pricing.kg_per_mg_per_l * f for f in (1.0 / (1.0 + radius), 1.0 + radius)]
+        best = [_cheapest(mine, kg) for kg in ends]
+        only = best[0]
+        if (
+            dose > 0.0 and only is not None and only is best[1]
+            and ends[0] >= 1000.0 * only.least_order_t * only.strength_fraction
+        ):  # fmt: skip
+            found.append(replace(only, least_order_t=0.0))
+        else:
+            found += mine
+    return found
+
+
+def _cheapest(offers: Sequence[Offer], kg_pure: float) -> Offer | None:
+    return min(offers, key=lambda offer: yearly_cost(offer, kg_pure), default=None)
 
 
 def _amount_rows(seen: Evaluation, row: int, kind: str) -> list[tuple[float, FloatArray]]:

@@ -11,10 +11,15 @@ from collections.abc import Collection, Iterable, Mapping
 from dataclasses import dataclass
 from typing import SupportsFloat
 
+import numpy as np
+from numpy.typing import NDArray
+
 from optimiser.deal import FREIGHT, GOODS, KG_PER_T, Buy, Deal, buy_of, deal_of
 from optimiser.errors import NoPurchase, bad_demand, no_offer
 from optimiser.offer_checks import require_usable_offers
 from optimiser.site import Offer
+
+FloatArray = NDArray[np.float64]
 
 LEAST_DEMAND_KG = 1e-3
 """A demand above 0 counts as a gram a year at least: below that, solvers see nothing."""
@@ -86,6 +91,36 @@ class PriceBook:
         if demand_kg == 0.0:
             return 0.0
         return min(line.cost(demand_kg) for line in self._sold(reagent))
+
+    def costs(self, reagent: str, demand_kg: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Goods and freight of the cheapest purchase of many demands of one reagent.
+
+        Parameters
+        ----------
+        reagent
+            Id of the reagent; nobody selling it costs infinitely much.
+        demand_kg : ndarray, shape (n,)
+            Demands. [kg pure/year]
+
+        Returns
+        -------
+        ndarray, ndarray, shape (n,)
+            [currency/year]
+        """
+        demand = np.asarray(demand_kg, dtype=float)
+        goods, freight = np.full(demand.shape, np.inf), np.zeros(demand.shape)
+        best = np.full(demand.shape, np.inf)
+        for line in self._lines.get(reagent, ()):
+            cost = line.per_kg * np.maximum(demand, line.least_kg)
+            better = cost < best
+            share = line.offer.freight_per_t / max(
+                line.offer.price_per_t + line.offer.freight_per_t, 1e-300
+            )
+            goods = np.where(better, (1.0 - share) * cost, goods)
+            freight = np.where(better, share * cost, freight)
+            best = np.where(better, cost, best)
+        used = demand > 0.0
+        return np.where(used, goods, 0.0), np.where(used, freight, 0.0)
 
     def entry_cost(self, reagent: str) -> float:
         """Least yearly cost of buying any of a reagent at all: the jump at a demand of 0.

@@ -169,7 +169,7 @@ class Judge:
                         limit=self.plant.treatment.h2s_limit_ppm,
                         target=self.plant.treatment.h2s_limit_ppm,
                         source="site rule",
-                    )  # fmt: skip
+                    )
                 )
         return checks
 
@@ -200,7 +200,7 @@ class Judge:
                     source=limit.source,
                     metals=metals,
                     burden=burden,
-                )  # fmt: skip
+                )
             )
         return made
 
@@ -407,7 +407,7 @@ class Judge:
                 columns.append(np.zeros((total.shape[0], effluent.shape[2])))
         if not columns:
             return np.zeros((total.shape[0], 0, effluent.shape[2]))
-        return np.stack(columns, axis=1)
+        return np.asarray(np.stack(columns, axis=1), dtype=float)
 
     def _burden_slope(self, burden: str, judged: Judged, effluent: FloatArray) -> FloatArray:
         slope = np.einsum("c,nck->nk", self.burden_weights[burden], effluent)
@@ -416,14 +416,14 @@ class Judge:
             acid = judged.block.effluent[:, proton] > 0.0
             weight = np.where(acid, 1008.0, -17007.0)
             slope = slope + weight[:, None] * effluent[:, proton]
-        return slope
+        return np.asarray(slope, dtype=float)
 
     def _gas_slope(self, activity: FloatArray) -> FloatArray:
         system = self.plant.system
         if H2S_SPECIES not in system.species_names:
             return np.zeros((activity.shape[0], activity.shape[2]))
         k = system.species_names.index(H2S_SPECIES)
-        return np.einsum("c,nck->nk", system.formation[k], activity)
+        return np.asarray(np.einsum("c,nck->nk", system.formation[k], activity), dtype=float)
 
 
 def _parts(metal: str) -> tuple[str, ...]:

@@ -31,10 +31,10 @@ from optimiser.solver import SolverPort
 FloatArray = NDArray[np.float64]
 
 STARTS_PER_RECIPE = 2
-POLISHED_AT_ONCE = 12
-GIVE_UP_ABOVE = 1.3
+POLISHED_AT_ONCE = 40
 KEPT_PARTS = 10
 SETTLE_STEP = 0.01
+SETTLED = 2
 SETTLE_ROUNDS = 12
 GRID_CHUNK = 600
 
@@ -134,10 +134,10 @@ class Search:
 
     # -- propose -----------------------------------------------------------------------------------
 
-    def _propose(self, sizes: Sequence[int]) -> list[Points]:
+    def _propose(self, sizes: Sequence[int]) -> list[Place]:
         plant = self.evaluator.plant
         demand = self._demand()
-        starts: list[Points] = []
+        starts: list[Place] = []
         wanted = [r for size in sizes for r in recipes(plant, size)]
         grids = [(r, grid(self.evaluator, r, self.bounds, demand)) for r in wanted]
         self.progress(f"trying {len(grids)} recipes")
@@ -156,9 +156,9 @@ class Search:
         need = plant.totals[proton] - state.totals[:, proton]
         return {float(p): abs(float(n)) + 1e-5 for p, n in zip(ph, need, strict=True)}
 
-    def _best_of(self, grids: Sequence[tuple[Recipe, Points]]) -> list[Points]:
+    def _best_of(self, grids: Sequence[tuple[Recipe, Points]]) -> list[Place]:
         """Evaluate grids at the nominal state and return each recipe's best starts."""
-        starts: list[Points] = []
+        starts: list[Place] = []
         for chunk in _chunks(grids, GRID_CHUNK):
             joined = Points.join([g for _, g in chunk])
             seen = self.evaluator.evaluate(joined, full=False, all_ends=False)
@@ -170,7 +170,8 @@ class Search:
                 rows = slice(begin, begin + len(points))
                 begin += len(points)
                 self.findings.recipes_examined.add(self._names(recipe))
-                starts += [points.take([k]) for k in _basins(points.ph, merit[rows])]
+                found = _basins(points.ph, merit[rows])
+                starts += [Place(seen, rows.start + k) for k in found]
         return starts
 
     def _merit(self, seen: Evaluation) -> FloatArray:
@@ -183,11 +184,11 @@ class Search:
 
     # -- polish ------------------------------------------------------------------------------------
 
-    def _polish(self, starts: list[Points]) -> None:
+    def _polish(self, starts: list[Place]) -> None:
         if not starts:
             return
-        joined = Points.join(starts)
-        seen = self.evaluator.evaluate(joined, full=True, all_ends=False)
+        joined = Points.join([place.seen.points.take([place.point]) for place in starts])
+        seen = self.evaluator.evaluate(joined, full=True, all_ends=False, near=starts)
         self.findings.cells_examined += len(joined)
         self.findings.note_values(seen)
         order = np.argsort(self._merit(seen), kind="stable")
@@ -200,7 +201,7 @@ class Search:
             self.progress(f"polishing {batch.size} starts")
             tracks = polish(
                 self.evaluator, joined.take(batch), self.solver, bounds=self.bounds,
-                give_up_above=GIVE_UP_ABOVE, known=self._best_total(),
+                rival=self._best_total(), near=[Place(seen, int(i)) for i in batch],
             )  # fmt: skip
             for track in tracks:
                 self.findings.cells_examined += track.steps
@@ -217,7 +218,7 @@ class Search:
 
     # -- larger recipes ----------------------------------------------------------------------------
 
-    def _extend(self, size: int) -> list[Points]:
+    def _extend(self, size: int) -> list[Place]:
         """Starts of larger recipes: the best smaller points with one more reagent."""
         plant = self.evaluator.plant
         parts = sorted(
@@ -282,7 +283,7 @@ class Search:
 
     def _settle(self) -> None:
         """Try other trim reagents and moves of one or two doses by 1 % on the best recipes."""
-        for recipe, track in self.findings.feasible[:3]:
+        for recipe, track in self.findings.feasible[:SETTLED]:
             best = self._other_trims(track)
             best = self._settle_one(best)
             self.findings.keep(recipe, best)
