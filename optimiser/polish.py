@@ -6,7 +6,7 @@ and lets the mixed-integer solver move set point and doses; the full equilibrium
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -187,7 +187,7 @@ def build_step(
     model.add_cost("miss", Expression({"miss": PENALTY * scale}))
     _add_checks(model, seen, row, moves)
     demand = _add_amounts(model, evaluator, seen, row, moves)
-    add_purchasing(model, _offers_near(evaluator, seen, row, radius), demand)
+    _add_purchases(model, evaluator, seen, row, radius, demand)
     _add_disposal(model, evaluator, seen, row, moves)
     _add_burden(model, evaluator, seen, row, moves)
     return model
@@ -294,28 +294,32 @@ def _add_amounts(
     return demand
 
 
-def _offers_near(evaluator: Evaluator, seen: Evaluation, row: int, radius: float) -> list[Offer]:
-    """Offers that a step of this radius may buy from.
+def _add_purchases(
+    model: Model, evaluator: Evaluator, seen: Evaluation, row: int, radius: float,
+    demand: Mapping[str, Expression],
+) -> None:  # fmt: skip
+    """The purchasing block, with what cannot matter within a step of this radius left out.
 
-    Where one offer is cheapest at both ends of the demand and above its least order throughout, it
-    stands alone without its least order, so that the step needs no binaries.
+    Where one offer is cheapest at both ends of the demand, it stands alone: above its least order
+    throughout without that order, so that the step needs no binaries; below it throughout as the
+    constant cost of the least order.
     """
     pricing = evaluator.pricing
     fed = seen.priced.doses[row] + seen.priced.trim_doses[row]
-    found: list[Offer] = []
-    for i, dose in enumerate(fed):
+    offers: list[Offer] = []
+    wanted = dict(demand)
+    for i in (evaluator.plant.index[name] for name in demand):
         mine = pricing.by_reagent[i]
-        ends = [dose * pricing.kg_per_mg_per_l * f for f in (1.0 / (1.0 + radius), 1.0 + radius)]
-        best = [_cheapest(mine, kg) for kg in ends]
-        only = best[0]
-        if (
-            dose > 0.0 and only is not None and only is best[1]
-            and ends[0] >= 1000.0 * only.least_order_t * only.strength_fraction
-        ):  # fmt: skip
-            found.append(replace(only, least_order_t=0.0))
-        else:
-            found += mine
-    return found
+        ends = [fed[i] * pricing.kg_per_mg_per_l * f for f in (1.0 / (1.0 + radius), 1.0 + radius)]
+        best, other = (_cheapest(mine, kg) for kg in ends)
+        least_kg = 1000.0 * best.least_order_t * best.strength_fraction if best else 0.0
+        if best is None or best is not other or ends[0] < least_kg < ends[1]:
+            offers += mine
+        elif ends[0] >= least_kg:
+            offers.append(replace(best, least_order_t=0.0))
+        elif wanted.pop(evaluator.plant.names[i], None) is not None:
+            model.add_cost("least order", Expression({}, yearly_cost(best, ends[0])))
+    add_purchasing(model, offers, wanted)
 
 
 def _cheapest(offers: Sequence[Offer], kg_pure: float) -> Offer | None:
