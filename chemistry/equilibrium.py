@@ -17,6 +17,7 @@ from __future__ import annotations
 import numpy as np
 
 from chemistry.batch import Batch, IntArray, new_batch
+from chemistry.dose_search import begin_at_dose
 from chemistry.interior import START_ROUNDS, interior, start
 from chemistry.kernel import Kernel
 from chemistry.newton import finish
@@ -56,6 +57,18 @@ def _retry(kernel: Kernel, batch: Batch, rows: IntArray) -> None:
         finish(kernel, part)
         batch.put(rows, part)
         rows = rows[~part.converged]
+        if number == 0:
+            rows = _search_doses(kernel, batch, rows)
+
+
+def _search_doses(kernel: Kernel, batch: Batch, rows: IntArray) -> IntArray:
+    """Try rows with a held pH from the dose side; return the rows left, those without."""
+    held = ~np.isnan(batch.ph_ln[rows])
+    if held.any():
+        part = begin_at_dose(kernel, _afresh(kernel, batch, rows[held]), solve)
+        finish(kernel, part)
+        batch.put(rows[held], part)
+    return rows[~held]
 
 
 def solve_warm(kernel: Kernel, batch: Batch) -> None:

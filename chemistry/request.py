@@ -50,7 +50,7 @@ def read_request(
     _check_held(system, ph_values, co2)
     vectors = _titrant(system, titrant, n)
     _check_titrant(system, vectors, ph_values, co2)
-    ln_co2 = np.log(co2) + LN10 * LOG10_HENRY_CO2 - _co2_formation_ln(system)
+    ln_co2 = np.log(co2) + LN10 * LOG10_HENRY_CO2 - co2_formation_ln(system)
     return Request(array, ph_values, ln_co2, vectors)
 
 
@@ -178,7 +178,8 @@ def _check_titrant(system: System, titrant: FloatArray, ph: FloatArray, co2: Flo
         )
 
 
-def _co2_formation_ln(system: System) -> float:
+def co2_formation_ln(system: System) -> float:
+    """Natural log K of CO2(aq) from the components, 0 where the system has no such species."""
     if CO2_SPECIES not in system.species_names:
         return 0.0
     return float(system.ln_k[system.species_names.index(CO2_SPECIES)])

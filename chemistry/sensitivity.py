@@ -12,13 +12,17 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from chemistry.active_set import slots_of
-from chemistry.batch import BoolArray, FloatArray, IntArray
+from chemistry.batch import Batch, BoolArray, FloatArray, IntArray, new_batch
+from chemistry.equilibrium import solve_warm
+from chemistry.kernel import Kernel
 from chemistry.linear import equilibrate_matrix, solve_batch
 from chemistry.newton import Linearised, assemble, linearise
 from chemistry.system import LN10
 
 if TYPE_CHECKING:
     from chemistry.state import EquilibriumState
+
+TRACE_MOL_PER_L = 1e-20  # of a component that the water lacks and a direction adds
 
 
 @dataclass(frozen=True, eq=False)
@@ -43,25 +47,45 @@ def sensitivity_of(state: EquilibriumState, directions: FloatArray) -> Sensitivi
     Notes
     -----
     A held pH or pCO2 replaces balances by conditions at rest, as in the Newton step; the
-    derivative of the dissolved total of a component is that of the sum over its species.
+    derivative of the dissolved total of a component is that of the sum over its species. Along a
+    component that a water lacks it is the derivative from above, taken at a trace of it.
     """
     n, count = state.totals.shape
     ways = np.broadcast_to(directions, (n, *np.shape(directions)[-2:]))
-    kernel, batch = state.kernel, state.batch
-    slots, used = slots_of(state.active)
+    kernel, batch = state.kernel, _with_traces(state, ways)
+    slots, used = slots_of(batch.active)
     lin = linearise(kernel, batch, slots, used)
     bordered = assemble(kernel, batch, lin, used)
     scaled, row, column = equilibrate_matrix(bordered.matrix)
     rhs = np.zeros((n, scaled.shape[1], ways.shape[1]))
     for j in range(ways.shape[1]):
-        rhs[:, :count, j] = _at_rest(state, ways[:, j])
+        rhs[:, :count, j] = _at_rest(kernel, batch, ways[:, j])
     answer = solve_batch(scaled, rhs / row[:, :, None]) / column[:, :, None]
-    return _derivatives(state, ways, answer, lin, slots, used)
+    return _derivatives(kernel, batch, Solved(ways, answer, lin, slots, used))
 
 
-def _at_rest(state: EquilibriumState, way: FloatArray) -> FloatArray:
+def _with_traces(state: EquilibriumState, ways: FloatArray) -> Batch:
+    """The waters of a state, with a trace of every component that they lack and a way adds."""
+    batch = state.batch
+    added = ~batch.present & (ways != 0.0).any(axis=1)
+    rows = np.flatnonzero(added.any(axis=1))
+    if rows.size == 0:
+        return batch
+    part = batch.take(rows)
+    totals = np.where(added[rows], TRACE_MOL_PER_L, part.totals)
+    traced = new_batch(state.system, totals, -part.ph_ln / LN10, part.co2_ln, part.titrant)
+    traced.ln_activity = np.where(part.present, part.ln_activity, traced.ln_activity)
+    traced.ionic_strength, traced.solids = part.ionic_strength, part.solids
+    traced.active = part.active
+    solve_warm(state.kernel, traced)
+    whole = batch.take(np.arange(batch.totals.shape[0]))
+    whole.put(rows, traced)
+    whole.totals[rows], whole.present[rows] = traced.totals, traced.present
+    return whole
+
+
+def _at_rest(kernel: Kernel, batch: Batch, way: FloatArray) -> FloatArray:
     """Right-hand side of the balances for one direction, (n, components)."""
-    batch, kernel = state.batch, state.kernel
     rhs = way.copy()
     kernel.hold(batch, np.zeros((*rhs.shape, rhs.shape[1])), rhs)
     held = np.flatnonzero(~np.isnan(batch.ph_ln))
@@ -72,24 +96,32 @@ def _at_rest(state: EquilibriumState, way: FloatArray) -> FloatArray:
     return rhs
 
 
-def _derivatives(
-    state: EquilibriumState, ways: FloatArray, answer: FloatArray, lin: Linearised,
-    slots: IntArray, used: BoolArray,
-) -> Sensitivity:  # fmt: skip
-    kernel = state.kernel
-    count = state.totals.shape[1]
-    dl, dx = answer[:, :count], answer[:, count:]
+@dataclass(frozen=True, slots=True)
+class Solved:
+    """Ways (n, k, components), the bordered system's answers (n, size, k), and its parts."""
+
+    ways: FloatArray
+    answer: FloatArray
+    lin: Linearised
+    slots: IntArray
+    used: BoolArray
+
+
+def _derivatives(kernel: Kernel, batch: Batch, solved: Solved) -> Sensitivity:
+    lin, ways, slots = solved.lin, solved.ways, solved.slots
+    n, k, count = ways.shape
+    dl, dx = solved.answer[:, :count], solved.answer[:, count:]
     d_strength = np.einsum("nc,nck->nk", lin.to_strength, dl) / lin.denominator[:, None]
-    _, slope = kernel.model.screening(state.ionic_strength)
-    n, k = d_strength.shape
-    solids = np.zeros((n, state.solids_mol_per_l.shape[1], k))
-    np.put_along_axis(solids, slots[:, :, None], np.where(used[:, :, None], dx, 0.0), axis=1)
+    _, slope = kernel.model.screening(batch.ionic_strength)
+    solids = np.zeros((n, batch.solids.shape[1], k))
+    dx = np.where(solved.used[:, :, None], dx, 0.0)
+    np.put_along_axis(solids, slots[:, :, None], dx, axis=1)
     dissolved, titrant = np.empty((n, count, k)), np.empty((n, k))
     for j in range(k):
         dm = dl[:, :, j] @ kernel.formation_t
         dm += (slope * d_strength[:, j])[:, None] * kernel.z2
         dissolved[:, :, j] = (lin.m * dm) @ kernel.formation
         total = dissolved[:, :, j] + solids[:, :, j] @ kernel.solid_formation
-        titrant[:, j], _ = kernel.doses(state.batch, total - ways[:, j])
+        titrant[:, j], _ = kernel.doses(batch, total - ways[:, j])
     ph = -dl[:, kernel.proton] / LN10 if kernel.proton >= 0 else np.full((n, k), np.nan)
     return Sensitivity(dissolved, ph, solids, titrant, np.swapaxes(dl, 1, 2))
