@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from dataclasses import replace
 from functools import cache
 from pathlib import Path
 
@@ -14,8 +15,8 @@ from numpy.typing import NDArray
 import catalogs
 from chemistry import equilibrate
 from chemistry.feed import ANALYTES, FeedWater, feed_water
-from optimiser import load_site
-from optimiser.site import Site
+from optimiser import load_site, plan
+from optimiser.site import Limit, Site
 
 FloatArray = NDArray[np.float64]
 
@@ -200,3 +201,50 @@ class TestStories:
         )
         assert left[2] > left[1] > left[0]
         assert left[2] > 0.02
+
+
+# What each demo's cheapest plan uses, and the limit it sits on.
+BINDING = {
+    "plating_rinse": (("caustic_soda", "sodium_hydrosulfide"), "Ni"),
+    "silver_rinse": (("caustic_soda", "sodium_chloride"), "Ag"),
+    "barium_glaze": (("sulfuric_acid", "hydrochloric_acid"), "SO4"),
+    "lead_battery": (("caustic_soda", "quicklime", "soda_ash"), "SO4"),
+    "mercury_lab": (("caustic_soda", "ferrous_sulfide"), "Zn"),
+}
+
+
+def narrowed(site: Site, reagents: tuple[str, ...]) -> Site:
+    """The site with these reagents only, so that planning takes a second."""
+    least = site.treatment.least_doses_mg_per_l
+    kept = {name: dose for name, dose in least.items() if name in reagents}
+    treatment = replace(site.treatment, reagents=reagents, least_doses_mg_per_l=kept)
+    return replace(site, treatment=treatment)
+
+
+def loosened(site: Site, parameter: str, factor: float) -> Site:
+    def one(limit: Limit) -> Limit:
+        if limit.parameter != parameter:
+            return limit
+        daily, monthly = limit.daily_mg_per_l, limit.monthly_mg_per_l
+        return replace(
+            limit,
+            daily_mg_per_l=None if daily is None else factor * daily,
+            monthly_mg_per_l=None if monthly is None else factor * monthly,
+        )
+
+    return replace(site, limits=tuple(one(limit) for limit in site.limits))
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_a_limit_truly_binds(name: str) -> None:
+    reagents, parameter = BINDING[name]
+    site = narrowed(demo(name), reagents)
+    tight, loose = plan(site), plan(loosened(site, parameter, 1.25))
+    assert tight.compliant
+    fullest = max(
+        row["predicted"] / row["target"]
+        for row in tight.to_dict()["limits"]
+        if row["parameter"] == parameter
+    )
+    assert fullest == pytest.approx(1.0, abs=2e-3)
+    assert loose.cost["total"] < 0.999 * tight.cost["total"]
