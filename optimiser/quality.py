@@ -144,11 +144,13 @@ class Judge:
         found = []
         for solid in system.solids:
             parts = solid.stoichiometry
+            # basic chlorides and sulfates are what a hydroxide plant makes: they release protons
+            basic = parts.get("H+", 0.0) < 0.0
             for component, family in (
                 ("HS-", "sulfide"), ("SO4-2", "sulfate"), ("CO3-2", "carbonate"),
                 ("Cl-", "chloride"), ("PO4-3", "phosphate"), ("F-", "fluoride"),
             ):  # fmt: skip
-                if component in parts:
+                if component in parts and not (basic and family in ("sulfate", "chloride")):
                     found.append(family)
                     break
             else:
@@ -309,10 +311,13 @@ class Judge:
         ways[:, 0] = np.where(
             (controller >= 0)[:, None], plant.reacting[np.maximum(controller, 0)], 0.0
         )
-        factor = rows.factor[block.rows]
+        # reagents that a point does not dose are left at rest: their components may be absent
+        dosed = points.doses[rows.point[block.rows]] > 0.0
+        factor = rows.factor[block.rows] * dosed
         ways[:, 1:] = factor[:, :, None] * plant.reacting[None]
         if block.end in (VENTED_FORMED, VENTED_HELD):
-            ways[:, 1:] -= block.lost_slope[None, :, None] * self.vent_co2
+            lost = block.lost_slope[None, :] * dosed
+            ways[:, 1:] -= lost[:, :, None] * self.vent_co2
         return ways
 
     def _slopes(

@@ -161,7 +161,7 @@ class Search:
         starts: list[Place] = []
         for chunk in _chunks(grids, GRID_CHUNK):
             joined = Points.join([g for _, g in chunk])
-            seen = self.evaluator.evaluate(joined, full=False, all_ends=False)
+            seen = self.evaluator.evaluate(joined, full=False)
             self.findings.cells_examined += len(joined)
             self.findings.note_values(seen)
             merit = self._merit(seen)
@@ -188,7 +188,7 @@ class Search:
         if not starts:
             return
         joined = Points.join([place.seen.points.take([place.point]) for place in starts])
-        seen = self.evaluator.evaluate(joined, full=True, all_ends=False, near=starts)
+        seen = self.evaluator.evaluate(joined, near=starts)
         self.findings.cells_examined += len(joined)
         self.findings.note_values(seen)
         order = np.argsort(self._merit(seen), kind="stable")
