@@ -24,6 +24,11 @@ if TYPE_CHECKING:
 
 DONE, OUR_FAULT, BAD_INPUT, NO_PLAN, STOPPED = 0, 1, 2, 3, 4
 
+_PLEASE_REPORT = (
+    "Please run the command again with --debug and send the output with the site file to the "
+    "maintainers."
+)
+
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """Run the program and return its exit code.
@@ -54,7 +59,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return DONE
     except _known_errors() as error:
-        return _refuse(error)
+        return _refuse(error, debug=options.debug)
     return code
 
 
@@ -66,7 +71,9 @@ def _known_errors() -> tuple[type[Exception], ...]:
     return (InputFileError, ChemistryError, OptimiserError, OSError)
 
 
-def _refuse(error: Exception) -> int:
+def _refuse(error: Exception, *, debug: bool) -> int:
+    import traceback
+
     from catalogs.problems import InputFileError
     from chemistry.errors import WaterError
     from optimiser.errors import OptimiserError
@@ -79,10 +86,13 @@ def _refuse(error: Exception) -> int:
     if isinstance(error, OSError):
         _say(f"{error.filename or 'input or output'}: {error.strerror or error}")
         return BAD_INPUT
-    _say(str(error))
+    code = BAD_INPUT if isinstance(error, WaterError) else OUR_FAULT
     if isinstance(error, OptimiserError):
-        return error.exit_code
-    return BAD_INPUT if isinstance(error, WaterError) else OUR_FAULT
+        code = error.exit_code
+    if code == OUR_FAULT and debug:
+        traceback.print_exception(error)
+    _say(f"{error}\n    {_PLEASE_REPORT}" if code == OUR_FAULT else str(error))
+    return code
 
 
 def _report_fault(
@@ -99,8 +109,7 @@ def _report_fault(
     text = " ".join(str(value).split()) or "no message"
     _say(
         f"a fault of the program, not of your input: {kind.__name__}{where}: {text}. "
-        "Please run the command again with --debug and send the output with the site file "
-        "to the maintainers."
+        f"{_PLEASE_REPORT}"
     )
 
 

@@ -360,6 +360,22 @@ def test_a_fault_of_the_program_is_one_line_and_says_what_to_do() -> None:
     )
 
 
+def test_a_state_that_misses_its_certificate_is_a_fault_of_the_program() -> None:
+    error = "from chemistry.errors import EquilibriumError as RuntimeError\n"
+    plain = run_code(error + FAULTY, "check", "site.yaml")
+    assert (plain.returncode, plain.stdout) == (1, "")
+    assert plain.stderr.startswith("dosewright: the cat sat\non the keyboard\n    Please run the")
+    detailed = run_code(error + FAULTY, "check", "site.yaml", "--debug")
+    assert detailed.returncode == 1
+    assert "Traceback" in detailed.stderr
+
+
+def test_debug_leaves_mistakes_of_the_user_as_they_are() -> None:
+    done = run("check", "absent.yaml", "--debug")
+    assert done.returncode == 2
+    assert "Traceback" not in done.stderr
+
+
 def test_debug_shows_where_a_fault_came_from() -> None:
     done = run_code(FAULTY, "check", "site.yaml", "--debug")
     assert done.returncode == 1
