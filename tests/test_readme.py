@@ -135,3 +135,14 @@ def test_every_link_into_the_house_leads_somewhere() -> None:
     targets = re.findall(r"\]\((?!https?://)([^)#]+)\)", README)
     assert targets
     assert [target for target in targets if not (ROOT / target).exists()] == []
+
+
+def test_the_guide_names_every_module() -> None:
+    guide = (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")
+    modules = {
+        path.stem
+        for package in ("chemistry", "catalogs", "optimiser")
+        for path in (ROOT / package).glob("*.py")
+        if not path.stem.startswith("__")
+    }
+    assert sorted(name for name in modules if f"`{name}`" not in guide) == []
