@@ -55,7 +55,7 @@ def exchange(kernel: Kernel, part: Batch, solved: BoolArray) -> BoolArray:
     negative = np.where(part.active, part.solids, 0.0)
     worst = np.argmin(negative, axis=1)
     drop = solved & (negative[take, worst] < 0.0)
-    si = np.where(part.active, -np.inf, kernel.saturation_ln(part.ln_activity))
+    si = np.where(part.active, -np.inf, kernel.saturation_ln(part.ln_activity, part.surroundings))
     best = np.argmax(si, axis=1)
     add = solved & ~drop & (si[take, best] > 0.5e-8 * LN10)
     part.active[take[drop], worst[drop]] = False

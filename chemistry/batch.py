@@ -23,6 +23,7 @@ ABSENT_LN = -1.0e3  # log activity of a component that a water does not contain
 class Batch:
     """Waters being solved: totals, what is held fixed, and the current iterate.
 
+    ``surroundings`` is what the activity model sees of the species, ionic strength first;
     ``ph_ln`` is ln a(H+) where pH is held, else nan; ``co2_ln`` is ln a(CO3) + 2 ln a(H) where
     pCO2 is held, else nan; ``titrant`` is what is added to hold the pH, per mole, and ``pivot`` the
     component whose balance tells its dose.
@@ -35,7 +36,7 @@ class Batch:
     pivot: IntArray
     present: BoolArray
     ln_activity: FloatArray
-    ionic_strength: FloatArray
+    surroundings: FloatArray
     solids: FloatArray
     active: BoolArray
     converged: BoolArray
@@ -46,7 +47,7 @@ class Batch:
 
     def put(self, rows: IntArray | BoolArray, part: Batch) -> None:
         """Write the iterate of a part back into these rows."""
-        for name in ("ln_activity", "ionic_strength", "solids", "active", "converged"):
+        for name in ("ln_activity", "surroundings", "solids", "active", "converged"):
             getattr(self, name)[rows] = getattr(part, name)
 
 
@@ -76,9 +77,22 @@ def new_batch(
     return Batch(
         totals=totals, ph_ln=ph_ln, co2_ln=ln_co2, titrant=titrant,
         pivot=pivots(system, titrant, ~np.isnan(ln_co2)), present=present,
-        ln_activity=guess, ionic_strength=strength, solids=np.zeros((n, p)),
+        ln_activity=guess, surroundings=_first_surroundings(system, totals, strength),
+        solids=np.zeros((n, p)),
         active=np.zeros((n, p), dtype=bool), converged=np.zeros(n, dtype=bool),
     )  # fmt: skip
+
+
+def _first_surroundings(
+    system: System, totals: FloatArray, ionic_strength: FloatArray
+) -> FloatArray:
+    """A guess: every component a free ion, the ionic strength bounded."""
+    free = np.zeros((totals.shape[0], len(system.species_names)))
+    free[:, : totals.shape[1]] = np.abs(totals)
+    surroundings = free @ system.activity_model.functionals
+    surroundings = np.minimum(surroundings, 1.0)
+    surroundings[:, 0] = ionic_strength
+    return surroundings
 
 
 def pivots(system: System, titrant: FloatArray, holds_co2: BoolArray) -> IntArray:

@@ -48,7 +48,7 @@ def begin_at_dose(kernel: Kernel, batch: Batch, solve: Solve) -> Batch:
         same = (_miss(kernel, some, free) < 0.0) == sign
         low, high = np.where(same, middle, low), np.where(same, high, middle)
     free = _at_doses(kernel, some, 0.5 * (low + high), solve)
-    for name in ("ln_activity", "ionic_strength", "solids", "active"):
+    for name in ("ln_activity", "surroundings", "solids", "active"):
         setattr(some, name, getattr(free, name))
     batch.put(rows, some)
     return batch

@@ -28,7 +28,7 @@ def start(kernel: Kernel, batch: Batch, rounds: int = START_ROUNDS) -> None:
     move = batch.present & ~held
     dosed = np.flatnonzero(ph & (np.count_nonzero(batch.titrant, axis=1) > 1))
     for turn in range(rounds):
-        m = kernel.molalities(batch.ln_activity, batch.ionic_strength)
+        m = kernel.molalities(batch.ln_activity, batch.surroundings)
         if dosed.size:
             totals[dosed] = _with_titrant(kernel, batch.take(dosed), m[dosed])
         gain = m @ kernel.positive + np.maximum(-totals, 0.0)
@@ -41,8 +41,8 @@ def start(kernel: Kernel, batch: Batch, rounds: int = START_ROUNDS) -> None:
         step = np.where(move, theta * np.clip(ratio, -30.0, 30.0), 0.0)
         batch.ln_activity += step
         _hold_start(kernel, batch)
-        strength = np.minimum(0.5 * (m @ kernel.z2), 5.0)
-        batch.ionic_strength = 0.5 * (batch.ionic_strength + strength)
+        seen = np.minimum(kernel.surroundings(m), 5.0)
+        batch.surroundings = 0.5 * (batch.surroundings + seen)
         if np.max(np.abs(np.where(move, ratio, 0.0)), initial=0.0) < 0.02:
             break
 
@@ -117,7 +117,7 @@ def interior(kernel: Kernel, batch: Batch, *, target: float = 1e-6, shrink: floa
 def _barrier(kernel: Kernel, batch: Batch) -> Barrier:
     most = _most(kernel, batch)
     possible = most > 0.0
-    saturation = kernel.saturation_ln(batch.ln_activity)
+    saturation = kernel.saturation_ln(batch.ln_activity, batch.surroundings)
     slack = np.where(possible, np.maximum(-saturation, 1.0), 1.0)
     amount = np.where(possible, np.where(saturation > 0, 0.3, 0.05 / slack), 0.0)
     return Barrier(amount, slack, np.where(possible, most, 1.0), possible)
@@ -146,16 +146,16 @@ def _most(kernel: Kernel, batch: Batch) -> FloatArray:
 
 
 def _sums(kernel: Kernel, batch: Batch) -> FloatArray:
-    return kernel.molalities(batch.ln_activity, batch.ionic_strength) @ kernel.formation
+    return kernel.molalities(batch.ln_activity, batch.surroundings) @ kernel.formation
 
 
 def _interior_step(
     kernel: Kernel, part: Batch, edge: Barrier, mu: FloatArray, target: float
 ) -> BoolArray:
     x, s, pos = edge.amount, edge.slack, edge.possible
-    m = kernel.molalities(part.ln_activity, part.ionic_strength)
+    m = kernel.molalities(part.ln_activity, part.surroundings)
     sums, scale = kernel.amounts(m, x * edge.most)
-    off = np.where(pos, -(kernel.saturation_ln(part.ln_activity) + s), 0.0)
+    off = np.where(pos, -(kernel.saturation_ln(part.ln_activity, part.surroundings) + s), 0.0)
     weight = np.where(pos, x * edge.most / s, 0.0)
     matrix = kernel.gram(m, weight)
     pull = np.where(pos, (mu[:, None] / s - x) * edge.most, 0.0)
@@ -176,9 +176,9 @@ def _interior_step(
     part.ln_activity += np.where(go, primal[:, None] * dl, 0.0)
     edge.slack = np.where(go, s + primal[:, None] * ds, s)
     edge.amount = np.where(go, np.minimum(x + dual[:, None] * dx, 1e6), x)
-    strength = np.minimum(0.5 * (m @ kernel.z2), 2.0)
-    blended = np.clip(strength, 0.5 * part.ionic_strength, 2.0 * part.ionic_strength + 1e-9)
-    part.ionic_strength = np.where(done, part.ionic_strength, blended)
+    seen, before = np.minimum(kernel.surroundings(m), 5.0), part.surroundings
+    blended = np.clip(seen, 0.5 * before, 2.0 * before + 1e-9)
+    part.surroundings = np.where(done[:, None], before, blended)
     return done
 
 

@@ -25,7 +25,8 @@ class Kernel:
         self.solid_formation = system.solid_formation
         self.solid_ln_k = system.solid_ln_k
         self.model = system.activity_model
-        self.z2 = self.model.squared_charges
+        self.functionals = self.model.functionals
+        self.solid_water = system.solid_water
         count = len(system.components)
         self.upper = np.triu_indices(count)
         self.pairs = self.formation[:, self.upper[0]] * self.formation[:, self.upper[1]]
@@ -42,17 +43,23 @@ class Kernel:
 
     # -- shared evaluations -------------------------------------------------------------------
 
-    def molalities(self, ln_activity: FloatArray, ionic_strength: FloatArray) -> FloatArray:
+    def molalities(self, ln_activity: FloatArray, surroundings: FloatArray) -> FloatArray:
         """Species concentrations by mass action, (n, species). [mol/L]"""
-        screening, _ = self.model.screening(ionic_strength)
         ln_m = ln_activity @ self.formation_t
         ln_m += self.ln_k
-        ln_m += screening[:, None] * self.z2
+        ln_m += self.model.offset(surroundings)
         return np.exp(np.minimum(ln_m, LN_MOLALITY_CAP))
 
-    def saturation_ln(self, ln_activity: FloatArray) -> FloatArray:
+    def surroundings(self, m: FloatArray) -> FloatArray:
+        """What the activity model sees of the species, (n, width), ionic strength first."""
+        return m @ self.functionals
+
+    def saturation_ln(self, ln_activity: FloatArray, surroundings: FloatArray) -> FloatArray:
         """Natural-log saturation index of every candidate solid, (n, solids)."""
-        return ln_activity @ self.solid_formation.T + self.solid_ln_k
+        index = ln_activity @ self.solid_formation.T
+        index += self.solid_ln_k
+        index += self.model.ln_water(surroundings)[:, None] * self.solid_water
+        return index
 
     def gram(self, m: FloatArray, solids_weight: FloatArray | None = None) -> FloatArray:
         """A^T diag(m) A (+ G^T diag(w) G), (n, components, components)."""

@@ -20,23 +20,32 @@ EXCHANGE_ROUNDS = 60
 MASS_TOLERANCE = 1e-12  # mass balance at which the Newton step stops
 MASS_TOLERANCE_LAST = 5e-11  # accepted in the last round, where rounding allows no more
 LARGEST_STEP_LN = 6.0  # of a log activity in one step
+SURROUNDINGS_TOLERANCE = 1e-12  # of the ionic strength
 SATURATION_TOLERANCE = 1e-11  # |SI| (natural log) of present solids at which it stops
 
 
 @dataclass(slots=True)
 class Linearised:
-    """Balances and their first derivatives at an iterate."""
+    """Balances and their first derivatives at an iterate.
+
+    ``columns`` are the surroundings that move with Newton; ``follow`` (n, columns, components) is
+    their change with the log activities and ``follow_gap`` what they are off by themselves;
+    ``off`` (n, width) is by how much the species contradict every surrounding.
+    """
 
     m: FloatArray
     sums: FloatArray
     scale: FloatArray
     matrix: FloatArray
     rhs: FloatArray
+    stoichiometry: FloatArray
     g: FloatArray
     saturation: FloatArray
-    to_strength: FloatArray
-    denominator: FloatArray
-    strength_gap: FloatArray
+    miss: FloatArray
+    columns: IntArray
+    follow: FloatArray
+    follow_gap: FloatArray
+    off: FloatArray
 
 
 @dataclass(slots=True)
@@ -84,49 +93,67 @@ def _newton(kernel: Kernel, part: Batch, rounds: int) -> BoolArray:
     return solved
 
 
-def linearise(kernel: Kernel, part: Batch, slots: IntArray, used: BoolArray) -> Linearised:
-    """Balances and saturation of the present solids with their Jacobian."""
-    m = kernel.molalities(part.ln_activity, part.ionic_strength)
+def linearise(
+    kernel: Kernel, part: Batch, slots: IntArray, used: BoolArray, *, columns: IntArray
+) -> Linearised:
+    """Balances and saturation of the present solids with their Jacobian.
+
+    Notes
+    -----
+    With ``y = m L`` and ``d ln m = A dl + O dy`` the surroundings follow the log activities by
+    ``(1 - L'MO) dy = (m L - y) + L'MA dl``, which is eliminated.
+    """
+    model, y = kernel.model, part.surroundings
+    m = kernel.molalities(part.ln_activity, y)
     sums, scale = kernel.amounts(m, part.solids)
-    _, slope = kernel.model.screening(part.ionic_strength)
-    q = 0.5 * m * kernel.z2
-    gain = (q * kernel.z2) @ np.ones(q.shape[1])  # q.z^2
-    denominator = 1.0 - slope * gain  # F = -z^2 D', and d ln m = A dl + z^2 D' dI
-    spread = m * kernel.z2 * slope[:, None]  # dm/dI at fixed l
-    to_strength = q @ kernel.formation  # dI/dl at fixed I
-    strength_gap = 0.5 * (m @ kernel.z2) - part.ionic_strength
-    matrix = kernel.gram(m)
-    side = spread @ kernel.formation
-    matrix += side[:, :, None] * (to_strength / denominator[:, None])[:, None, :]
-    rhs = part.totals - sums - side * (strength_gap / denominator)[:, None]
-    g = kernel.solid_formation[slots] * used[:, :, None] * part.present[:, None, :]
-    si = np.take_along_axis(kernel.saturation_ln(part.ln_activity), slots, axis=1)
+    off = kernel.surroundings(m) - y
+    spread = m[:, :, None] * model.offset_slope(y, columns)  # dm/dy at fixed l
+    weights = kernel.functionals[:, columns]
+    held_back = np.eye(columns.size) - weights.T @ spread
+    by_activity = (m[:, None, :] * weights.T) @ kernel.formation
+    known = np.concatenate([by_activity, off[:, columns, None]], axis=2)
+    followed = known / held_back if columns.size == 1 else np.linalg.solve(held_back, known)
+    follow, follow_gap = followed[:, :, :-1], followed[:, :, -1]
+    side = np.swapaxes(spread, 1, 2) @ kernel.formation  # (n, columns, components)
+    matrix = kernel.gram(m) + np.swapaxes(side, 1, 2) @ follow
+    rhs = part.totals - sums - (follow_gap[:, None, :] @ side)[:, 0]
+    g = kernel.solid_formation[slots]
+    si = np.take_along_axis(kernel.saturation_ln(part.ln_activity, y), slots, axis=1)
+    saturation = si
+    if model.name == "sit":
+        water = model.ln_water_slope(y)[:, columns]
+        moles = kernel.solid_water[slots]
+        g = g + moles[:, :, None] * np.einsum("ny,nyc->nc", water, follow)[:, None, :]
+        saturation = si + moles * np.einsum("ny,ny->n", water, follow_gap)[:, None]
+    stoichiometry = kernel.solid_formation[slots] * used[:, :, None] * part.present[:, None, :]
     return Linearised(
-        m=m, sums=sums, scale=scale, matrix=matrix, rhs=rhs, g=g,
-        saturation=np.where(used, si, 0.0), to_strength=to_strength,
-        denominator=denominator, strength_gap=strength_gap,
+        m=m, sums=sums, scale=scale, matrix=matrix, rhs=rhs, stoichiometry=stoichiometry,
+        g=g * used[:, :, None] * part.present[:, None, :],
+        saturation=np.where(used, saturation, 0.0), miss=np.where(used, si, 0.0),
+        columns=columns, follow=follow, follow_gap=follow_gap, off=off,
     )  # fmt: skip
 
 
 def _newton_step(
     kernel: Kernel, part: Batch, slots: IntArray, used: BoolArray, tolerance: float
 ) -> BoolArray:
-    lin = linearise(kernel, part, slots, used)
+    _refresh_lagging(kernel, part)
+    columns = kernel.model.leading(part.surroundings)
+    lin = linearise(kernel, part, slots, used, columns=columns)
     done = _is_exact(kernel, part, lin, tolerance)
     system = assemble(kernel, part, lin, used)
     step = solve_equilibrated(system.matrix, system.rhs)
     count = part.totals.shape[1]
     dl, dx = step[:, :count], step[:, count:]
-    d_strength = (np.einsum("nc,nc->n", lin.to_strength, dl) + lin.strength_gap) / lin.denominator
+    dy = np.einsum("nyc,nc->ny", lin.follow, dl) + lin.follow_gap
     alpha = kernel.step_cap(part, lin.m, dl, lin.scale)
     alpha = np.minimum(alpha, LARGEST_STEP_LN / np.maximum(np.abs(dl).max(axis=1), 1e-300))
     bad = ~np.isfinite(step).all(axis=1)
     alpha = np.where(done | bad, 0.0, alpha)
     part.ln_activity += alpha[:, None] * np.where(np.isfinite(dl), dl, 0.0)
-    moved = np.where(np.isfinite(d_strength), alpha * d_strength, 0.0)
-    part.ionic_strength = np.clip(
-        part.ionic_strength + moved, 0.2 * part.ionic_strength, 5.0 * part.ionic_strength + 1e-9
-    )
+    here = part.surroundings[:, columns]
+    moved = here + np.where(np.isfinite(dy), alpha[:, None] * dy, 0.0)
+    part.surroundings[:, columns] = np.clip(moved, 0.2 * here, 5.0 * here + 1e-9)
     change = np.where(used & np.isfinite(dx), alpha[:, None] * dx, 0.0)
     if change.shape[1]:
         amounts = np.take_along_axis(part.solids, slots, axis=1) + change
@@ -134,13 +161,24 @@ def _newton_step(
     return done
 
 
+def _refresh_lagging(kernel: Kernel, part: Batch) -> None:
+    """Take the surroundings that Newton leaves out from the species as they are, in place."""
+    width = kernel.model.width
+    if width == 1:
+        return
+    lagging = np.setdiff1d(np.arange(width), kernel.model.leading(part.surroundings))
+    m = kernel.molalities(part.ln_activity, part.surroundings)
+    part.surroundings[:, lagging] = (m @ kernel.functionals)[:, lagging]
+
+
 def _is_exact(kernel: Kernel, part: Batch, lin: Linearised, tolerance: float) -> BoolArray:
     relative = np.abs(kernel.misses(part, lin.sums)) / np.maximum(lin.scale, 1e-300)
-    strength = np.abs(lin.strength_gap) / np.maximum(part.ionic_strength, 1e-12)
+    size = np.maximum(part.surroundings[:, 0], 1e-12)
+    off = np.abs(lin.off).max(axis=1) / size
     exact: BoolArray = (
         (relative.max(axis=1) < tolerance)
-        & (np.abs(lin.saturation).max(axis=1, initial=0.0) < SATURATION_TOLERANCE)
-        & (strength < 1e-12)
+        & (np.abs(lin.miss).max(axis=1, initial=0.0) < SATURATION_TOLERANCE)
+        & (off < SURROUNDINGS_TOLERANCE)
         & (kernel.held_misses(part) < 1e-12)
     )
     return exact
@@ -152,7 +190,7 @@ def assemble(kernel: Kernel, part: Batch, lin: Linearised, used: BoolArray) -> A
     width = used.shape[1]
     matrix = np.zeros((n, count + width, count + width))
     matrix[:, :count, :count] = lin.matrix
-    matrix[:, :count, count:] = np.swapaxes(lin.g, 1, 2)
+    matrix[:, :count, count:] = np.swapaxes(lin.stoichiometry, 1, 2)
     matrix[:, count:, :count] = lin.g
     rhs = np.zeros((n, count + width))
     rhs[:, :count] = lin.rhs

@@ -54,7 +54,8 @@ def sensitivity_of(state: EquilibriumState, directions: FloatArray) -> Sensitivi
     ways = np.broadcast_to(directions, (n, *np.shape(directions)[-2:]))
     kernel, batch = state.kernel, _with_traces(state, ways)
     slots, used = slots_of(batch.active)
-    lin = linearise(kernel, batch, slots, used)
+    columns = kernel.model.leading(batch.surroundings, least=0.0)
+    lin = linearise(kernel, batch, slots, used, columns=columns)
     bordered = assemble(kernel, batch, lin, used)
     scaled, row, column = equilibrate_matrix(bordered.matrix)
     rhs = np.zeros((n, scaled.shape[1], ways.shape[1]))
@@ -75,7 +76,7 @@ def _with_traces(state: EquilibriumState, ways: FloatArray) -> Batch:
     totals = np.where(added[rows], TRACE_MOL_PER_L, part.totals)
     traced = new_batch(state.system, totals, -part.ph_ln / LN10, part.co2_ln, part.titrant)
     traced.ln_activity = np.where(part.present, part.ln_activity, traced.ln_activity)
-    traced.ionic_strength, traced.solids = part.ionic_strength, part.solids
+    traced.surroundings, traced.solids = part.surroundings, part.solids
     traced.active = part.active
     solve_warm(state.kernel, traced)
     whole = batch.take(np.arange(batch.totals.shape[0]))
@@ -111,15 +112,15 @@ def _derivatives(kernel: Kernel, batch: Batch, solved: Solved) -> Sensitivity:
     lin, ways, slots = solved.lin, solved.ways, solved.slots
     n, k, count = ways.shape
     dl, dx = solved.answer[:, :count], solved.answer[:, count:]
-    d_strength = np.einsum("nc,nck->nk", lin.to_strength, dl) / lin.denominator[:, None]
-    _, slope = kernel.model.screening(batch.ionic_strength)
+    followed = lin.follow @ dl  # (n, columns, k)
+    slope = kernel.model.offset_slope(batch.surroundings, lin.columns)
     solids = np.zeros((n, batch.solids.shape[1], k))
     dx = np.where(solved.used[:, :, None], dx, 0.0)
     np.put_along_axis(solids, slots[:, :, None], dx, axis=1)
     dissolved, titrant = np.empty((n, count, k)), np.empty((n, k))
     for j in range(k):
         dm = dl[:, :, j] @ kernel.formation_t
-        dm += (slope * d_strength[:, j])[:, None] * kernel.z2
+        dm += np.einsum("nsy,ny->ns", slope, followed[:, :, j])
         dissolved[:, :, j] = (lin.m * dm) @ kernel.formation
         total = dissolved[:, :, j] + solids[:, :, j] @ kernel.solid_formation
         titrant[:, j], _ = kernel.doses(batch, total - ways[:, j])

@@ -54,7 +54,7 @@ class EquilibriumState:
     system: System
     totals: FloatArray
     log_activity: FloatArray
-    ionic_strength: FloatArray
+    surroundings: FloatArray
     solids_mol_per_l: FloatArray
     titrant_mol_per_l: FloatArray
     active: BoolArray
@@ -69,10 +69,15 @@ class EquilibriumState:
             return np.full(self.totals.shape[0], np.nan)
         return -self.log_activity[:, self.kernel.proton] / LN10
 
+    @property
+    def ionic_strength(self) -> FloatArray:
+        """Ionic strength, (n,). [mol/L]"""
+        return self.surroundings[:, 0]
+
     @cached_property
     def species_mol_per_l(self) -> FloatArray:
         """Concentration of every species, (n, species), order of ``system.species_names``."""
-        return self.kernel.molalities(self.log_activity, self.ionic_strength)
+        return self.kernel.molalities(self.log_activity, self.surroundings)
 
     @cached_property
     def dissolved_mol_per_l(self) -> FloatArray:
@@ -82,7 +87,7 @@ class EquilibriumState:
     @cached_property
     def saturation_index_log10(self) -> FloatArray:
         """log10 saturation index of every candidate solid, (n, solids); -inf where impossible."""
-        index = self.kernel.saturation_ln(self.log_activity) / LN10
+        index = self.kernel.saturation_ln(self.log_activity, self.surroundings) / LN10
         return np.where(index < 0.4 * ABSENT_LN / LN10, -np.inf, index)
 
     def partial_pressure_atm(self, species: str) -> FloatArray:
@@ -98,6 +103,7 @@ class EquilibriumState:
             return np.zeros(self.totals.shape[0])
         k = self.system.species_names.index(species)
         ln_a = self.log_activity @ self.system.formation[k] + self.system.ln_k[k]
+        ln_a += self.system.water[k] * self.kernel.model.ln_water(self.surroundings)
         pressure: FloatArray = np.exp(ln_a - LN10 * log10_henry)
         return pressure
 
@@ -108,7 +114,7 @@ class EquilibriumState:
         sums, scale = self.kernel.amounts(m, self.solids_mol_per_l)
         mass = np.abs(sums - self.totals) / np.maximum(scale, 1e-300)
         mass = np.where(self.batch.present, mass, 0.0).max(axis=1)
-        si = self.kernel.saturation_ln(self.log_activity) / LN10
+        si = self.kernel.saturation_ln(self.log_activity, self.surroundings) / LN10
         present = np.abs(np.where(self.active, si, 0.0)).max(axis=1, initial=0.0)
         absent = np.where(self.active, -np.inf, si).max(axis=1, initial=-np.inf)
         charged = np.abs(m * self.system.charges).sum(axis=1)
@@ -176,7 +182,7 @@ class EquilibriumState:
         """Return some states."""
         return EquilibriumState(
             self.system, self.totals[positions], self.log_activity[positions],
-            self.ionic_strength[positions], self.solids_mol_per_l[positions],
+            self.surroundings[positions], self.solids_mol_per_l[positions],
             self.titrant_mol_per_l[positions], self.active[positions], self.converged[positions],
             self.batch.take(positions), self.kernel,
         )  # fmt: skip
@@ -191,8 +197,8 @@ class Start(Protocol):
         ...
 
     @property
-    def ionic_strength(self) -> FloatArray:
-        """(n,)."""
+    def surroundings(self) -> FloatArray:
+        """What the activity model sees, (n, width)."""
         ...
 
     @property
@@ -311,7 +317,8 @@ def _begin_at(kernel: Kernel, batch: Batch, start: Start) -> None:
         )
     seen = start.log_activity > 0.5 * ABSENT_LN
     batch.ln_activity = np.where(batch.present & seen, start.log_activity, batch.ln_activity)
-    batch.ionic_strength = np.maximum(start.ionic_strength, 1e-9)
+    batch.surroundings = start.surroundings.copy()
+    batch.surroundings[:, 0] = np.maximum(batch.surroundings[:, 0], 1e-9)
     gone = (~batch.present).astype(float) @ kernel.solid_absolute.T > 0.0
     batch.active = start.active & ~gone
     batch.solids = np.where(batch.active, start.solids_mol_per_l, 0.0).reshape(states, -1)
@@ -328,7 +335,7 @@ def kernel_of(system: System) -> Kernel:
 
 
 def _as_state(system: System, kernel: Kernel, batch: Batch) -> EquilibriumState:
-    m = kernel.molalities(batch.ln_activity, batch.ionic_strength)
+    m = kernel.molalities(batch.ln_activity, batch.surroundings)
     sums, _ = kernel.amounts(m, batch.solids)
     dose, _ = kernel.doses(batch, sums - batch.totals)
     totals = batch.totals + kernel.added(batch, sums)
@@ -338,7 +345,7 @@ def _as_state(system: System, kernel: Kernel, batch: Batch) -> EquilibriumState:
         opened = ~np.isnan(batch.co2_ln)
         totals[opened, kernel.carbonate] = sums[opened, kernel.carbonate]
     state = EquilibriumState(
-        system, totals, batch.ln_activity, batch.ionic_strength, batch.solids,
+        system, totals, batch.ln_activity, batch.surroundings, batch.solids,
         dose, batch.active, batch.converged, batch, kernel,
     )  # fmt: skip
     proof = state.certificate_arrays

@@ -12,7 +12,7 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from chemistry.activity import ActivityModel, build_activity
+from chemistry.activity import ActivityModel, Interactions, build_activity
 from chemistry.errors import SystemDefinitionError
 from chemistry.formula import charge_of, molar_mass_g_per_mol, read_reaction
 
@@ -147,7 +147,9 @@ class System:
     temperature_degc
         Constants move by van 't Hoff with the enthalpies given, constant where none is. [C]
     activity
-        ``davies``, ``ideal`` (or ``auto``, which is Davies).
+        ``davies``, ``sit``, ``ideal`` (or ``auto``, which is Davies).
+    interactions
+        Coefficients of specific ion interaction, for ``sit``.
 
     Raises
     ------
@@ -160,6 +162,7 @@ class System:
     solids: tuple[Solid, ...] = ()
     temperature_degc: float = 25.0
     activity: str = "auto"
+    interactions: Interactions | None = None
 
     def __init__(
         self,
@@ -169,6 +172,7 @@ class System:
         *,
         temperature_degc: float = 25.0,
         activity: str = "auto",
+        interactions: Interactions | None = None,
     ) -> None:
         put = object.__setattr__
         put(self, "components", tuple(components))
@@ -176,6 +180,7 @@ class System:
         put(self, "solids", tuple(solids))
         put(self, "temperature_degc", float(temperature_degc))
         put(self, "activity", activity)
+        put(self, "interactions", interactions)
         self._check()
 
     def _check(self) -> None:
@@ -267,7 +272,10 @@ class System:
     @cached_property
     def activity_model(self) -> ActivityModel:
         """The activity model for this system's species and temperature."""
-        return build_activity(self.activity, self.charges, self.temperature_degc)
+        return build_activity(
+            self.activity, self.charges, self.temperature_degc, names=self.species_names,
+            water=self.water, interactions=self.interactions,
+        )  # fmt: skip
 
     def _row(self, stoichiometry: Mapping[str, float]) -> FloatArray:
         row = np.zeros(len(self.components))
@@ -306,6 +314,7 @@ class System:
             [s for s in self.solids if set(s.stoichiometry) <= inside and s.name in wanted],
             temperature_degc=self.temperature_degc,
             activity=self.activity,
+            interactions=self.interactions,
         )
 
     def shifted_solids(self, shift_log10: Mapping[str, float]) -> System:
@@ -319,4 +328,5 @@ class System:
         return System(
             self.components, self.species, solids,
             temperature_degc=self.temperature_degc, activity=self.activity,
+            interactions=self.interactions,
         )  # fmt: skip

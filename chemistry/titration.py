@@ -57,7 +57,7 @@ class StartValues:
 
     totals: FloatArray
     log_activity: FloatArray
-    ionic_strength: FloatArray
+    surroundings: FloatArray
     solids_mol_per_l: FloatArray
     active: BoolArray
 
@@ -65,7 +65,7 @@ class StartValues:
     def of(cls, state: EquilibriumState) -> StartValues:
         """Take the values of a state."""
         return cls(
-            state.totals, state.log_activity, state.ionic_strength, state.solids_mol_per_l,
+            state.totals, state.log_activity, state.surroundings, state.solids_mol_per_l,
             state.active,
         )  # fmt: skip
 
@@ -82,14 +82,14 @@ class StartValues:
         """The same liquid for a system that has no solids."""
         n = self.totals.shape[0]
         return StartValues(
-            self.totals, self.log_activity, self.ionic_strength, np.zeros((n, 0)),
+            self.totals, self.log_activity, self.surroundings, np.zeros((n, 0)),
             np.zeros((n, 0), dtype=bool),
         )  # fmt: skip
 
     def put(self, rows: IntArray, state: EquilibriumState | StartValues) -> None:
         """Write solved rows."""
         self.log_activity[rows] = state.log_activity
-        self.ionic_strength[rows] = state.ionic_strength
+        self.surroundings[rows] = state.surroundings
         self.solids_mol_per_l[rows] = state.solids_mol_per_l
         self.active[rows] = state.active
 
@@ -144,7 +144,8 @@ class _Work:
         self.hopeless = np.zeros(n, dtype=bool)
         self.orient = np.zeros(n)
         self.iterate = StartValues(
-            totals, np.zeros((n, count)), np.zeros(n), np.zeros((n, solids)),
+            totals, np.zeros((n, count)), np.zeros((n, system.activity_model.width)),
+            np.zeros((n, solids)),
             np.zeros((n, solids), dtype=bool),
         )  # fmt: skip
 
@@ -171,7 +172,8 @@ class _Work:
         batch.ln_activity = np.where(
             batch.present & seen, self.iterate.log_activity[rows], batch.ln_activity
         )
-        batch.ionic_strength = np.maximum(self.iterate.ionic_strength[rows], 1e-9)
+        batch.surroundings = self.iterate.surroundings[rows]
+        batch.surroundings[:, 0] = np.maximum(batch.surroundings[:, 0], 1e-9)
         gone = (~batch.present).astype(float) @ kernel.solid_absolute.T > 0.0
         batch.active = self.iterate.active[rows] & ~gone
         batch.solids = np.where(batch.active, self.iterate.solids_mol_per_l[rows], 0.0)
@@ -181,14 +183,14 @@ class _Work:
                 kernel, batch, newton_rounds=DIRECT_NEWTON_ROUNDS, exchange_rounds=DIRECT_EXCHANGES
             )
             sums, _ = kernel.amounts(
-                kernel.molalities(batch.ln_activity, batch.ionic_strength), batch.solids
+                kernel.molalities(batch.ln_activity, batch.surroundings), batch.solids
             )
             dose, _ = kernel.doses(batch, sums - batch.totals)
         good = batch.converged & (dose >= 0.0) & (dose <= LARGEST_DOSE_MOL_PER_L)
         kept = rows[good]
         self.reached[kept], self.dose[kept] = True, dose[good]
         self.iterate.log_activity[kept] = batch.ln_activity[good]
-        self.iterate.ionic_strength[kept] = batch.ionic_strength[good]
+        self.iterate.surroundings[kept] = batch.surroundings[good]
         self.iterate.solids_mol_per_l[kept] = batch.solids[good]
         self.iterate.active[kept] = batch.active[good]
 
