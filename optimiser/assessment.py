@@ -12,6 +12,7 @@ import numpy as np
 from optimiser.describe import describe
 from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.outcome import Assessment
+from optimiser.planning import refuse_salty
 from optimiser.plant import Points
 from optimiser.recipes import make_recipe, trim_for
 from optimiser.site import Offer, Site
@@ -47,6 +48,8 @@ def assess(
     ------
     ValueError
         Unknown reagents or stages, doses that are no amounts, an unknown ``trim``.
+    FeedRefused
+        The water is too salty for the activity model and the site does not say to go on.
 
     Notes
     -----
@@ -63,8 +66,11 @@ def assess(
     site = _with_reagents(site, doses)
     evaluator = Evaluator(site)
     tank, trimmed = _read_doses(evaluator, doses)
+    refuse_salty(site, evaluator.plant.feed.ionic_strength, "the feed")
     points = _points(evaluator, tank, trimmed, trim)
     seen = evaluator.evaluate(points)
+    strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)
+    refuse_salty(site, strength, "the dosed water")
     proof = {
         "kind": "verified",
         "statement": "these doses were verified and priced; no other was looked for",
