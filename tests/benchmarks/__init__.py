@@ -1,0 +1,1 @@
+"""Benchmarks: slow comparisons of the product against references, run by hand."""
