@@ -40,6 +40,7 @@ LOG10_HENRY_H2S = -0.99  # H2S(g) = H2S(aq), mol/kg/atm, from memory
 
 CERTIFIED_MASS_BALANCE = 1e-10
 CERTIFIED_SATURATION = 1e-8
+CERTIFIED_SURROUNDINGS = 1e-9  # what the coefficients saw against the species, share of I
 H2S_SPECIES = "H2S(aq)"
 
 
@@ -349,11 +350,13 @@ def _as_state(system: System, kernel: Kernel, batch: Batch) -> EquilibriumState:
         dose, batch.active, batch.converged, batch, kernel,
     )  # fmt: skip
     proof = state.certificate_arrays
+    off = np.abs(kernel.surroundings(m) - batch.surroundings).max(axis=1)
     batch.converged[:] &= (
         (proof["mass_balance"] <= CERTIFIED_MASS_BALANCE)
         & (proof["supersaturation"] <= CERTIFIED_SATURATION)
         & (proof["presence"] <= CERTIFIED_SATURATION)
         & (np.abs(totals).max(axis=1, initial=0.0) <= LARGEST_TOTAL_MOL_PER_L)
+        & (off <= CERTIFIED_SURROUNDINGS * np.maximum(batch.surroundings[:, 0], 1e-9))
     )
     return state
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import dataclasses
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -18,6 +20,7 @@ from chemistry import (
     WaterError,
     equilibrate,
 )
+from chemistry.state import certified_or_solved
 from tests.chemistry.certificate import certify
 
 FloatArray = NDArray[np.float64]
@@ -443,6 +446,16 @@ def test_a_start_makes_no_difference_along_a_ladder() -> None:
     cold = equilibrate(SYSTEM, totals)
     shifted = equilibrate(SYSTEM, totals[1:], start=cold.rows(np.arange(base.size - 1)))
     assert_same(shifted, cold.rows(np.arange(1, base.size)))
+
+
+def test_values_that_claim_another_ionic_strength_are_not_trusted() -> None:
+    """Above I = 0.5 the coefficients no longer tell the ionic strength, the certificate does."""
+    totals = vector(ACID | {"Na+": 0.8, "Cl-": 0.8})[None, :]
+    right = equilibrate(SYSTEM, totals)
+    assert right.ionic_strength[0] > 0.7
+    claimed = dataclasses.replace(right, surroundings=np.full((1, 1), 0.6))
+    state = certified_or_solved(SYSTEM, totals, claimed, np.array([True]))
+    np.testing.assert_allclose(state.ionic_strength, right.ionic_strength, rtol=1e-9)
 
 
 # -- errors --------------------------------------------------------------------------------------
