@@ -69,7 +69,10 @@ def _elements(formula: str) -> tuple[tuple[str, float], ...]:
     for part in _expand_ligands(body).split("."):
         lead = re.match(r"\d+", part)
         times = int(lead.group()) if lead else 1
-        for element, count in _group_counts(part[lead.end() :] if lead else part, formula).items():
+        group = _group_counts(part[lead.end() :] if lead else part, formula)
+        if not group or not times or not all(group.values()):
+            raise FormulaError(f"cannot read {formula!r}: a part of it holds no atoms")
+        for element, count in group.items():
             counts[element] = counts.get(element, 0.0) + times * count
     return tuple(sorted(counts.items()))
 
