@@ -34,6 +34,7 @@ def start(kernel: Kernel, batch: Batch, rounds: int = START_ROUNDS) -> None:
         gain = m @ kernel.positive + np.maximum(-totals, 0.0)
         loss = m @ kernel.negative + np.maximum(totals, 0.0)
         ratio = np.log(np.maximum(loss, 1e-300) / np.maximum(gain, 1e-300)) / kernel.largest
+        _open_to_gas(kernel, batch, m, ratio)
         if dosed.size:
             _drive_by_protons(kernel, batch, ratio, dosed)
         small = np.exp(-np.abs(ratio))
@@ -45,6 +46,21 @@ def start(kernel: Kernel, batch: Batch, rounds: int = START_ROUNDS) -> None:
         batch.surroundings = 0.5 * (batch.surroundings + seen)
         if np.max(np.abs(np.where(move, ratio, 0.0)), initial=0.0) < 0.02:
             break
+
+
+def _open_to_gas(kernel: Kernel, batch: Batch, m: FloatArray, ratio: FloatArray) -> None:
+    """Where a CO2 pressure is held, protons less twice the carbonate balance, in place."""
+    open_rows = np.flatnonzero(~np.isnan(batch.co2_ln))
+    if not open_rows.size:
+        return
+    h, c = kernel.proton, kernel.carbonate
+    count = kernel.formation[:, h] - 2.0 * kernel.formation[:, c]
+    total = batch.totals[open_rows, h] - 2.0 * batch.totals[open_rows, c]
+    gain = m[open_rows] @ np.maximum(count, 0.0) + np.maximum(-total, 0.0)
+    loss = m[open_rows] @ np.maximum(-count, 0.0) + np.maximum(total, 0.0)
+    change = np.log(np.maximum(loss, 1e-300) / np.maximum(gain, 1e-300))
+    ratio[open_rows, h] = change / max(float(np.abs(count).max()), 1.0)
+    ratio[open_rows, c] = 0.0
 
 
 def _with_titrant(kernel: Kernel, part: Batch, m: FloatArray) -> FloatArray:

@@ -12,15 +12,11 @@ import numpy as np
 
 from chemistry.batch import FloatArray, pivots
 from chemistry.errors import WaterError
-from chemistry.system import LN10, System
+from chemistry.gas import CO2_SPECIES, ln_henry
+from chemistry.system import System
 
 Totals = Mapping[str, float | FloatArray | Sequence[float]] | FloatArray
 Held = float | FloatArray | Sequence[float] | None
-
-CO2_SPECIES = "CO2(aq)"
-# log10 K of CO2(g) = CO2(aq) at 25 C.
-# Source: Plummer & Busenberg 1982, Geochim. Cosmochim. Acta 46, 1011.
-LOG10_HENRY_CO2 = -1.468
 
 LARGEST_TOTAL_MOL_PER_L = 60.0
 
@@ -50,7 +46,8 @@ def read_request(
     _check_held(system, ph_values, co2)
     vectors = _titrant(system, titrant, n)
     _check_titrant(system, vectors, ph_values, co2)
-    ln_co2 = np.log(co2) + LN10 * LOG10_HENRY_CO2 - co2_formation_ln(system)
+    solubility = ln_henry(CO2_SPECIES, system.temperature_degc)
+    ln_co2 = np.log(co2) + solubility - co2_formation_ln(system)
     return Request(array, ph_values, ln_co2, vectors)
 
 

@@ -17,11 +17,10 @@ from numpy.typing import NDArray
 from chemistry.batch import ABSENT_LN, Batch, BoolArray, FloatArray, new_batch
 from chemistry.equilibrium import solve, solve_warm
 from chemistry.errors import EquilibriumError, WaterError
+from chemistry.gas import CO2_SPECIES, H2S_SPECIES, LOG10_HENRY_CO2, LOG10_HENRY_H2S, ln_henry
 from chemistry.kernel import Kernel
 from chemistry.request import (
-    CO2_SPECIES,
     LARGEST_TOTAL_MOL_PER_L,
-    LOG10_HENRY_CO2,
     Totals,
     co2_formation_ln,
     read_request,
@@ -36,12 +35,9 @@ if TYPE_CHECKING:
 __all__ = ["CO2_SPECIES", "H2S_SPECIES", "LOG10_HENRY_CO2", "LOG10_HENRY_H2S"]
 __all__ += ["EquilibriumState", "Sensitivity", "equilibrate", "kernel_of", "read_totals"]
 
-LOG10_HENRY_H2S = -0.99  # H2S(g) = H2S(aq), mol/kg/atm, from memory
-
 CERTIFIED_MASS_BALANCE = 1e-10
 CERTIFIED_SATURATION = 1e-8
 CERTIFIED_SURROUNDINGS = 1e-9  # what the coefficients saw against the species, share of I
-H2S_SPECIES = "H2S(aq)"
 
 
 @dataclass(frozen=True, eq=False)
@@ -92,20 +88,20 @@ class EquilibriumState:
         return np.where(index < 0.4 * ABSENT_LN / LN10, -np.inf, index)
 
     def partial_pressure_atm(self, species: str) -> FloatArray:
-        """Pressure of CO2 or H2S over the water by Henry's law, (n,). [atm]
+        """Pressure of CO2 or H2S over the water by Henry's law at its temperature, (n,). [atm]
 
         Raises
         ------
         KeyError
             Another species than ``CO2(aq)`` or ``H2S(aq)`` is asked for.
         """
-        log10_henry = {CO2_SPECIES: LOG10_HENRY_CO2, H2S_SPECIES: LOG10_HENRY_H2S}[species]
+        ln_solubility = ln_henry(species, self.system.temperature_degc)
         if species not in self.system.species_names:
             return np.zeros(self.totals.shape[0])
         k = self.system.species_names.index(species)
         ln_a = self.log_activity @ self.system.formation[k] + self.system.ln_k[k]
         ln_a += self.system.water[k] * self.kernel.model.ln_water(self.surroundings)
-        pressure: FloatArray = np.exp(ln_a - LN10 * log10_henry)
+        pressure: FloatArray = np.exp(ln_a - ln_solubility)
         return pressure
 
     @cached_property
@@ -174,6 +170,12 @@ class EquilibriumState:
         Where the pH is held the titrant follows. At the onset of a solid a derivative is one-sided.
         """
         return sensitivity_of(self, directions)
+
+    def sensitivity_to_temperature(self) -> Sensitivity:
+        """Exact derivatives per degree C: constants move, totals and what is held stay."""
+        from chemistry.temperature import temperature_sensitivity_of
+
+        return temperature_sensitivity_of(self)
 
     def row(self, position: int) -> EquilibriumState:
         """Return one state as a batch of one."""
@@ -384,7 +386,8 @@ def _held_text(state: EquilibriumState, i: int) -> str:
     """What is held in one state, and that no water may be able to hold it."""
     batch, text = state.batch, ""
     if not np.isnan(batch.co2_ln[i]):
-        ln_pressure = batch.co2_ln[i] - LN10 * LOG10_HENRY_CO2 + co2_formation_ln(state.system)
+        solubility = ln_henry(CO2_SPECIES, state.system.temperature_degc)
+        ln_pressure = batch.co2_ln[i] - solubility + co2_formation_ln(state.system)
         text += f", pCO2 {np.exp(ln_pressure):.17g} atm held"
     if not np.isnan(batch.ph_ln[i]):
         vector = zip(state.system.components, batch.titrant[i], strict=True)

@@ -20,6 +20,7 @@ FloatArray = NDArray[np.float64]
 
 GAS_CONSTANT_KJ_PER_MOL_K = 8.314462618e-3  # CODATA 2018
 REFERENCE_TEMPERATURE_K = 298.15
+LOWEST_TEMPERATURE_DEGC, HIGHEST_TEMPERATURE_DEGC = 0.0, 60.0
 LN10 = float(np.log(10.0))
 
 
@@ -197,8 +198,11 @@ class System:
             missing = sorted(set(item.stoichiometry) - known)
             if missing:
                 problems.append(f"{item.name} needs components not given: {', '.join(missing)}")
-        if not 0.0 <= self.temperature_degc <= 60.0:
-            problems.append(f"temperature {self.temperature_degc} C is outside 0 to 60 C")
+        if not LOWEST_TEMPERATURE_DEGC <= self.temperature_degc <= HIGHEST_TEMPERATURE_DEGC:
+            problems.append(
+                f"temperature {self.temperature_degc} C is outside {LOWEST_TEMPERATURE_DEGC:g} to "
+                f"{HIGHEST_TEMPERATURE_DEGC:g} C, where the constants hold"
+            )
         if problems:
             raise SystemDefinitionError("; ".join(problems))
 
