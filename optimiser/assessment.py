@@ -13,7 +13,7 @@ from optimiser.describe import describe
 from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.outcome import Assessment
 from optimiser.planning import refuse_salty
-from optimiser.plant import Points
+from optimiser.points import Points
 from optimiser.recipes import make_recipe, trim_for
 from optimiser.site import Offer, Site
 

@@ -14,7 +14,8 @@ from numpy.typing import NDArray
 
 from chemistry.burden import BURDENS
 from chemistry.sludge import Sludge, sludge
-from optimiser.plant import CLOSED_FORMED, VENTED_FORMED, Block, Plant, Points, Rows
+from optimiser.plant import Plant
+from optimiser.points import CLOSED_FORMED, VENTED_FORMED, Block, Points, Rows
 from optimiser.price_book import PriceBook
 from optimiser.quality import Judged
 from optimiser.site import DisposalRule, Offer

@@ -15,8 +15,9 @@ from catalogs.reagents import CAUTIONS_DEFER_TO
 from chemistry.burden import BURDENS, water_burden
 from chemistry.state import H2S_SPECIES, EquilibriumState
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator
-from optimiser.plant import END_TEXT
-from optimiser.quality import LOAD, RULE
+from optimiser.points import END_TEXT
+from optimiser.quality import LOAD
+from optimiser.quality_slopes import RULE
 
 FloatArray = NDArray[np.float64]
 Data = dict[str, Any]

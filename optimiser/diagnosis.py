@@ -8,8 +8,8 @@ import numpy as np
 
 from optimiser.errors import NoPlan
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator
-from optimiser.plant import END_TEXT
-from optimiser.quality import RULE
+from optimiser.points import END_TEXT
+from optimiser.quality_slopes import RULE
 from optimiser.search import Findings
 
 

@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 from chemistry.state import EquilibriumState, equilibrate
 from chemistry.titration import StartValues
 from optimiser.costing import Priced, Pricing
-from optimiser.plant import Block, Plant, Points, Rows
+from optimiser.plant import Plant
+from optimiser.points import Block, Points, Rows
 from optimiser.quality import LN10, Judge, Judged
 from optimiser.site import Site
 

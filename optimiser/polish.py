@@ -6,31 +6,22 @@ and lets the mixed-integer solver move set point and doses; the full equilibrium
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Sequence
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER, yearly_cost
-from optimiser.evaluation import Evaluation, Evaluator, Place
-from optimiser.linear_model import Expression, Model, Sense
-from optimiser.plant import CLOSED_FORMED, VENTED_FORMED, Points
-from optimiser.purchasing import add_purchasing
-from optimiser.site import Offer
+from optimiser.evaluation import Evaluator, Place
+from optimiser.points import Points
+from optimiser.polish_step import BACK_OFF, PENALTY, Bounds, build_step
 from optimiser.solver import SolverPort
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-BACK_OFF = 2e-6  # ratios are brought to minus this, so that rounding does not break a limit
-ROWS_PER_STEP = 40
-NEAR_RATIO = -1.5
-NEAR_WORST = 0.7  # rows of a check further than this below its worst are left out
-PENALTY = 20.0  # cost of a unit of ratio, as a multiple of the point's cost
 FIRST_RADIUS = 0.5
 LAST_RADIUS = 2e-4
-SET_POINT_STEP = 0.6  # pH per unit of radius
 MOST_STEPS = 14
 PATIENCE = 3
 DEARER_EARLY, DEARER_LATE = 1.2, 1.06
@@ -140,16 +131,6 @@ def _rest_dear(tracks: list[Track], rival: float) -> None:
             track.alive = track.total <= (DEARER_LATE if late else DEARER_EARLY) * best
 
 
-@dataclass(frozen=True, eq=False)
-class Bounds:
-    """Where set points and doses may lie."""
-
-    ph_low: Callable[[int, FloatArray], float]
-    ph_high: Callable[[int, FloatArray], float]
-    dose_low: FloatArray
-    dose_high: FloatArray
-
-
 def step(evaluator: Evaluator, track: Track, solver: SolverPort, bounds: Bounds) -> Points | None:
     """Solve one linearised step from a track's point; None where the model has no solution."""
     seen, row = track.place.seen, track.place.point
@@ -165,238 +146,3 @@ def step(evaluator: Evaluator, track: Track, solver: SolverPort, bounds: Bounds)
     if "set point" in report.values:
         ph[0] = report.values["set point"]
     return Points(doses, point.controller, ph, point.trim)
-
-
-def build_step(
-    evaluator: Evaluator, seen: Evaluation, row: int, radius: float, bounds: Bounds
-) -> Model:
-    """Build the mixed-integer model of one step.
-
-    Notes
-    -----
-    With moves ``v`` of set point and paced doses, every near check asks
-    ``ratio + slope . v <= -back-off + miss``; the controller's, the trim's and the sludge's amounts
-    are at least their linearised values at every end. Costs are the purchasing block, disposal by
-    the tariff of the point's sludge class, burden charges and a penalty on ``miss``.
-    """
-    model = Model("polish step")
-    moves = _add_moves(model, evaluator, seen.points, row, radius, bounds)
-    model.add_variable("miss", high=60.0)
-    total = float(seen.total[row])
-    scale = total if np.isfinite(total) else 1e6
-    model.add_cost("miss", Expression({"miss": PENALTY * scale}))
-    _add_checks(model, seen, row, moves)
-    demand = _add_amounts(model, evaluator, seen, row, moves)
-    _add_purchases(model, evaluator, seen, row, radius, demand)
-    _add_disposal(model, evaluator, seen, row, moves)
-    _add_burden(model, evaluator, seen, row, moves)
-    return model
-
-
-def _add_moves(
-    model: Model, evaluator: Evaluator, points: Points, row: int, radius: float, bounds: Bounds
-) -> dict[int, tuple[str, float]]:
-    """Variables of a step: column of the slopes -> (variable, value at the point)."""
-    moves: dict[int, tuple[str, float]] = {}
-    doses = points.doses[row]
-    if points.controller[row] >= 0:
-        here = float(points.ph[row])
-        controller = int(points.controller[row])
-        low = max(bounds.ph_low(controller, doses), here - SET_POINT_STEP * radius)
-        high = min(bounds.ph_high(controller, doses), here + SET_POINT_STEP * radius)
-        low, high = min(low, here), max(high, here)
-        model.add_variable("set point", low=low, high=high)
-        moves[0] = ("set point", here)
-    for j in np.flatnonzero(doses > 0.0):
-        here = float(doses[j])
-        low = max(float(bounds.dose_low[j]), here / (1.0 + 1.5 * radius))
-        high = min(float(bounds.dose_high[j]), here * (1.0 + 1.5 * radius))
-        key = f"dose {evaluator.plant.names[j]}"
-        model.add_variable(key, low=min(low, here), high=max(high, here))
-        moves[1 + int(j)] = (key, here)
-    return moves
-
-
-def _linear(
-    slope: FloatArray, moves: dict[int, tuple[str, float]]
-) -> tuple[dict[str, float], float]:
-    """Terms and constant of ``slope . (variable - here)``."""
-    terms = {key: float(slope[column]) for column, (key, _) in moves.items()}
-    constant = -sum(float(slope[column]) * here for column, (_, here) in moves.items())
-    return terms, constant
-
-
-def _add_checks(
-    model: Model, seen: Evaluation, row: int, moves: dict[int, tuple[str, float]]
-) -> None:
-    ratios, slopes = [], []
-    parts = []
-    for part in seen.judged:
-        mine = np.flatnonzero((seen.rows.point[part.block.rows] == row) & part.block.reached)
-        if mine.size and part.ratio.shape[1]:
-            parts.append((part.ratio[mine], part.slope[mine]))
-    if parts:
-        worst = np.max([ratio.max(axis=0) for ratio, _ in parts], axis=0)
-        for ratio, slope in parts:
-            near = ratio > np.maximum(worst - NEAR_WORST, NEAR_RATIO)
-            ratios.append(ratio[near])
-            slopes.append(slope[near])
-    for rule in seen.rules:
-        if np.isfinite(rule.ratio[row]):
-            ratios.append(rule.ratio[row : row + 1])
-            slopes.append(rule.slope[row : row + 1])
-    if not ratios:
-        return
-    ratio, slope = np.concatenate(ratios), np.concatenate(slopes)
-    order = np.argsort(-ratio, kind="stable")[:ROWS_PER_STEP]
-    for number, k in enumerate(order):
-        if ratio[k] < NEAR_RATIO or not np.all(np.isfinite(slope[k])):
-            continue
-        terms, constant = _linear(np.clip(slope[k], -1e6, 1e6), moves)
-        terms["miss"] = -1.0
-        model.add_row(
-            f"check {number}", terms, Sense.AT_MOST, -BACK_OFF - float(ratio[k]) - constant
-        )
-
-
-def _add_amounts(
-    model: Model, evaluator: Evaluator, seen: Evaluation, row: int,
-    moves: dict[int, tuple[str, float]],
-) -> dict[str, Expression]:  # fmt: skip
-    """Controller and trim doses at every end; returns the demand in kg pure per year."""
-    plant, points = evaluator.plant, seen.points
-    per = evaluator.pricing.kg_per_mg_per_l
-    demand: dict[str, Expression] = {}
-
-    def buy(reagent: int, amount: Expression) -> None:
-        name = plant.names[reagent]
-        demand[name] = demand.get(name, Expression()).plus(amount.times(per))
-
-    for column, (key, _) in moves.items():
-        if column > 0:
-            buy(column - 1, Expression({key: 1.0}))
-    for kind, reagent in (
-        ("controller", int(points.controller[row])), ("trim", int(points.trim[row])),
-    ):  # fmt: skip
-        if reagent < 0:
-            continue
-        rows = _amount_rows(seen, row, kind)
-        if not rows:
-            continue
-        most = max(here for here, _ in rows)
-        key = model.add_variable(f"{kind} dose", high=10.0 * most + 100.0)
-        for number, (here, slope) in enumerate(rows):
-            terms, constant = _linear(slope, moves)
-            terms = {name: -value for name, value in terms.items()}
-            terms[key] = 1.0
-            model.add_row(f"{kind} at end {number}", terms, Sense.AT_LEAST, here + constant)
-        buy(reagent, Expression({key: 1.0}))
-    return demand
-
-
-def _add_purchases(
-    model: Model, evaluator: Evaluator, seen: Evaluation, row: int, radius: float,
-    demand: Mapping[str, Expression],
-) -> None:  # fmt: skip
-    """The purchasing block, with what cannot matter within a step of this radius left out.
-
-    Where one offer is cheapest at both ends of the demand, it stands alone: above its least order
-    throughout without that order, so that the step needs no binaries; below it throughout as the
-    constant cost of the least order.
-    """
-    pricing = evaluator.pricing
-    fed = seen.priced.doses[row] + seen.priced.trim_doses[row]
-    offers: list[Offer] = []
-    wanted = dict(demand)
-    for i in (evaluator.plant.index[name] for name in demand):
-        mine = pricing.by_reagent[i]
-        ends = [fed[i] * pricing.kg_per_mg_per_l * f for f in (1.0 / (1.0 + radius), 1.0 + radius)]
-        best, other = (_cheapest(mine, kg) for kg in ends)
-        least_kg = 1000.0 * best.least_order_t * best.strength_fraction if best else 0.0
-        if best is None or best is not other or ends[0] < least_kg < ends[1]:
-            offers += mine
-        elif ends[0] >= least_kg:
-            offers.append(replace(best, least_order_t=0.0))
-        elif wanted.pop(evaluator.plant.names[i], None) is not None:
-            model.add_cost("least order", Expression({}, yearly_cost(best, ends[0])))
-    add_purchasing(model, offers, wanted)
-
-
-def _cheapest(offers: Sequence[Offer], kg_pure: float) -> Offer | None:
-    return min(offers, key=lambda offer: yearly_cost(offer, kg_pure), default=None)
-
-
-def _amount_rows(seen: Evaluation, row: int, kind: str) -> list[tuple[float, FloatArray]]:
-    found = []
-    for part in seen.judged:
-        k = seen.nominal_row(part.block, row)
-        if k is None or not part.block.reached[k]:
-            continue
-        if kind == "controller":
-            found.append((float(part.block.dose[k]), part.dose_slope[k]))
-        elif part.block.trimmed[k]:
-            found.append((float(part.block.trim_dose[k]), part.trim_slope[k]))
-    return found
-
-
-def _add_disposal(
-    model: Model, evaluator: Evaluator, seen: Evaluation, row: int,
-    moves: dict[int, tuple[str, float]],
-) -> None:  # fmt: skip
-    chosen = seen.priced.sludges[row]
-    if chosen is None:
-        return
-    made, position, rule = chosen
-    plant, site = evaluator.plant, evaluator.site
-    weight = np.zeros(len(plant.system.solids))
-    amounts = np.eye(len(plant.system.solids))
-    from chemistry.sludge import dry_masses_mg_per_l
-
-    weight = dry_masses_mg_per_l(
-        amounts, plant.system, bound_water_factor=site.disposal.bound_water_factor
-    ).sum(axis=1)
-    polymer = plant.treatment.polymer_g_per_kg_solids / 1000.0
-    key = model.add_variable("dry sludge", high=1e7)
-    for number, part in enumerate(seen.judged):
-        if part.block.end not in (CLOSED_FORMED, VENTED_FORMED):
-            continue
-        k = seen.nominal_row(part.block, row)
-        if k is None or not part.block.reached[k]:
-            continue
-        slope = (1.0 + polymer) * (weight @ part.solid_slope[k])
-        slope[1:] += (1.0 + polymer) * plant.unreacted
-        controller = int(seen.points.controller[row])
-        if controller >= 0:
-            slope = slope + (1.0 + polymer) * plant.unreacted[controller] * part.dose_slope[k]
-        terms, constant = _linear(slope, moves)
-        terms = {name: -value for name, value in terms.items()}
-        terms[key] = 1.0
-        here = float(made.dry_mg_per_l[position])
-        model.add_row(f"sludge at end {number}", terms, Sense.AT_LEAST, here + constant)
-    wet_t = evaluator.pricing.kg_per_mg_per_l / 1000.0 / site.disposal.cake_solids_fraction
-    model.add_cost(DISPOSAL, Expression({key: wet_t * rule.tariff_per_wet_t}))
-    pickup = rule.pickup_fee / rule.tonnes_per_pickup
-    model.add_cost(FEES, Expression({key: wet_t * pickup}, rule.yearly_fee))
-    price = plant.treatment.polymer_price_per_kg * evaluator.pricing.kg_per_mg_per_l
-    model.add_cost(POLYMER, Expression({key: price * polymer / (1.0 + polymer)}))
-
-
-def _add_burden(
-    model: Model, evaluator: Evaluator, seen: Evaluation, row: int,
-    moves: dict[int, tuple[str, float]],
-) -> None:  # fmt: skip
-    charges = evaluator.site.burden_charges_per_kg
-    if not charges:
-        return
-    per = evaluator.pricing.kg_per_mg_per_l
-    key = model.add_variable("burden charges", high=1e12)
-    for number, part in enumerate(seen.judged):
-        k = seen.nominal_row(part.block, row)
-        if k is None or not part.block.reached[k]:
-            continue
-        slope, here = evaluator.judge.burden_charge(part, k, charges)
-        terms, constant = _linear(per * slope, moves)
-        terms = {name: -value for name, value in terms.items()}
-        terms[key] = 1.0
-        model.add_row(f"burden at end {number}", terms, Sense.AT_LEAST, per * here + constant)
-    model.add_cost(BURDEN, Expression({key: 1.0}))

@@ -6,7 +6,7 @@ Owns residual plus carry-over, practical floors, variability and margin; each be
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -16,18 +16,19 @@ from chemistry.analysis import ANALYTES, METALS
 from chemistry.burden import BURDENS, burden_weights
 from chemistry.sludge import formula_masses_g_per_mol
 from chemistry.state import H2S_SPECIES
-from optimiser.plant import VENTED_FORMED, VENTED_HELD, Block, Plant, Points, Rows
+from optimiser.plant import Plant
+from optimiser.points import Block, Points, Rows
+from optimiser.quality_slopes import RULE, SMALLEST_MG_PER_L, fill_slopes
 from optimiser.site import Limit
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 IntArray = NDArray[np.int64]
 
-SMALLEST_MG_PER_L = 1e-12
 UNREACHED_RATIO = 50.0  # ratio of every check of a state whose set point no dose reaches
 LN10 = float(np.log(10.0))
 
-DAILY, MONTHLY, LOAD, RULE = "daily", "monthly", "daily load", "rule"
+DAILY, MONTHLY, LOAD = "daily", "monthly", "daily load"
 SUMMED_STATES = {"Fe": ("Fe(II)", "Fe(III)"), "Cr": ("Cr(III)", "Cr(VI)")}
 
 
@@ -244,7 +245,7 @@ class Judge:
             np.zeros((n, block.effluent.shape[1], width if slopes else 0)),
         )  # fmt: skip
         if slopes:
-            self._slopes(points, rows, judged, total, held, share, share_by_mass)
+            fill_slopes(self, points, rows, judged, total, held, share, share_by_mass)
         return judged
 
     def _share(self, solids: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -299,136 +300,6 @@ class Judge:
         if block.trim_state is not None:
             trimmed[block.trimmed] = 1e6 * block.trim_state.partial_pressure_atm(H2S_SPECIES)
         return [tank, trimmed]
-
-    # -- slopes --------------------------------------------------------------------------------
-
-    def _directions(self, points: Points, rows: Rows, block: Block) -> FloatArray:
-        """Change of totals per mg/L of the controller and of every paced reagent."""
-        plant = self.plant
-        n, count = block.rows.size, len(plant.names)
-        ways = np.zeros((n, 1 + count, len(plant.system.components)))
-        controller = points.controller[rows.point[block.rows]]
-        ways[:, 0] = np.where(
-            (controller >= 0)[:, None], plant.reacting[np.maximum(controller, 0)], 0.0
-        )
-        # reagents that a point does not dose are left at rest: their components may be absent
-        dosed = points.doses[rows.point[block.rows]] > 0.0
-        factor = rows.factor[block.rows] * dosed
-        ways[:, 1:] = factor[:, :, None] * plant.reacting[None]
-        if block.end in (VENTED_FORMED, VENTED_HELD):
-            lost = block.lost_slope[None, :] * dosed
-            ways[:, 1:] -= lost[:, :, None] * self.vent_co2
-        return ways
-
-    def _slopes(
-        self, points: Points, rows: Rows, judged: Judged, total: FloatArray, held: FloatArray,
-        share: FloatArray, share_by_mass: FloatArray,
-    ) -> None:  # fmt: skip
-        block = judged.block
-        used = np.flatnonzero((points.doses > 0.0).any(axis=0))
-        columns = np.concatenate([[0], 1 + used])
-        ways = self._directions(points, rows, block)[:, columns]
-        free = block.state.sensitivity(ways)
-        controlled = block.held
-        by_dose = np.where(np.abs(free.ph[:, 0]) < 1e-14, np.inf, free.ph[:, 0])
-        dose = np.where(controlled[:, None], -free.ph / by_dose[:, None], 0.0)
-        dose[:, 0] = np.where(controlled, 1.0 / by_dose, 0.0)
-
-        def hold(array: FloatArray) -> FloatArray:
-            """Slopes at the held pH: column 0 per unit of set point, others per mg/L."""
-            first = array[:, :, 0]
-            moved = array + first[:, :, None] * dose[:, None, :]
-            moved[:, :, 0] = first * dose[:, None, 0]
-            return moved
-
-        liquid = hold(free.dissolved)
-        solids = hold(free.solids)
-        activity = hold(np.swapaxes(free.ln_activity, 1, 2))
-        trim, effluent, trim_activity = self._trim_slopes(points, rows, block, liquid, activity)
-        metal = np.einsum("mc,nck->nmk", self.weights, liquid)
-        mass = np.einsum("p,npk->nk", self.solid_mass, solids)
-        held_slope = np.einsum("pm,npk->nmk", self.solid_metal, solids)
-        metal = metal + share[:, None, None] * held_slope
-        metal += (held[:, :, None] * share_by_mass[:, None, None]) * mass[:, None, :]
-        free_of_floor = (judged.residual + judged.carried) >= judged.floor
-        metal = np.where(free_of_floor[:, :, None], metal, 0.0)
-        slope = self._check_slopes(judged, total, metal, effluent, activity, trim_activity)
-        slope[~block.reached] = 0.0
-        judged.slope[:, :, columns] = slope
-        judged.dose_slope[:, columns] = dose
-        judged.trim_slope[:, columns] = trim
-        judged.solid_slope[:, :, columns] = solids
-        judged.effluent_slope[:, :, columns] = effluent
-
-    def burden_charge(
-        self, judged: Judged, row: int, charges: Mapping[str, float]
-    ) -> tuple[FloatArray, float]:
-        """Charge per litre of a row's effluent, and its slope. [mg/L x currency per kg]"""
-        slope = np.zeros(judged.effluent_slope.shape[2])
-        value = 0.0
-        for name, rate in charges.items():
-            here = float(judged.burden[name][row])
-            if here > 0.0:
-                value += rate * here
-                one = self._burden_slope(name, judged, judged.effluent_slope)
-                slope = slope + rate * one[row]
-        return slope, value
-
-    def _trim_slopes(
-        self, points: Points, rows: Rows, block: Block, liquid: FloatArray, activity: FloatArray
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
-        n, _, k = liquid.shape
-        trim = np.zeros((n, k))
-        effluent = liquid.copy()
-        trim_activity = activity.copy()
-        if block.trim_state is None or not block.trimmed.any():
-            return trim, effluent, trim_activity
-        some = block.trimmed
-        vector = self.plant.reacting[points.trim[rows.point[block.rows[some]]]]
-        ways = np.concatenate([np.swapaxes(liquid[some], 1, 2), vector[:, None, :]], axis=1)
-        free = block.trim_state.sensitivity(ways)
-        last = np.where(np.abs(free.ph[:, -1]) < 1e-14, np.inf, free.ph[:, -1])
-        trim[some] = -free.ph[:, :-1] / last[:, None]
-        effluent[some] += vector[:, :, None] * trim[some][:, None, :]
-        moved = np.swapaxes(free.ln_activity, 1, 2)
-        trim_activity[some] = moved[:, :, :-1] + moved[:, :, -1:] * trim[some][:, None, :]
-        return trim, effluent, trim_activity
-
-    def _check_slopes(
-        self, judged: Judged, total: FloatArray, metal: FloatArray, effluent: FloatArray,
-        activity: FloatArray, trim_activity: FloatArray,
-    ) -> FloatArray:  # fmt: skip
-        gas = iter((activity, trim_activity))
-        columns = []
-        for number, check in enumerate(self.checks):
-            value = np.maximum(judged.value[:, number], SMALLEST_MG_PER_L)[:, None]
-            if check.metals:
-                columns.append(metal[:, list(check.metals)].sum(axis=1) / value)
-            elif check.burden:
-                columns.append(self._burden_slope(check.burden, judged, effluent) / value)
-            elif check.averaging == RULE:
-                columns.append(self._gas_slope(next(gas)))
-            else:
-                columns.append(np.zeros((total.shape[0], effluent.shape[2])))
-        if not columns:
-            return np.zeros((total.shape[0], 0, effluent.shape[2]))
-        return np.asarray(np.stack(columns, axis=1), dtype=float)
-
-    def _burden_slope(self, burden: str, judged: Judged, effluent: FloatArray) -> FloatArray:
-        slope = np.einsum("c,nck->nk", self.burden_weights[burden], effluent)
-        if burden == "TDS":
-            proton = self.plant.system.index["H+"]
-            acid = judged.block.effluent[:, proton] > 0.0
-            weight = np.where(acid, 1008.0, -17007.0)
-            slope = slope + weight[:, None] * effluent[:, proton]
-        return np.asarray(slope, dtype=float)
-
-    def _gas_slope(self, activity: FloatArray) -> FloatArray:
-        system = self.plant.system
-        if H2S_SPECIES not in system.species_names:
-            return np.zeros((activity.shape[0], activity.shape[2]))
-        k = system.species_names.index(H2S_SPECIES)
-        return np.asarray(np.einsum("c,nck->nk", system.formation[k], activity), dtype=float)
 
 
 def _parts(metal: str) -> tuple[str, ...]:

@@ -13,8 +13,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optimiser.evaluation import Evaluator
-from optimiser.plant import Plant, Points
-from optimiser.polish import Bounds
+from optimiser.plant import Plant
+from optimiser.points import Points
+from optimiser.polish_step import Bounds
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]

@@ -15,8 +15,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optimiser.evaluation import Evaluation, Evaluator, Place
-from optimiser.plant import Points
-from optimiser.polish import PENALTY, Bounds, Track, polish
+from optimiser.points import Points
+from optimiser.polish import Track, polish
+from optimiser.polish_step import PENALTY, Bounds
 from optimiser.recipes import (
     Recipe,
     grid,

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from chemistry.state import equilibrate
 from optimiser.evaluation import Evaluator
-from optimiser.plant import Points
+from optimiser.points import Points
 from optimiser.recipes import make_recipe, set_point_bounds, trim_choices
 
 FloatArray = NDArray[np.float64]

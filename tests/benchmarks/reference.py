@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluator
-from optimiser.plant import Points
+from optimiser.points import Points
 from tests.benchmarks.recipe_grid import RecipeGrid, all_grids
 
 FloatArray = NDArray[np.float64]
