@@ -120,6 +120,33 @@ CARBONATE: Tree = {
 }  # fmt: skip
 
 
+# A caustic rinse that acid brings down to where zinc settles.
+ALKALINE: Tree = {
+    "site": "Small alkaline rinse",
+    "feed": {
+        "ph": 11.5, "close_charge_with": "Na", "analysis": {"Cu": "5 mg/L", "Zn": "20 mg/L"},
+    },
+    "treatment": {
+        "reagents": ["hydrochloric_acid"], "trim_reagents": None,
+        "equipment_cost_per_year": {"caustic_soda": None, "hydrated_lime": None},
+    },
+}  # fmt: skip
+
+# Silver that salt takes down; nothing holds the pH.
+SILVER: Tree = {
+    "site": "Small silver rinse",
+    "feed": {
+        "ph": 7.5, "close_charge_with": "SO4",
+        "analysis": {"Ag": "20 mg/L", "Cu": None, "Zn": None, "Cl": None, "Na": "200 mg/L"},
+    },
+    "limits": {"own": [{"parameter": "Ag", "daily_mg_per_l": 0.5, "source": "invented"}]},
+    "treatment": {
+        "reagents": ["sodium_chloride"],
+        "equipment_cost_per_year": {"caustic_soda": None, "hydrated_lime": None},
+    },
+}  # fmt: skip
+
+
 def merged(base: Mapping[str, Any], changes: Mapping[str, Any]) -> Tree:
     """Return a tree with changes laid over it; None takes a key out, lists are replaced."""
     result = dict(base)

@@ -360,8 +360,8 @@ def test_a_corner_of_less_carbonate_loses_no_more_carbon_dioxide_than_it_has() -
         assert row_of(result, name)["residual"] == pytest.approx(residual, rel=0.02)
 
 
-def test_wider_tolerances_cost_more_or_close_the_way() -> None:
+def test_wider_tolerances_cost_more() -> None:
     narrow: Tree = {"treatment": {"ph_tolerance": 0.0, "dose_tolerance_fraction": 0.0}}
     wide: Tree = {"treatment": {"ph_tolerance": 0.4, "dose_tolerance_fraction": 0.1}}
-    costs = [plan(small_site(CARBONATE, change)).cost["total"] for change in (narrow, {}, wide)]
-    assert costs[0] < costs[1] < costs[2]
+    costs = [plan(small_site(CARBONATE, change)).cost["total"] for change in (narrow, wide)]
+    assert costs[0] * 1.01 < costs[1]
