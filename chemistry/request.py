@@ -19,6 +19,8 @@ Totals = Mapping[str, float | FloatArray | Sequence[float]] | FloatArray
 Held = float | FloatArray | Sequence[float] | None
 
 LARGEST_TOTAL_MOL_PER_L = 60.0
+MOST_PROBLEMS = 20  # of one kind told in one message
+CHARGE_TOLERANCE = 1e-6  # net over gross charge of totals that count as electroneutral
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,9 +34,12 @@ class Request:
 
 
 def read_request(
-    system: System, totals: Totals, ph: Held, pco2_atm: Held, titrant: FloatArray | None
-) -> Request:
+    system: System, totals: Totals, ph: Held, pco2_atm: Held, titrant: FloatArray | None,
+    *, require_neutral: bool = False,
+) -> Request:  # fmt: skip
     """Check what is asked and bring it to one shape.
+
+    ``require_neutral`` refuses totals whose charges do not add up to zero where the pH is free.
 
     Raises
     ------
@@ -46,6 +51,8 @@ def read_request(
     _check_held(system, ph_values, co2)
     vectors = _titrant(system, titrant, n)
     _check_titrant(system, vectors, ph_values, co2)
+    if require_neutral:
+        _check_charge(system, array, ph_values)
     solubility = ln_henry(CO2_SPECIES, system.temperature_degc)
     ln_co2 = np.log(co2) + solubility - co2_formation_ln(system)
     return Request(array, ph_values, ln_co2, vectors)
@@ -66,15 +73,21 @@ def read_totals(system: System, totals: Totals) -> FloatArray:
                 f"unknown components: {', '.join(unknown)}; the system has "
                 f"{', '.join(system.components)}"
             )
-        columns = {name: np.atleast_1d(np.asarray(v, float)) for name, v in totals.items()}
+        columns = {n: np.atleast_1d(_numbers(f"total of {n}", v)) for n, v in totals.items()}
+        for name, column in columns.items():
+            if column.ndim != 1:
+                raise WaterError(
+                    f"total of {name} has shape {column.shape}: expected one value or one per state"
+                )
         sizes = {v.shape[0] for v in columns.values()} - {1}
-        if len(sizes) > 1 or any(v.ndim != 1 for v in columns.values()):
-            raise WaterError(f"totals of different lengths: {sorted(sizes)}")
+        if len(sizes) > 1:
+            each = ", ".join(f"{n} has {v.shape[0]}" for n, v in columns.items())
+            raise WaterError(f"totals of different lengths: {sorted(sizes)} ({each})")
         array = np.zeros((sizes.pop() if sizes else 1, len(system.components)))
         for name, column in columns.items():
             array[:, system.index[name]] = column
     else:
-        array = np.array(totals, dtype=float, ndmin=2)
+        array = np.array(_numbers("totals", totals), ndmin=2)
         if array.ndim != 2 or array.shape[1] != len(system.components):
             raise WaterError(
                 f"totals have shape {np.shape(totals)}: expected (states, "
@@ -84,17 +97,25 @@ def read_totals(system: System, totals: Totals) -> FloatArray:
     return array
 
 
+def _numbers(what: str, values: object) -> FloatArray:
+    """Read numbers, or say which value is none."""
+    try:
+        return np.asarray(values, dtype=float)
+    except (TypeError, ValueError) as error:
+        raise WaterError(f"{what} is {values!r}: expected numbers ({error})") from error
+
+
 def _check_totals(system: System, array: FloatArray) -> None:
     problems = []
     signed = np.array([name == "H+" for name in system.components])
     bad = ~np.isfinite(array) | ((array < 0.0) & ~signed)
-    for state, component in np.argwhere(bad)[:20]:
+    for state, component in np.argwhere(bad)[:MOST_PROBLEMS]:
         name = system.components[component]
         value = array[state, component]
         rule = "a finite number" if signed[component] else "a finite number, 0 or more"
         problems.append(f"state {state}: total of {name} is {value:g} mol/L, expected {rule}")
     large = np.abs(array) > LARGEST_TOTAL_MOL_PER_L
-    for state, component in np.argwhere(large & np.isfinite(array))[:20]:
+    for state, component in np.argwhere(large & np.isfinite(array))[:MOST_PROBLEMS]:
         problems.append(
             f"state {state}: total of {system.components[component]} is "
             f"{array[state, component]:g} mol/L, more than any water "
@@ -107,7 +128,7 @@ def _check_totals(system: System, array: FloatArray) -> None:
 def _held(name: str, values: Held, n: int) -> FloatArray:
     if values is None:
         return np.full(n, np.nan)
-    array = np.atleast_1d(np.asarray(values, dtype=float))
+    array = np.atleast_1d(_numbers(name, values))
     if array.ndim != 1 or array.shape[0] not in (1, n):
         raise WaterError(f"{name} has shape {np.shape(values)}: expected one value or {n}")
     return np.broadcast_to(array, (n,)).copy()
@@ -132,14 +153,14 @@ def _states(
 
 
 def _check_held(system: System, ph: FloatArray, co2: FloatArray) -> None:
-    bad = ~np.isnan(ph) & ~((ph > -3.0) & (ph < 17.0))
-    if bad.any():
-        first = int(np.flatnonzero(bad)[0])
-        raise WaterError(f"state {first}: pH {ph[first]:g} is outside -3 to 17")
-    bad = ~np.isnan(co2) & ~((co2 > 0.0) & (co2 < 100.0))
-    if bad.any():
-        first = int(np.flatnonzero(bad)[0])
-        raise WaterError(f"state {first}: pCO2 {co2[first]:g} atm is outside 0 to 100 atm")
+    bad = np.flatnonzero(~np.isnan(ph) & ~((ph > -3.0) & (ph < 17.0)))
+    problems = [f"state {i}: pH {ph[i]:g} is outside -3 to 17" for i in bad[:MOST_PROBLEMS]]
+    bad = np.flatnonzero(~np.isnan(co2) & ~((co2 > 0.0) & (co2 < 100.0)))
+    problems += [
+        f"state {i}: pCO2 {co2[i]:g} atm is outside 0 to 100 atm" for i in bad[:MOST_PROBLEMS]
+    ]
+    if problems:
+        raise WaterError("; ".join(problems))
     if (~np.isnan(ph)).any() and "H+" not in system.index:
         raise WaterError("pH cannot be held: the system has no component H+")
     if (~np.isnan(co2)).any() and CO2_SPECIES not in system.species_names:
@@ -152,7 +173,7 @@ def _titrant(system: System, titrant: FloatArray | None, n: int) -> FloatArray:
         if "H+" in system.index:
             vector[system.index["H+"]] = 1.0
         return np.broadcast_to(vector, (n, vector.size)).copy()
-    array = np.atleast_2d(np.asarray(titrant, dtype=float))
+    array = np.atleast_2d(_numbers("titrant", titrant))
     if array.shape[1] != len(system.components) or array.shape[0] not in (1, n):
         raise WaterError(
             f"titrant has shape {np.shape(titrant)}: expected ({len(system.components)},) or "
@@ -163,9 +184,12 @@ def _titrant(system: System, titrant: FloatArray | None, n: int) -> FloatArray:
 
 def _check_titrant(system: System, titrant: FloatArray, ph: FloatArray, co2: FloatArray) -> None:
     bad = ~np.isfinite(titrant)
-    for state, component in np.argwhere(bad)[:1]:
-        name, value = system.components[component], titrant[state, component]
-        raise WaterError(f"state {state}: titrant holds {value:g} of {name}")
+    problems = [
+        f"state {i}: titrant holds {titrant[i, c]:g} of {system.components[c]}"
+        for i, c in np.argwhere(bad)[:MOST_PROBLEMS]
+    ]
+    if problems:
+        raise WaterError("; ".join(problems))
     held = ~np.isnan(ph)
     still = np.flatnonzero(held & (pivots(system, titrant, ~np.isnan(co2)) < 0))
     if still.size:
@@ -173,6 +197,23 @@ def _check_titrant(system: System, titrant: FloatArray, ph: FloatArray, co2: Flo
             f"state {still[0]}: the titrant cannot hold the pH: it carries neither protons nor a "
             "component that takes up or gives off protons"
         )
+
+
+def _check_charge(system: System, totals: FloatArray, ph: FloatArray) -> None:
+    """Refuse totals that no electroneutral water can have: their charges add up to something."""
+    if "H+" not in system.index:
+        return
+    net = totals @ system.component_charges
+    gross = np.abs(totals) @ np.abs(system.component_charges)
+    proton = totals[:, system.index["H+"]]
+    bad = np.flatnonzero(np.isnan(ph) & (np.abs(net) > CHARGE_TOLERANCE * gross))
+    problems = [
+        f"state {i}: total of H+ is {proton[i]:g} mol/L, but with the other totals only "
+        f"{proton[i] - net[i]:g} mol/L is electroneutral (net charge {net[i]:+g} mol/L)"
+        for i in bad[:MOST_PROBLEMS]
+    ]
+    if problems:
+        raise WaterError("; ".join(problems))
 
 
 def co2_formation_ln(system: System) -> float:

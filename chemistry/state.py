@@ -224,6 +224,7 @@ def equilibrate(
     *,
     titrant: FloatArray | None = None,
     start: Start | None = None,
+    require_neutral: bool = False,
 ) -> EquilibriumState:
     """Find the equilibrium of a batch of waters.
 
@@ -246,11 +247,14 @@ def equilibrate(
         (states, components); protons alone by default.
     start
         A solution of neighbouring waters (same number of states) to start from.
+    require_neutral
+        Refuse totals that no electroneutral water has (free pH). By default ions that take no part,
+        such as nitrate, may be left out; ``certificate`` shows their charge.
 
     Raises
     ------
     WaterError
-        Totals, pH or pressure that no water can have.
+        Totals, pH or pressure that no water can have: every one with its state, component, value.
     EquilibriumError
         A state missed its certificate and ``on_failure`` is ``raise``. A held pH or pressure that
         only more than 60 mol/L of something could reach counts as missed.
@@ -269,7 +273,7 @@ def equilibrate(
     """
     if on_failure not in ("raise", "flag"):
         raise ValueError(f"on_failure is {on_failure!r}: use 'raise' or 'flag'")
-    asked = read_request(system, totals, ph, pco2_atm, titrant)
+    asked = read_request(system, totals, ph, pco2_atm, titrant, require_neutral=require_neutral)
     kernel = kernel_of(system)
     batch = new_batch(system, asked.totals, asked.ph, asked.ln_co2, asked.titrant)
     if start is None:
