@@ -1,7 +1,8 @@
 """Equilibrium constants: the shipped species and solids, and the systems built from them.
 
-Owns the choice of solids that form by default; the arrays and the equilibrium belong to
-`chemistry`.
+Owns the choice of solids that form by default and of the rows that go with an activity model; the
+arrays and the equilibrium belong to `chemistry`, interaction coefficients to
+`catalogs.interactions`.
 """
 
 from __future__ import annotations
@@ -11,6 +12,7 @@ from dataclasses import dataclass
 from functools import lru_cache
 from types import MappingProxyType
 
+from catalogs.interactions import interactions
 from catalogs.packaged import number_or_none, read_rows
 from catalogs.problems import closest, did_you_mean
 from chemistry.errors import SystemDefinitionError
@@ -21,8 +23,15 @@ COMPONENTS: tuple[str, ...] = (
     "Cl-", "SO4-2", "CO3-2", "HS-", "F-", "PO4-3", "CH3COO-",
     "Ag+", "Pb+2", "Cd+2", "Cu+2", "Zn+2", "Ni+2", "Co+2", "Mn+2",
     "Fe+2", "Fe+3", "Al+3", "Cr+3", "Hg+2",
+    "(EDTA)-4", "(NTA)-3", "(Cit)-3", "(Tart)-2", "(Ox)-2", "(Gluc)-",
 )  # fmt: skip
 """Every component of the catalog, in the order that systems keep."""
+
+CHELATES: tuple[str, ...] = COMPONENTS[-6:]
+"""Chelating ligands: a system holds them only where they are named."""
+
+SPECIES_FILES = ("aqueous_species.csv", "chelate_species.csv")
+SOLID_FILES = ("solids.csv", "chelate_solids.csv")
 
 REFERENCE_TEMPERATURE_DEGC = 25.0
 
@@ -33,7 +42,8 @@ class SpeciesInfo:
 
     ``log10_k`` belongs to ``reaction`` (formation from the components) at 25 C and zero ionic
     strength, ``low`` and ``high`` are the range of published values; ``enthalpy_kj_per_mol`` is
-    that of the same reaction, None where none is known.
+    that of the same reaction, None where none is known. ``models`` tells the activity models that
+    the row belongs to: ``davies``, ``sit`` or ``both``.
     """
 
     name: str
@@ -45,6 +55,7 @@ class SpeciesInfo:
     enthalpy_kj_per_mol: float | None
     enthalpy_confidence: str
     enthalpy_source: str
+    models: str
     source: str
     note: str
 
@@ -78,9 +89,9 @@ class SolidInfo:
 
 
 @lru_cache(maxsize=1)
-def species_table() -> Mapping[str, SpeciesInfo]:
-    """Every dissolved species of the catalog by name, in the order of the file."""
-    rows = (
+def species_rows() -> tuple[SpeciesInfo, ...]:
+    """Every row of the tables of dissolved species; a name has one row or one per model."""
+    return tuple(
         SpeciesInfo(
             name=row["name"],
             reaction=row["reaction"],
@@ -91,12 +102,24 @@ def species_table() -> Mapping[str, SpeciesInfo]:
             enthalpy_kj_per_mol=number_or_none(row["enthalpy_kj_per_mol"]),
             enthalpy_confidence=row["enthalpy_confidence"],
             enthalpy_source=row["enthalpy_source"],
+            models=row["models"],
             source=row["source"],
             note=row["note"],
         )
-        for row in read_rows("aqueous_species.csv")
+        for file in SPECIES_FILES
+        for row in read_rows(file)
     )
-    return MappingProxyType({row.name: row for row in rows})
+
+
+@lru_cache(maxsize=8)
+def species_table(activity: str = "davies") -> Mapping[str, SpeciesInfo]:
+    """Dissolved species that go with an activity model by name, in the order of the files.
+
+    Specific ion interaction leaves out ion pairs that its coefficients already contain and takes
+    some constants that were reduced with it; every other model takes the rows of Davies.
+    """
+    kept = ("both", "sit" if activity == "sit" else "davies")
+    return MappingProxyType({row.name: row for row in species_rows() if row.models in kept})
 
 
 @lru_cache(maxsize=1)
@@ -122,13 +145,14 @@ def solid_table() -> Mapping[str, SolidInfo]:
             source=row["source"],
             note=row["note"],
         )
-        for row in read_rows("solids.csv")
+        for file in SOLID_FILES
+        for row in read_rows(file)
     )
     return MappingProxyType({row.name: row for row in rows})
 
 
-def species_info(name: str) -> SpeciesInfo:
-    """Constant, range and source of a dissolved species.
+def species_info(name: str, activity: str = "davies") -> SpeciesInfo:
+    """Constant, range and source of a dissolved species with an activity model.
 
     Raises
     ------
@@ -140,8 +164,9 @@ def species_info(name: str) -> SpeciesInfo:
     >>> species_info("AgCl2-").log10_k
     5.25
     """
-    _require_known([name], species_table(), "species")
-    return species_table()[name]
+    table = species_table(activity)
+    _require_known([name], table, "species")
+    return table[name]
 
 
 def solid_info(name: str) -> SolidInfo:
@@ -176,12 +201,14 @@ def load_system(
         see `enthalpy_unknown`. [C]
     components
         Names to narrow the system to (``Cu+2``); ``H+`` is always kept, the order is the
-        catalog's. None keeps all.
+        catalog's. None keeps all but the chelating ligands (`CHELATES`).
     solids
         Candidate solids by name, slow and aged ones too. None takes those that are on by default,
         as far as their components are kept.
     activity
-        Activity model: ``auto``, ``davies`` or ``ideal``.
+        Activity model: ``auto`` (Davies), ``davies``, ``sit`` or ``ideal``. With ``sit`` the system
+        carries the catalog's interaction coefficients and the species that go with them, see
+        `species_table`; `chemistry.activity.choose_activity` tells which of the two suits a water.
 
     Raises
     ------
@@ -202,10 +229,11 @@ def load_system(
         chosen = _named_solids(solids, kept)
     return System(
         [name for name in COMPONENTS if name in kept],
-        [s for s in _species().values() if _fits(s, kept)],
+        [s for s in _species(activity).values() if _fits(s, kept)],
         chosen,
         temperature_degc=temperature_degc,
         activity=activity,
+        interactions=interactions() if activity == "sit" else None,
     )
 
 
@@ -220,8 +248,8 @@ def enthalpy_unknown(system: System) -> tuple[str, ...]:
     return tuple(item.name for item in items if item.enthalpy_kj_per_mol is None)
 
 
-@lru_cache(maxsize=1)
-def _species() -> Mapping[str, Species]:
+@lru_cache(maxsize=8)
+def _species(activity: str) -> Mapping[str, Species]:
     return MappingProxyType(
         {
             row.name: Species.from_reaction(
@@ -232,7 +260,7 @@ def _species() -> Mapping[str, Species]:
                 source=row.source,
                 note=row.note,
             )
-            for row in species_table().values()
+            for row in species_table(activity).values()
         }
     )
 
@@ -263,7 +291,7 @@ def _defaults() -> frozenset[str]:
 
 def _kept_components(components: Iterable[str] | None) -> frozenset[str]:
     if components is None:
-        return frozenset(COMPONENTS)
+        return frozenset(COMPONENTS) - frozenset(CHELATES)
     wanted = _as_names(components)
     _require_known(wanted, COMPONENTS, "components")
     return frozenset({"H+", *wanted})

@@ -13,14 +13,14 @@ import numpy as np
 from chemistry.active_set import exchange, keep_independent, slots_of
 from chemistry.batch import Batch, BoolArray, FloatArray, IntArray
 from chemistry.kernel import Kernel
-from chemistry.linear import solve_equilibrated
+from chemistry.linear import solve_batch, solve_equilibrated
 
 NEWTON_ROUNDS = 30
 EXCHANGE_ROUNDS = 60
 MASS_TOLERANCE = 1e-12  # mass balance at which the Newton step stops
 MASS_TOLERANCE_LAST = 5e-11  # accepted in the last round, where rounding allows no more
 LARGEST_STEP_LN = 6.0  # of a log activity in one step
-SURROUNDINGS_TOLERANCE = 1e-12  # of the ionic strength
+SURROUNDINGS_TOLERANCE = 1e-12  # of the ionic strength, others of the largest of them
 SATURATION_TOLERANCE = 1e-11  # |SI| (natural log) of present solids at which it stops
 
 
@@ -107,16 +107,13 @@ def linearise(
     m = kernel.molalities(part.ln_activity, y)
     sums, scale = kernel.amounts(m, part.solids)
     off = kernel.surroundings(m) - y
-    spread = m[:, :, None] * model.offset_slope(y, columns)  # dm/dy at fixed l
-    weights = kernel.functionals[:, columns]
-    held_back = np.eye(columns.size) - weights.T @ spread
-    by_activity = (m[:, None, :] * weights.T) @ kernel.formation
-    known = np.concatenate([by_activity, off[:, columns, None]], axis=2)
-    followed = known / held_back if columns.size == 1 else np.linalg.solve(held_back, known)
+    coupled = kernel.coupling(columns).at(m, y)
+    known = np.concatenate([coupled.by_activity, off[:, columns, None]], axis=2)
+    alone = columns.size == 1
+    followed = known / coupled.held_back if alone else solve_batch(coupled.held_back, known)
     follow, follow_gap = followed[:, :, :-1], followed[:, :, -1]
-    side = np.swapaxes(spread, 1, 2) @ kernel.formation  # (n, columns, components)
-    matrix = kernel.gram(m) + np.swapaxes(side, 1, 2) @ follow
-    rhs = part.totals - sums - (follow_gap[:, None, :] @ side)[:, 0]
+    matrix = kernel.gram(m) + np.swapaxes(coupled.side, 1, 2) @ follow
+    rhs = part.totals - sums - (follow_gap[:, None, :] @ coupled.side)[:, 0]
     g = kernel.solid_formation[slots]
     si = np.take_along_axis(kernel.saturation_ln(part.ln_activity, y), slots, axis=1)
     saturation = si
@@ -137,7 +134,6 @@ def linearise(
 def _newton_step(
     kernel: Kernel, part: Batch, slots: IntArray, used: BoolArray, tolerance: float
 ) -> BoolArray:
-    _refresh_lagging(kernel, part)
     columns = kernel.model.leading(part.surroundings)
     lin = linearise(kernel, part, slots, used, columns=columns)
     done = _is_exact(kernel, part, lin, tolerance)
@@ -151,9 +147,7 @@ def _newton_step(
     bad = ~np.isfinite(step).all(axis=1)
     alpha = np.where(done | bad, 0.0, alpha)
     part.ln_activity += alpha[:, None] * np.where(np.isfinite(dl), dl, 0.0)
-    here = part.surroundings[:, columns]
-    moved = here + np.where(np.isfinite(dy), alpha[:, None] * dy, 0.0)
-    part.surroundings[:, columns] = np.clip(moved, 0.2 * here, 5.0 * here + 1e-9)
+    _move_surroundings(part, lin, alpha, dy)
     change = np.where(used & np.isfinite(dx), alpha[:, None] * dx, 0.0)
     if change.shape[1]:
         amounts = np.take_along_axis(part.solids, slots, axis=1) + change
@@ -161,20 +155,22 @@ def _newton_step(
     return done
 
 
-def _refresh_lagging(kernel: Kernel, part: Batch) -> None:
-    """Take the surroundings that Newton leaves out from the species as they are, in place."""
-    width = kernel.model.width
-    if width == 1:
-        return
-    lagging = np.setdiff1d(np.arange(width), kernel.model.leading(part.surroundings))
-    m = kernel.molalities(part.ln_activity, part.surroundings)
-    part.surroundings[:, lagging] = (m @ kernel.functionals)[:, lagging]
+def _move_surroundings(part: Batch, lin: Linearised, alpha: FloatArray, dy: FloatArray) -> None:
+    """Move the surroundings of Newton's matrix with the step, the others to the species, in place.
+
+    Rows with a step of 0 keep theirs.
+    """
+    before, columns = part.surroundings, lin.columns
+    seen = before + np.where((alpha > 0.0)[:, None], lin.off, 0.0)
+    seen[:, columns] = before[:, columns] + np.where(np.isfinite(dy), alpha[:, None] * dy, 0.0)
+    part.surroundings = np.clip(seen, 0.2 * before, 5.0 * before + 1e-9)
 
 
 def _is_exact(kernel: Kernel, part: Batch, lin: Linearised, tolerance: float) -> BoolArray:
     relative = np.abs(kernel.misses(part, lin.sums)) / np.maximum(lin.scale, 1e-300)
-    size = np.maximum(part.surroundings[:, 0], 1e-12)
-    off = np.abs(lin.off).max(axis=1) / size
+    strength = np.abs(lin.off[:, 0]) / np.maximum(part.surroundings[:, 0], 1e-12)
+    most = np.maximum(part.surroundings.max(axis=1), 1e-12)
+    off = np.maximum(strength, np.abs(lin.off).max(axis=1) / most)
     exact: BoolArray = (
         (relative.max(axis=1) < tolerance)
         & (np.abs(lin.miss).max(axis=1, initial=0.0) < SATURATION_TOLERANCE)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from catalogs.constants import load_system, solid_table
+from catalogs.constants import COMPONENTS, load_system, solid_table
 from catalogs.sludge_data import (
     cake_figures,
     disposal_classes,
@@ -17,8 +17,8 @@ from chemistry.sludge import BOUND_WATER_FACTOR, CAKE_SOLIDS_FRACTION, formula_m
 
 def test_no_row_and_no_digit_was_lost() -> None:
     densities = solid_densities().values()
-    assert len(densities) == 113
-    assert sum(row.density_kg_per_l for row in densities) == pytest.approx(469.82, abs=1e-9)
+    assert len(densities) == 115
+    assert sum(row.density_kg_per_l for row in densities) == pytest.approx(477.32, abs=1e-9)
     assert len(disposal_classes()) == 4
     assert sum(c.tariff_high_per_wet_t for c in disposal_classes().values()) == 2630.0
     assert len(leaching_thresholds()) == 6
@@ -41,7 +41,7 @@ def test_densities_are_those_of_crystals_not_of_settled_floc() -> None:
 
 
 def test_molar_masses_agree_with_the_formation_reactions() -> None:
-    system = load_system(solids=solid_table())
+    system = load_system(components=COMPONENTS, solids=solid_table())
     listed = [solid_densities()[name].molar_mass_g_per_mol for name in system.solid_names]
     assert np.allclose(listed, formula_masses_g_per_mol(system), atol=2e-3, rtol=0.0)
     assert np.allclose(listed, system.solid_molar_masses_g_per_mol, atol=2e-3, rtol=0.0)
