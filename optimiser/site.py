@@ -140,6 +140,34 @@ class Offer:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class OwnConstant:
+    """A constant of the site's own: a new species or solid, or one in place of the catalog's.
+
+    ``log10_k`` belongs to ``reaction`` (formation from the components) at 25 C and zero ionic
+    strength. None where a catalogued value stays.
+    """
+
+    name: str
+    kind: str
+    reaction: str
+    log10_k: float
+    source: str
+    replace: bool = False
+    enthalpy_kj_per_mol: float | None = None
+    mineral: str = ""
+    scale_former: bool | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SolidSwitch:
+    """A catalogued solid that the site switches on or off, and why."""
+
+    solid: str
+    on: bool
+    reason: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class SolverSettings:
     """Choice and limits of the mixed-integer solver."""
 
@@ -176,6 +204,8 @@ class Site:
     notes: tuple[str, ...] = ()
     today: Mapping[str, float] = field(default_factory=dict)
     """Doses of today's practice, mg/L pure fed, if the site file gives them."""
+    own_constants: tuple[OwnConstant, ...] = ()
+    solid_switches: tuple[SolidSwitch, ...] = ()
 
     @property
     def flow_m3_per_year(self) -> float:

@@ -22,6 +22,7 @@ from chemistry.feed import ANALYTES, BURDENS, feed_water
 from chemistry.system import System
 from optimiser.offers_reader import OFFER_COLUMNS, expired_notes, read_offers
 from optimiser.site import Disposal, Offer, Site, SolverSettings
+from optimiser.site_constants import OwnBlock, read_own
 from optimiser.site_feed import FeedBlock, read_feed
 from optimiser.site_limits import Foreseen, LimitsBlock, read_limits
 from optimiser.site_treatment import (
@@ -49,6 +50,7 @@ class _Blocks:
     offers: tuple[Offer, ...]
     solver: SolverSettings
     doses_today: Mapping[str, float]
+    own: OwnBlock
 
 
 def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
@@ -102,6 +104,7 @@ def _read_blocks(entry: Entry, file: Path, reagents: Mapping[str, Reagent]) -> _
         offers=_read_price_book(entry, file, reagents, treatment),
         solver=read_solver(entry.block_or_none("solver")),
         doses_today=entry.numbers("today", known, "reagents allowed in treatment", NON_NEGATIVE),
+        own=read_own(entry),
     )  # fmt: skip
     entry.finish()
     return blocks
@@ -159,7 +162,10 @@ def _checked_system(blocks: _Blocks, reagents: Mapping[str, Reagent]) -> System 
     if feed is None or feed.analysis is None:
         return None
     allowed = blocks.treatment.allowed_at if blocks.treatment else {}
-    system = load_system(feed.temperature_degc, components=site_components(feed, allowed, reagents))
+    catalogued = load_system(
+        feed.temperature_degc, components=site_components(feed, allowed, reagents)
+    )
+    system = blocks.own.applied_to(catalogued)
     try:
         feed_water(feed.analysis, system)
     except WaterError as error:
@@ -207,8 +213,9 @@ def _site(
         treatment=treatment.treatment, disposal=disposal,
         burden_charges_per_kg=blocks.charges, offers=blocks.offers, solver=blocks.solver,
         pretreated=feed.pretreated, today=blocks.doses_today,
+        own_constants=blocks.own.constants, solid_switches=blocks.own.switches,
         notes=(
-            *feed.notes, *limits.notes, *_closing_notes(feed, limits),
+            *blocks.own.notes(system), *feed.notes, *limits.notes, *_closing_notes(feed, limits),
             *expired_notes(blocks.offers, day),
         ),
     )  # fmt: skip

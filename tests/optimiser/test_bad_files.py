@@ -108,8 +108,8 @@ def test_an_unknown_key_comes_with_the_nearest_known_one() -> None:
         "site.yaml:5: feed.flow_m3_per_day: found an unknown key, expected only known keys\n"
         "    Did you mean `flow_m3_per_d`? The keys known here: acidity_end_ph, "
     )
-    [problem] = problems_of("currency: EUR", "currency: EUR\nconstants: mine.csv")
-    assert problem.startswith("site.yaml:3: constants: found an unknown key, expected only known")
+    [problem] = problems_of("currency: EUR", "currency: EUR\nchemistry: mine.csv")
+    assert problem.startswith("site.yaml:3: chemistry: found an unknown key, expected only known")
 
 
 def test_every_missing_block_and_key_is_reported() -> None:
