@@ -8,10 +8,12 @@ from __future__ import annotations
 
 import numpy as np
 
-from chemistry.batch import Batch, BoolArray, IntArray
+from chemistry.batch import Batch, BoolArray, FloatArray, IntArray
 from chemistry.kernel import Kernel
 from chemistry.linear import left_inverse
 from chemistry.system import LN10
+
+DEPENDENT = 1e-12  # smallest eigenvalue of the Gram matrix of independent stoichiometries
 
 
 def slots_of(active: BoolArray) -> tuple[IntArray, BoolArray]:
@@ -22,28 +24,58 @@ def slots_of(active: BoolArray) -> tuple[IntArray, BoolArray]:
 
 
 def keep_independent(kernel: Kernel, batch: Batch) -> None:
-    """Keep a linearly independent subset of the active solids, largest amounts first."""
+    """Keep a linearly independent subset of the active solids whose amounts stay positive.
+
+    Where solids depend on each other, amounts move along the reaction between them, towards the
+    supersaturated ones, until one is used up. Ties of the constants (a reaction among four solids
+    that runs neither way) need this too: dropping any one of them may leave another negative.
+    """
     if not batch.active.any():
         return
-    size = np.where(batch.active, batch.solids, -1.0)
-    order = np.argsort(-size, axis=1, kind="stable")
-    width = int(batch.active.sum(axis=1).max())
-    rows_of = kernel.independent_columns(batch)
-    basis = np.zeros((batch.totals.shape[0], 0, batch.totals.shape[1]))
-    take = np.arange(batch.totals.shape[0])
-    for k in range(width):
-        pick = order[:, k]
-        wanted = batch.active[take, pick]
-        vector = rows_of[take, pick]
-        length = np.maximum(np.linalg.norm(vector, axis=1), 1e-300)
-        rest = vector - np.einsum("nk,nkc->nc", np.einsum("nkc,nc->nk", basis, vector), basis)
-        rest -= np.einsum("nk,nkc->nc", np.einsum("nkc,nc->nk", basis, rest), basis)
-        norm = np.linalg.norm(rest, axis=1)
-        good = wanted & (norm > 1e-9 * length)
-        batch.active[take, pick] = good
-        batch.solids[take, pick] = np.where(good, batch.solids[take, pick], 0.0)
-        unit = np.where(good[:, None], rest / np.maximum(norm, 1e-300)[:, None], 0.0)
-        basis = np.concatenate([basis, unit[:, None, :]], axis=1)
+    vectors = kernel.independent_columns(batch)
+    saturation = kernel.saturation_ln(batch.ln_activity, batch.surroundings)
+    for row in np.flatnonzero(_are_dependent(batch, vectors)):
+        chosen = np.flatnonzero(batch.active[row])
+        amounts = np.maximum(batch.solids[row, chosen], 0.0)
+        kept, left = _used_up(vectors[row, chosen], amounts, saturation[row, chosen])
+        batch.active[row] = False
+        batch.active[row, chosen[kept]] = True
+        batch.solids[row] = 0.0
+        batch.solids[row, chosen[kept]] = left
+
+
+def _are_dependent(batch: Batch, vectors: FloatArray) -> BoolArray:
+    """Whether the active solids of each water depend on each other, (n,)."""
+    slots, used = slots_of(batch.active)
+    rows = np.take_along_axis(vectors, slots[:, :, None], axis=1) * used[:, :, None]
+    length = np.linalg.norm(rows, axis=2)
+    rows = rows / np.maximum(length, 1e-300)[:, :, None]
+    gram = rows @ np.swapaxes(rows, 1, 2)
+    diagonal = np.einsum("nkk->nk", gram)
+    diagonal[~used] = 1.0
+    smallest = np.linalg.eigvalsh(gram)[:, 0]
+    empty = (used & (length == 0.0)).any(axis=1)
+    return np.asarray(empty | (smallest < DEPENDENT), dtype=bool)
+
+
+def _used_up(
+    vectors: FloatArray, amounts: FloatArray, saturation: FloatArray
+) -> tuple[IntArray, FloatArray]:
+    """Positions of independent solids and their amounts, after reactions among all of them."""
+    kept, left = np.arange(amounts.size), amounts.copy()
+    while kept.size:
+        u, size, _ = np.linalg.svd(vectors[kept])
+        if size.size == kept.size and size[-1] ** 2 >= DEPENDENT * size[0] ** 2:
+            break
+        way = u[:, -1]
+        way = np.where(np.abs(way) < 1e-9, 0.0, way)
+        if way @ saturation[kept] < 0.0 or not (way < 0.0).any():
+            way = -way
+        room = np.where(way < 0.0, -left / np.minimum(way, -1e-300), np.inf)
+        first = int(np.argmin(room))
+        left = np.maximum(left + room[first] * way, 0.0)
+        kept, left = np.delete(kept, first), np.delete(left, first)
+    return kept, left
 
 
 def exchange(kernel: Kernel, part: Batch, solved: BoolArray) -> BoolArray:

@@ -47,7 +47,7 @@ class Batch:
 
     def put(self, rows: IntArray | BoolArray, part: Batch) -> None:
         """Write the iterate of a part back into these rows."""
-        for name in ("ln_activity", "surroundings", "solids", "active", "converged"):
+        for name in ("pivot", "ln_activity", "surroundings", "solids", "active", "converged"):
             getattr(self, name)[rows] = getattr(part, name)
 
 

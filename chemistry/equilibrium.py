@@ -67,8 +67,28 @@ def _search_doses(kernel: Kernel, batch: Batch, rows: IntArray) -> IntArray:
     if held.any():
         part = begin_at_dose(kernel, _afresh(kernel, batch, rows[held]), solve)
         finish(kernel, part)
+        _finish_by_scarcest(kernel, part)
         batch.put(rows[held], part)
     return rows[~held]
+
+
+def _finish_by_scarcest(kernel: Kernel, batch: Batch) -> None:
+    """Tell the dose by the component that the water holds least of beside the titrant, in place.
+
+    A small dose read off a large balance of protons is no better than that balance's rounding.
+    """
+    rows = np.flatnonzero(~batch.converged & (np.count_nonzero(batch.titrant, axis=1) > 1))
+    if rows.size == 0:
+        return
+    part = batch.take(rows)
+    m = kernel.molalities(part.ln_activity, part.surroundings)
+    _, scale = kernel.amounts(m, part.solids)
+    moles = np.abs(kernel.reduced_titrant(part, np.arange(rows.size)))
+    size = np.where(moles > 0.0, scale / np.maximum(moles, 1e-300), np.inf)
+    part.pivot = np.argmin(size, axis=1)
+    finish(kernel, part)
+    done = np.flatnonzero(part.converged)
+    batch.put(rows[done], part.take(done))
 
 
 def solve_warm(kernel: Kernel, batch: Batch) -> None:

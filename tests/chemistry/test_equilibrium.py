@@ -252,6 +252,18 @@ def test_a_dose_hidden_among_solids_is_found_from_the_dose_side() -> None:
     assert state.titrant_mol_per_l[0] == pytest.approx(8.27514e-4, rel=1e-5)
 
 
+@pytest.mark.parametrize("dose", [1e-4, 1e-6, 1e-8, 1e-10])
+def test_a_dose_far_below_the_acid_it_meets_is_found(dose: float) -> None:
+    """Read off the proton balance of a strong buffer, such a dose would drown in rounding."""
+    system = load_system(activity="davies")
+    buffer = {"H+": 0.945, "NH4+": 0.227, "F-": 0.128, "PO4-3": 0.26, "CH3COO-": 0.263}
+    caustic = vector({"Na+": 1.0, "H+": -1.0}, system)
+    dosed = equilibrate(system, vector(buffer, system) + dose * caustic)
+    held = equilibrate(system, buffer, ph=dosed.ph, titrant=caustic)
+    assert held.titrant_mol_per_l[0] == pytest.approx(dose, rel=1e-4, abs=1e-14)
+    assert certify(held).mass_balance[0] <= 1e-10
+
+
 def test_the_pressure_of_a_closed_water_holds_its_carbonate() -> None:
     closed_water = ACID | {"CO3-2": 3e-3, "H+": 3e-4}
     free = equilibrate(SYSTEM, closed_water)
@@ -376,6 +388,30 @@ def test_rank_deficient_solids_leave_two_of_three() -> None:
     assert worst["supersaturation"] <= 1e-8
     assert state.active.sum(axis=1).max() == 2
     assert {tuple(row) for row in state.active} > {(False, False, False)}
+
+
+def test_a_tie_between_four_solids_leaves_three_with_positive_amounts() -> None:
+    """3 Ni(OH)2 + 2 Ag3PO4 = Ni3(PO4)2 + 3 Ag2O + 3 H2O runs neither way with the constants.
+
+    Keeping the three largest of the four would leave silver oxide with a negative amount.
+    """
+    system = load_system(activity="davies")
+    water = {
+        "H+": -0.07899684015684852, "Na+": 0.012310596530003397, "K+": 2.6455400987216502e-09,
+        "Sr+2": 5.120071040016127e-05, "NH4+": 1.7329750475911812e-07,
+        "SO4-2": 1.0133108769357793e-06, "CO3-2": 0.006156295697366995,
+        "F-": 0.01563037616564358, "PO4-3": 0.021359274415981115, "Ag+": 0.06070612701063692,
+        "Pb+2": 8.07412640056804e-05, "Cd+2": 0.00027691521077182976,
+        "Cu+2": 0.002056793091251616, "Zn+2": 6.769275251009504e-09,
+        "Ni+2": 0.04589240964287328, "Al+3": 2.6849040204727426e-05,
+        "Hg+2": 0.000603038802734149,
+    }  # fmt: skip
+    state = equilibrate(system, water)
+    tied = ["Ni(OH)2(s,fresh)", "Ag2O(s)", "Ni3(PO4)2(s)", "Ag3PO4(s)"]
+    amounts = state.solids.loc[0, tied]
+    assert (amounts > 0.0).sum() == 3
+    np.testing.assert_allclose(state.saturation_index.loc[0, tied], 0.0, atol=1e-9)
+    assert certify(state).least_amount[0] >= 0.0
 
 
 def test_the_same_solid_under_two_names_is_held_once() -> None:
