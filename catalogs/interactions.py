@@ -131,7 +131,9 @@ def missing_pairs(
     return tuple(
         InteractionInfo(
             one=one, other=other, status="rule", confidence="estimated", note="",
-            coefficient_kg_per_mol=interaction_by_rule(one, other, charges[one], charges[other]),
+            coefficient_kg_per_mol=float(
+                interaction_by_rule(one, other, charges[one], charges[other])
+            ),
             source=interaction_parameters()["cation_with_anion_of_charge_1"].source,
         )
         for a, b in combinations(kept, 2)
