@@ -2,38 +2,52 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from optimiser.errors import NoPlan
-from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator
-from optimiser.points import END_TEXT
+from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator, Place
+from optimiser.points import END_TEXT, Points
+from optimiser.polish import polish
 from optimiser.quality_slopes import RULE
+from optimiser.recipes import recipe_of, set_point_bounds
 from optimiser.search import Findings
+from optimiser.solver import SolverPort
+
+FloatArray = NDArray[np.float64]
+
+SMALL_MOVES = (0.05, 0.2)  # of a dose; twice that in pH
+NEAREST = 4  # recipes that are polished to the nearest miss
+AT_LIMIT = 0.02  # a check this close below 0 counts as being at its limit
 
 
-def explain_no_plan(evaluator: Evaluator, findings: Findings) -> NoPlan:
+def explain_no_plan(evaluator: Evaluator, findings: Findings, solver: SolverPort) -> NoPlan:
     """Build the error that says why no recipe complies.
 
-    Each limit's lowest reachable value is the least seen over all points examined; a limit clashes
-    if even that misses its target, or if the best compromise misses it.
+    Each limit's lowest reachable value is the least seen over all points examined. The points with
+    the least misses are polished to the nearest miss, where the largest miss is as small as can be:
+    the checks that stand at it there are the ones that clash.
     """
+    if not findings.best:
+        return _nothing_to_try(evaluator, findings)
     checks = evaluator.judge.checks
-    best = min(findings.best.values(), key=lambda t: t.violation, default=None)
-    missed = _missed(evaluator, best.place.seen, best.place.point) if best else {}
+    seen, point = _nearest_miss(evaluator, findings, solver)
+    missed = _missed(evaluator, seen, point)
+    lowest = findings.lowest if findings.lowest is not None else np.full(len(checks), np.inf)
     clashes: list[dict[str, Any]] = []
     for number, check in enumerate(checks):
-        lowest = float(findings.lowest[number]) if findings.lowest is not None else np.inf
-        alone = lowest > check.target * np.exp(FEASIBLE_RATIO)
-        if not alone and number not in missed:
+        alone = bool(lowest[number] > check.target * np.exp(FEASIBLE_RATIO))
+        if not (alone and findings.lowest is not None) and number not in missed:
             continue
         scale = check.variability
         clashes.append(
             {
                 "limit": f"{check.label}, {check.averaging}"
                 + (f" ({check.limit:g} {check.unit})" if check.averaging != RULE else ""),
-                "lowest_reachable": lowest * scale,
+                "lowest_reachable": float(lowest[number]) * scale,
                 "target": check.target * scale,
                 "reachable_alone": not alone,
                 "best_compromise": missed.get(number, check.target) * scale,
@@ -43,7 +57,39 @@ def explain_no_plan(evaluator: Evaluator, findings: Findings) -> NoPlan:
     message = (
         f"no plan: none of the {len(findings.recipes_examined)} recipes examined meets every limit"
     )
-    return NoPlan(message, reasons=_reasons(evaluator, findings, clashes), clashes=clashes)
+    return NoPlan(message, reasons=_reasons(evaluator, clashes, seen, point), clashes=clashes)
+
+
+def _nearest_miss(
+    evaluator: Evaluator, findings: Findings, solver: SolverPort
+) -> tuple[Evaluation, int]:
+    """Polish the least misses seen to where the largest miss is least."""
+    ranked = sorted(findings.best.values(), key=lambda track: track.violation)[:NEAREST]
+    tracks = polish(
+        evaluator, Points.join([track.point for track in ranked]), solver,
+        bounds=set_point_bounds(evaluator), near=[track.place for track in ranked],
+        rival=None,
+    )  # fmt: skip
+    best = min(tracks, key=lambda track: track.violation)
+    return best.place.seen, best.place.point
+
+
+def _nothing_to_try(evaluator: Evaluator, findings: Findings) -> NoPlan:
+    """No point could be examined: say which windows and rules leave none."""
+    treatment, window = evaluator.plant.treatment, evaluator.site.ph_window
+    asked = treatment.ph_set_point
+    reasons = [
+        f"the set point may lie from pH {asked.low:g} to {asked.high:g}, the discharge from "
+        f"{window.low:g} to {window.high:g}, with {treatment.ph_tolerance:g} kept to either side "
+        f"where no trim reagent moves the pH"
+    ]
+    if not treatment.trim_reagents:
+        reasons.append("no trim reagent is allowed")
+    tried = len(findings.recipes_examined)
+    if tried:
+        reasons.append(f"none of the {tried} recipes reaches a set point in there")
+    message = "no plan: no set point and doses are left inside the site's windows and rules"
+    return NoPlan(message, reasons=reasons)
 
 
 def _missed(evaluator: Evaluator, seen: Evaluation, point: int) -> dict[int, float]:
@@ -57,7 +103,9 @@ def _missed(evaluator: Evaluator, seen: Evaluation, point: int) -> dict[int, flo
     return missed
 
 
-def _reasons(evaluator: Evaluator, findings: Findings, clashes: list[dict[str, Any]]) -> list[str]:
+def _reasons(
+    evaluator: Evaluator, clashes: list[dict[str, Any]], seen: Evaluation, point: int
+) -> list[str]:
     reasons = []
     together = [c["limit"] for c in clashes if c["reachable_alone"]]
     alone = [c["limit"] for c in clashes if not c["reachable_alone"]]
@@ -65,21 +113,60 @@ def _reasons(evaluator: Evaluator, findings: Findings, clashes: list[dict[str, A
         reasons.append(f"out of reach whatever is dosed: {'; '.join(alone)}")
     if together:
         reasons.append(f"each within reach, but not together: {'; '.join(together)}")
-    best = min(findings.best.values(), key=lambda t: t.violation, default=None)
-    if best is not None:
-        rules = [
-            r.label for r in best.place.seen.rules if r.ratio[best.place.point] > FEASIBLE_RATIO
-        ]
-        if rules:
-            reasons.append(f"the best compromise also breaks: {'; '.join(rules)}")
-        recipe = ", ".join(
-            evaluator.plant.names[i]
-            for i in np.flatnonzero(best.place.seen.priced.doses[best.place.point] > 0.0)
-        )
-        reasons.append(f"nearest miss: {recipe} at pH {float(best.point.ph[0]):.2f}")
-    if not clashes and not reasons:
-        reasons.append("no set point and doses are left inside the site's windows and rules")
+    rules = [r.label for r in seen.rules if r.ratio[point] > FEASIBLE_RATIO]
+    if rules:
+        reasons.append(f"the best compromise also breaks: {'; '.join(rules)}")
+    held = _at_their_limit(evaluator, seen, point)
+    if held:
+        reasons.append(f"at their limit there, and holding it back: {'; '.join(held)}")
+    recipe = ", ".join(recipe_of(evaluator.plant, seen.points, point))
+    reasons.append(f"nearest miss: {recipe} at pH {float(seen.points.ph[point]):.2f}")
     return reasons
+
+
+def _at_their_limit(evaluator: Evaluator, seen: Evaluation, point: int) -> list[str]:
+    """Checks and rules that stand in the way at the nearest miss.
+
+    They either are at their limit, or a small move that lessens the worst miss breaks them.
+    """
+    names = _check_names(evaluator, seen)
+    here = _ratios(seen, point)
+    stand = (here > -AT_LIMIT) & (here <= FEASIBLE_RATIO)
+    worst = int(np.argmax(here))
+    for trial in _small_moves(evaluator, seen, point):
+        there = _ratios(trial, 0)
+        if there[worst] < here[worst]:
+            stand |= (there > FEASIBLE_RATIO) & (here <= FEASIBLE_RATIO)
+    return list(dict.fromkeys(names[i] for i in np.flatnonzero(stand)))
+
+
+def _check_names(evaluator: Evaluator, seen: Evaluation) -> list[str]:
+    checks = [f"{c.label}, {c.averaging}" for c in evaluator.judge.checks]
+    return checks + [rule.label for rule in seen.rules]
+
+
+def _ratios(seen: Evaluation, point: int) -> FloatArray:
+    """Worst ratio of every check, then of every rule, at one point."""
+    worst = np.full(seen.judged[0].ratio.shape[1], -np.inf)
+    for part in seen.judged:
+        mine = (seen.rows.point[part.block.rows] == point) & part.block.reached
+        if mine.any():
+            worst = np.maximum(worst, part.ratio[mine].max(axis=0))
+    return np.concatenate([worst, [float(rule.ratio[point]) for rule in seen.rules]])
+
+
+def _small_moves(evaluator: Evaluator, seen: Evaluation, point: int) -> list[Evaluation]:
+    """The point with one dose or the set point moved a little, each evaluated."""
+    one = seen.points.take([point])
+    moved = []
+    for size in (sign * move for move in SMALL_MOVES for sign in (-1.0, 1.0)):
+        for j in np.flatnonzero(one.doses[0] > 0.0):
+            doses = one.doses.copy()
+            doses[0, j] *= 1.0 + size
+            moved.append(replace(one, doses=doses))
+        if one.controller[0] >= 0:
+            moved.append(replace(one, ph=one.ph + 2.0 * size))
+    return [evaluator.evaluate(trial, near=[Place(seen, point)]) for trial in moved]
 
 
 def _stopper(evaluator: Evaluator, findings: Findings, number: int) -> str:

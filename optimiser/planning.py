@@ -43,8 +43,9 @@ def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
     begun = time.perf_counter()
     evaluator = Evaluator(site)
     refuse_salty(site, evaluator.plant.feed.ionic_strength, "the feed")
+    solver = solver_from(site.solver)
     search = Search(
-        evaluator, solver_from(site.solver), time_limit_s=site.solver.time_limit_s,
+        evaluator, solver, time_limit_s=site.solver.time_limit_s,
         progress=progress,
     )  # fmt: skip
     findings = search.run()
@@ -55,7 +56,7 @@ def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
                 f"stopped after {site.solver.time_limit_s:g} s before a verified plan was found: "
                 "raise the time limit or allow fewer reagents"
             )
-        raise explain_no_plan(evaluator, findings)
+        raise explain_no_plan(evaluator, findings, solver)
     _, best = ranked[0]
     seen = evaluator.evaluate(best.point, slopes=False)
     strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)

@@ -54,9 +54,11 @@ class Plant:
         self.reacting = self.vectors / self.factors[:, None]
         self.slurry = np.array([r.is_slurry for r in self.reagents])
         self.unreacted = np.where(self.slurry, 1.0 - 1.0 / self.factors, 0.0)
-        self.surplus = np.where(self.slurry, 0.0, 1.0 - 1.0 / self.factors)
-        # what a soluble reagent's excess leaves in the water still counts in full
-        self.reacting = np.where(self.slurry[:, None], self.reacting, self.vectors)
+        # the excess of a soluble reagent stays in the water: it reacts with nothing here, but
+        # burdens count it
+        excess = np.where(self.slurry, 0.0, 1.0 - 1.0 / self.factors)
+        self.surplus = self.vectors * excess[:, None]
+        self.surplus[:, self.system.index["H+"]] = 0.0
         self.states_solved = 0
 
     def dose_factor(self, reagent: Reagent) -> float:
@@ -150,13 +152,13 @@ class Plant:
             return found
         found += self._held(points, rows, base, first, CLOSED_HELD, none_lost, warm)
         doses = self.fed_doses(points, rows, found)
-        lost, slope = self._vented(points, doses)
-        venting = np.flatnonzero(lost[rows.point] > 1e-9)
+        lost, slope = self._vented(points, rows, doses)
+        venting = np.flatnonzero(lost > 1e-9)
         if venting.size:
             co2 = np.zeros_like(self.totals)
             co2[self.system.index["CO3-2"]] = 1.0
             co2[self.system.index["H+"]] = 2.0
-            vented = base - lost[rows.point][:, None] * co2
+            vented = base - lost[:, None] * co2
             start = _or_state(warm, VENTED_FORMED, venting, first)
             block = self._block(points, rows, vented, venting, VENTED_FORMED, slope, start)
             found.append(block)
@@ -194,12 +196,15 @@ class Plant:
         )
         self.states_solved += some.size
         liquid = state.dissolved_mol_per_l
+        fed = rows.doses[some].copy()
+        fed[np.arange(some.size), able] += np.where(controller >= 0, dose, 0.0)
         return self._trim(
             points, rows,
             Block(
                 end=end, rows=some, state=state, dose=dose, held=held_rows, reached=reached,
                 lost_slope=np.broadcast_to(lost_slope, (len(self.names),)),
-                liquid=liquid, effluent=liquid, trim_dose=np.zeros(some.size),
+                liquid=liquid, effluent=liquid, surplus=fed @ self.surplus,
+                trim_dose=np.zeros(some.size),
                 trimmed=np.zeros(some.size, dtype=bool), trim_state=None,
                 trim_missing=np.zeros(some.size, dtype=bool),
             ),
@@ -243,28 +248,32 @@ class Plant:
                     doses[point, reagent] = max(doses[point, reagent], dose)
         return doses
 
-    def _vented(self, points: Points, doses: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Carbon dioxide that carbonate dosed into the feed may lose, (points,) [mol/L].
+    def _vented(
+        self, points: Points, rows: Rows, doses: FloatArray
+    ) -> tuple[FloatArray, FloatArray]:
+        """Carbon dioxide that carbonate dosed into the feed may lose, (rows,) [mol/L].
 
-        The feed and all carbonate reagents meet before other alkali and come to rest with air of
-        the site's CO2 pressure; what leaves is lost. Also returned: its change per mg/L of each
-        carbonate reagent at the mean point, (reagents,) [mol/mg].
+        The feed and all carbonate reagents of a row meet before other alkali and come to rest with
+        air of the site's CO2 pressure; what leaves is lost. ``doses`` (points, reagents) are the
+        nominal ones, from which the controller's is taken. Also returned: the change per mg/L of
+        each carbonate reagent at the mean row, (reagents,) [mol/mg].
         """
-        lost = np.zeros(len(points))
+        lost = np.zeros(len(rows))
         slope = np.zeros(len(self.names))
-        dosed = np.flatnonzero((doses[:, self.is_carbonate] > 0.0).any(axis=1))
+        fed = np.where(rows.doses > 0.0, rows.doses, doses[rows.point]) * self.is_carbonate
+        dosed = np.flatnonzero(fed.any(axis=1))
         if not dosed.size or "CO2(aq)" not in self.system.species_names:
             return lost, slope
-        mixed = self.totals + (doses[dosed] * self.is_carbonate) @ self.reacting
+        added = fed[dosed] @ self.reacting
+        mixed = self.totals + added
         carbonate = self.system.index["CO3-2"]
         state = equilibrate(
             self.liquid_system, mixed, pco2_atm=self.treatment.vent_pco2_atm, on_failure="flag"
         )
         gone = mixed[:, carbonate] - state.totals[:, carbonate]
         lost[dosed] = np.where(state.converged, np.clip(gone, 0.0, mixed[:, carbonate]), 0.0)
-        total = (doses[dosed] * self.is_carbonate) @ self.reacting[:, carbonate]
-        share = float(np.mean(np.clip(lost[dosed] / np.maximum(total, 1e-12), 0.0, 1.0)))
-        slope[self.is_carbonate] = share * self.reacting[self.is_carbonate, carbonate]
+        share = np.clip(lost[dosed] / np.maximum(added[:, carbonate], 1e-12), 0.0, 1.0)
+        slope[self.is_carbonate] = float(share.mean()) * self.reacting[self.is_carbonate, carbonate]
         return lost, slope
 
     # -- trim ------------------------------------------------------------------------------------

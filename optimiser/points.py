@@ -106,9 +106,10 @@ class Block:
     ``dose`` is the controller's dose that holds the row's pH, ``trim_dose`` that of the trim
     reagent (both mg/L pure fed). ``held`` tells which rows the controller holds: where the paced
     doses alone overshoot the row's pH it rests, and the pH is what they make it; ``reached`` which
-    rows are as they should be. ``liquid`` holds the totals of the separated water and ``effluent``
-    those after trim (rows, components), ``trim_state`` the trimmed waters of ``trimmed`` rows;
-    ``trim_missing`` rows that would need a trim that nothing gives.
+    rows are as they should be. ``liquid`` holds the totals of the separated water, ``effluent``
+    those after trim, ``surplus`` what soluble reagents leave unreacted (rows, components);
+    ``trim_state`` the trimmed waters of ``trimmed`` rows, ``trim_missing`` rows that would need a
+    trim that nothing gives.
     """
 
     end: int
@@ -120,6 +121,7 @@ class Block:
     lost_slope: FloatArray
     liquid: FloatArray
     effluent: FloatArray
+    surplus: FloatArray
     trim_dose: FloatArray
     trimmed: BoolArray
     trim_state: EquilibriumState | None

@@ -28,6 +28,9 @@ DEARER_EARLY, DEARER_LATE = 1.2, 1.06
 HOPELESS_RATIO = 5e-3
 SHRINKS_BY = 0.8
 HOPELESS_RADIUS = 5e-3
+MISS_FIRST = 1e4 * PENALTY
+RESTORING_STEPS = 4
+RESTORING_RADIUS = 0.02
 
 
 @dataclass(slots=True)
@@ -40,6 +43,8 @@ class Track:
     steps: int = 0
     stalls: int = 0
     missed: tuple[float, ...] = ()
+    penalty: float = PENALTY
+    patient: bool = False
 
     @property
     def point(self) -> Points:
@@ -59,7 +64,7 @@ class Track:
     @property
     def merit(self) -> float:
         """Cost with a penalty on what is missed."""
-        return self.total * (1.0 + PENALTY * max(0.0, self.violation + BACK_OFF))
+        return self.total * (1.0 + self.penalty * max(0.0, self.violation + BACK_OFF))
 
     @property
     def feasible(self) -> bool:
@@ -69,16 +74,21 @@ class Track:
 
 def polish(
     evaluator: Evaluator, starts: Points, solver: SolverPort, *, bounds: Bounds,
-    steps: int = MOST_STEPS, radius: float = FIRST_RADIUS, rival: float = np.inf,
+    steps: int = MOST_STEPS, radius: float = FIRST_RADIUS, rival: float | None = np.inf,
     near: Sequence[Place] | None = None,
 ) -> list[Track]:  # fmt: skip
     """Polish all starts side by side; returns a track for each.
 
     Candidates that stay dearer than the best feasible one, or than the plan of cost ``rival`` that
-    is known already, are rested early.
+    is known already, are rested early. With ``rival`` None the largest ratio counts before any cost
+    and nobody is rested: the end is the nearest miss, where the checks that clash are all at it.
     """
     seen = evaluator.evaluate(starts, slopes=True, near=near)
-    tracks = [Track(Place(seen, i), radius) for i in range(len(starts))]
+    penalty = MISS_FIRST if rival is None else PENALTY
+    tracks = [
+        Track(Place(seen, i), radius, penalty=penalty, patient=rival is None)
+        for i in range(len(starts))
+    ]
     for _ in range(steps):
         trials: list[Points] = []
         moving: list[Track] = []
@@ -96,12 +106,44 @@ def polish(
         tried = evaluator.evaluate(Points.join(trials), slopes=True, near=[t.place for t in moving])
         for row, track in enumerate(moving):
             _accept(track, Place(tried, row))
-        _rest_dear(tracks, rival)
+        if rival is not None:
+            _rest_dear(tracks, rival)
+    _restore(evaluator, tracks, solver, bounds)
     return tracks
 
 
+def _restore(
+    evaluator: Evaluator, tracks: Sequence[Track], solver: SolverPort, bounds: Bounds
+) -> None:
+    """Bring tracks that miss by a hair inside: small steps, aimed further in by what is missed."""
+    for _ in range(RESTORING_STEPS):
+        near = [t for t in tracks if not t.feasible and t.violation < HOPELESS_RATIO]
+        pairs = [(t, _inward(evaluator, t, solver, bounds)) for t in near]
+        moving = [(track, trial) for track, trial in pairs if trial is not None]
+        if not moving:
+            return
+        tried = evaluator.evaluate(
+            Points.join([trial for _, trial in moving]), slopes=True,
+            near=[track.place for track, _ in moving],
+        )  # fmt: skip
+        for row, (track, _) in enumerate(moving):
+            track.steps += 1
+            if tried.violation[row] < track.violation:
+                track.place = Place(tried, row)
+            else:
+                track.radius *= 0.3
+
+
+def _inward(
+    evaluator: Evaluator, track: Track, solver: SolverPort, bounds: Bounds
+) -> Points | None:
+    track.radius = max(track.radius, RESTORING_RADIUS)
+    aim = 2.0 * max(track.violation, 0.0)
+    return step(evaluator, track, solver, bounds, inward=aim)
+
+
 def _accept(track: Track, place: Place) -> None:
-    fresh = Track(place)
+    fresh = Track(place, penalty=track.penalty)
     track.steps += 1
     gain = (track.merit - fresh.merit) / max(track.merit, 1e-12)
     if np.isfinite(fresh.merit) and gain > 0.0:
@@ -114,7 +156,7 @@ def _accept(track: Track, place: Place) -> None:
         track.stalls = 0
     if track.radius < LAST_RADIUS or track.stalls >= 2:
         track.alive = False
-    if track.violation > HOPELESS_RATIO:
+    if track.violation > HOPELESS_RATIO and not track.patient:
         # a candidate whose worst miss hardly shrinks will not become feasible
         stuck = len(track.missed) >= PATIENCE and (
             track.violation > SHRINKS_BY * track.missed[-PATIENCE]
@@ -131,10 +173,17 @@ def _rest_dear(tracks: list[Track], rival: float) -> None:
             track.alive = track.total <= (DEARER_LATE if late else DEARER_EARLY) * best
 
 
-def step(evaluator: Evaluator, track: Track, solver: SolverPort, bounds: Bounds) -> Points | None:
-    """Solve one linearised step from a track's point; None where the model has no solution."""
+def step(
+    evaluator: Evaluator, track: Track, solver: SolverPort, bounds: Bounds, *, inward: float = 0.0
+) -> Points | None:
+    """Solve one linearised step from a track's point; None where the model has no solution.
+
+    ``inward`` asks the checks to hold by that much more than the usual back-off.
+    """
     seen, row = track.place.seen, track.place.point
-    model = build_step(evaluator, seen, row, track.radius, bounds)
+    model = build_step(
+        evaluator, seen, row, track.radius, bounds, inward=inward, penalty=track.penalty
+    )
     report = solver.solve(model)
     if not report.termination.has_solution:
         return None

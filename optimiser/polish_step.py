@@ -41,8 +41,9 @@ class Bounds:
 
 
 def build_step(
-    evaluator: Evaluator, seen: Evaluation, row: int, radius: float, bounds: Bounds
-) -> Model:
+    evaluator: Evaluator, seen: Evaluation, row: int, radius: float, bounds: Bounds,
+    *, inward: float = 0.0, penalty: float = PENALTY,
+) -> Model:  # fmt: skip
     """Build the mixed-integer model of one step.
 
     Notes
@@ -57,8 +58,8 @@ def build_step(
     model.add_variable("miss", high=60.0)
     total = float(seen.total[row])
     scale = total if np.isfinite(total) else 1e6
-    model.add_cost("miss", Expression({"miss": PENALTY * scale}))
-    _add_checks(model, seen, row, moves)
+    model.add_cost("miss", Expression({"miss": penalty * scale}))
+    _add_checks(model, seen, row, moves, BACK_OFF + inward)
     demand = _add_amounts(model, evaluator, seen, row, moves)
     _add_purchases(model, evaluator, seen, row, radius, demand)
     _add_disposal(model, evaluator, seen, row, moves)
@@ -100,7 +101,7 @@ def _linear(
 
 
 def _add_checks(
-    model: Model, seen: Evaluation, row: int, moves: dict[int, tuple[str, float]]
+    model: Model, seen: Evaluation, row: int, moves: dict[int, tuple[str, float]], back_off: float
 ) -> None:
     ratios, slopes = [], []
     parts = []
@@ -128,7 +129,7 @@ def _add_checks(
         terms, constant = _linear(np.clip(slope[k], -1e6, 1e6), moves)
         terms["miss"] = -1.0
         model.add_row(
-            f"check {number}", terms, Sense.AT_MOST, -BACK_OFF - float(ratio[k]) - constant
+            f"check {number}", terms, Sense.AT_MOST, -back_off - float(ratio[k]) - constant
         )
 
 

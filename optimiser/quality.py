@@ -230,7 +230,7 @@ class Judge:
         carried = share[:, None] * held
         floor = self._floor_values(solids)
         total = np.maximum(residual + carried, floor)
-        burden = self._burden(block.effluent)
+        burden = self._burden(block.effluent + block.surplus)
         value = self._values(total, burden, block)
         target = np.array([c.target for c in self.checks])
         ratio = np.log(np.maximum(value, SMALLEST_MG_PER_L) / target)

@@ -70,6 +70,7 @@ def fill_slopes(
     solids = hold(free.solids)
     activity = hold(np.swapaxes(free.ln_activity, 1, 2))
     trim, effluent, trim_activity = _trim_slopes(judge, points, rows, block, liquid, activity)
+    effluent = effluent + _surplus_slopes(judge, points, rows, block, dose)[:, :, columns]
     metal = np.einsum("mc,nck->nmk", judge.weights, liquid)
     mass = np.einsum("p,npk->nk", judge.solid_mass, solids)
     held_slope = np.einsum("pm,npk->nmk", judge.solid_metal, solids)
@@ -99,6 +100,26 @@ def burden_charge(
             one = burden_slope(judge, name, judged, judged.effluent_slope)
             slope = slope + rate * one[row]
     return slope, value
+
+
+def _surplus_slopes(
+    judge: Judge, points: Points, rows: Rows, block: Block, dose: FloatArray
+) -> FloatArray:
+    """Change of what soluble reagents leave unreacted, (rows, components, 1 + reagents)."""
+    plant = judge.plant
+    n, count = block.rows.size, len(plant.names)
+    slopes = np.zeros((n, len(plant.system.components), 1 + count))
+    if not plant.surplus.any():
+        return slopes
+    point = rows.point[block.rows]
+    paced = rows.factor[block.rows] * (points.doses[point] > 0.0)
+    slopes[:, :, 1:] = plant.surplus.T[None] * paced[:, None, :]
+    used = np.flatnonzero((points.doses > 0.0).any(axis=0))
+    columns = np.concatenate([[0], 1 + used])
+    own = plant.surplus[np.maximum(points.controller[point], 0)]
+    own = np.where((points.controller[point] >= 0)[:, None], own, 0.0)
+    slopes[:, :, columns] += own[:, :, None] * dose[:, None, :]
+    return slopes
 
 
 def _trim_slopes(

@@ -14,7 +14,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from optimiser.evaluation import Evaluation, Evaluator, Place
+from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator, Place
 from optimiser.points import Points
 from optimiser.polish import Track, polish
 from optimiser.polish_step import PENALTY, Bounds
@@ -31,7 +31,7 @@ from optimiser.solver import SolverPort
 
 FloatArray = NDArray[np.float64]
 
-STARTS_PER_RECIPE = 2
+STARTS_PER_RECIPE = 3
 POLISHED_AT_ONCE = 40
 KEPT_PARTS = 10
 SETTLE_STEP = 0.01
@@ -70,6 +70,8 @@ class Findings:
             point = seen.rows.point[part.block.rows]
             np.maximum.at(worst, point, part.value)
             ok[point[~part.block.reached | part.block.trim_missing]] = False
+        for rule in seen.rules:
+            ok &= rule.ratio <= FEASIBLE_RATIO
         if not ok.any() or worst.shape[1] == 0:
             return
         worst[~ok] = np.inf

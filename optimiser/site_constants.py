@@ -262,7 +262,8 @@ def _constant_note(own: OwnConstant, system: System) -> str:
     if not _concerns(own.reaction, own.name, system):
         missing = sorted(set(read_reaction(own.reaction)) - {own.name, "H2O", *system.components})
         return f"{what}: takes no part, the water has no {', '.join(missing)}; {source}"
-    row = (solid_table() if own.kind == SOLID else species_table()).get(own.name)
+    table = solid_table() if own.kind == SOLID else species_table(system.activity)
+    row = table.get(own.name)
     place = "added to the catalog" if row is None else f"in place of {row.log10_k:g}"
     enthalpy = (
         f", enthalpy {own.enthalpy_kj_per_mol:g} kJ/mol"

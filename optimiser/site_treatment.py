@@ -89,6 +89,13 @@ def read_treatment(entry: Entry, reagents: Mapping[str, Reagent]) -> TreatmentBl
             f"at most {treatment.most_reagents}, the number in most_reagents",
             "Raise `most_reagents` or require fewer.",
         )
+    if treatment.sulfide_least_ph < _DEFAULTS.sulfide_least_ph and not treatment.scrubber:
+        entry.at("sulfide_least_ph").problem(
+            f"{treatment.sulfide_least_ph:g} and no scrubber",
+            f"{_DEFAULTS.sulfide_least_ph:g} or more, or a named scrubber",
+            "Below that pH sulfide gives off hydrogen sulfide: name the gas scrubber of the closed "
+            "tank in `scrubber`, or raise `sulfide_least_ph`.",
+        )
     entry.finish()
     return TreatmentBlock(treatment=treatment, allowed_at=allowed_at)
 

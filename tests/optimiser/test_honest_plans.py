@@ -264,16 +264,12 @@ def test_a_tighter_gas_limit_closes_the_way_to_a_plan() -> None:
         plan(small_site(SULFIDE, {"treatment": {"h2s_limit_ppm": 1e-4}}))
 
 
-@pytest.mark.xfail(
-    strict=True, reason="a clash names only what the nearest miss breaks, not what holds it there"
-)
 def test_where_the_gas_limit_closes_the_way_the_reasons_name_it() -> None:
     with pytest.raises(NoPlan) as caught:
         plan(small_site(SULFIDE, {"treatment": {"h2s_limit_ppm": 1e-4}}))
     assert "H2S over the water" in str(caught.value)
 
 
-@pytest.mark.xfail(strict=True, reason="the scrubber is read and not asked for")
 def test_a_lower_sulfide_ph_without_a_scrubber_is_refused() -> None:
     with pytest.raises(InputFileError, match="scrubber"):
         small_site(SULFIDE, {"treatment": {"sulfide_least_ph": 7.5}})
@@ -348,9 +344,6 @@ def test_limits_hold_at_every_corner_of_set_point_and_doses() -> None:
     assert worst["Pb"] > 1.2 * dissolved_mg_per_l(nominal, "Pb+2", PB)
 
 
-@pytest.mark.xfail(
-    strict=True, reason="the carbon dioxide lost is that of the nominal dose at every corner"
-)
 def test_a_corner_of_less_carbonate_loses_no_more_carbon_dioxide_than_it_has() -> None:
     site = small_site(CARBONATE)
     doses = {"caustic_soda": 160.0, "soda_ash": 250.0}

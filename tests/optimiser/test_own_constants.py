@@ -199,9 +199,8 @@ def test_names_that_clash_are_refused(
          "solids_on[1].solid: found 'CuOO(s)', expected one of the solids of the catalog\n"
          "    Did you mean `CuO(s)`?"),
         ({"solids_on": [{"solid": "Cu(OH)2(s,fresh)", "reason": "a"}]},
-         "solids_on[1].solid: found Cu(OH)2(s,fresh), which is on already, expected a solid that is "
-         "off\n"
-         "    Delete the entry."),
+         "solids_on[1].solid: found Cu(OH)2(s,fresh), which is on already, expected a solid "
+         "that is off\n    Delete the entry."),
         ({"solids_off": [{"solid": "CuO(s)", "reason": "a"}]},
          "solids_off[1].solid: found CuO(s), which is off already, expected a solid that is on\n"),
         ({"solids_on": [AGED], "solids_off": [dict(AGED)]},

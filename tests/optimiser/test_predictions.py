@@ -206,7 +206,6 @@ def test_the_catalogs_factor_of_lime_holds_by_default() -> None:
     assert result.sludge["unreacted_kg_per_d"] == pytest.approx(3.0, rel=1e-6)
 
 
-@pytest.mark.xfail(strict=True, reason="a dose factor set for a soluble reagent has no effect")
 def test_fed_is_the_factor_times_reacting_for_soluble_reagents_too() -> None:
     plain = small_site(SULFIDE, EXACT)
     wasteful = small_site(
