@@ -57,7 +57,9 @@ def explain_no_plan(evaluator: Evaluator, findings: Findings, solver: SolverPort
     message = (
         f"no plan: none of the {len(findings.recipes_examined)} recipes examined meets every limit"
     )
-    return NoPlan(message, reasons=_reasons(evaluator, clashes, seen, point), clashes=clashes)
+    reasons = _reasons(evaluator, clashes, seen, point)
+    reasons += _broken_where_lowest(evaluator, findings, missed)
+    return NoPlan(message, reasons=reasons, clashes=clashes)
 
 
 def _nearest_miss(
@@ -121,6 +123,29 @@ def _reasons(
         reasons.append(f"at their limit there, and holding it back: {'; '.join(held)}")
     recipe = ", ".join(recipe_of(evaluator.plant, seen.points, point))
     reasons.append(f"nearest miss: {recipe} at pH {float(seen.points.ph[point]):.2f}")
+    return reasons
+
+
+def _broken_where_lowest(
+    evaluator: Evaluator, findings: Findings, missed: dict[int, float]
+) -> list[str]:
+    """For each limit that is missed but within reach: what is broken where it is lowest."""
+    checks = evaluator.judge.checks
+    reasons = []
+    for number in missed:
+        point = findings.lowest_point[number] if findings.lowest_point else None
+        if point is None or findings.lowest is None:
+            continue
+        if findings.lowest[number] > checks[number].target:
+            continue
+        seen = evaluator.evaluate(point)
+        ratios = _ratios(seen, 0)
+        names = _check_names(evaluator, seen)
+        broken = [n for n, r in zip(names, ratios, strict=True) if r > FEASIBLE_RATIO]
+        own = names[number]
+        others = list(dict.fromkeys(n for n in broken if n != own))
+        if others:
+            reasons.append(f"where {own} is lowest, broken are: {'; '.join(others)}")
     return reasons
 
 
