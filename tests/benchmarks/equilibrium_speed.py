@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from catalogs import load_system
+from catalogs.constants import COMPONENTS as CATALOG
 from catalogs.constants import solid_table
 from chemistry import EquilibriumState, System, equilibrate
 from tests.chemistry.waters import random_waters
@@ -48,7 +49,8 @@ class Speed:
 def the_system() -> System:
     """15 components and 30 solids: those that form by default, then slow ones."""
     names = list(load_system(components=COMPONENTS, activity="davies").solid_names)
-    every = load_system(solids=list(solid_table()), activity="davies").narrowed(COMPONENTS)
+    every = load_system(components=CATALOG, solids=solid_table(), activity="davies")
+    every = every.narrowed(COMPONENTS)
     names += [name for name in every.solid_names if name not in names]
     return every.narrowed(solids=names[:SOLIDS])
 

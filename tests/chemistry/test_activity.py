@@ -100,6 +100,7 @@ NAMES = ("Na+", "Ca+2", "Al+3", "Cl-", "SO4-2", "CO2(aq)")
 CHARGES = np.array([1.0, 2.0, 3.0, -1.0, -2.0, 0.0])
 PAIRS = Interactions({
     ("Na+", "Cl-"): 0.03, ("Ca+2", "Cl-"): 0.14, ("Al+3", "Cl-"): 0.33, ("SO4-2", "Na+"): -0.12,
+    ("CO2(aq)", "Na+"): 0.1,
 })  # fmt: skip
 
 
@@ -131,7 +132,7 @@ def test_water_and_solutes_obey_gibbs_duhem() -> None:
     """``sum m d ln(g m) + 55.508 d ln a_w = 0`` along any change of a mixture.
 
     The offset holds the water that a species is formed with; only coefficients count here, so the
-    neutral species is formed without.
+    species are formed without.
     """
     model = build_activity("sit", CHARGES, names=NAMES, interactions=PAIRS)
     rng = np.random.default_rng(4)

@@ -118,6 +118,25 @@ def test_derivatives_are_those_of_the_exact_solution(
         assert slopes.titrant[0, k] == pytest.approx(exact.titrant(), rel=AGREES, abs=1e-9)
 
 
+@pytest.mark.parametrize("held_name", ["free", "pH by lime"])
+def test_derivatives_in_salty_water_are_exact_too(held_name: str) -> None:
+    """Specific ion interaction: every coefficient moves with every ion, and so does the water."""
+    system = load_system(components=["H+", "Na+", "Ca+2", "Cl-", "SO4-2"], activity="sit")
+    brine = {"Na+": 0.9, "Ca+2": 0.05, "Cl-": 0.8, "SO4-2": 0.1, "H+": 0.0}
+    held = HELD[held_name]
+    state = solved(system, brine, held)
+    assert state.active.any()
+    slopes = state.sensitivity(np.eye(len(system.components)))
+    water, start = water_of(state, held)
+    _, unknowns = solve_exact(water, start)
+    for k, component in enumerate(system.components):
+        exact = Difference(water, unknowns, component)
+        assert_close(slopes.dissolved[0, :, k], exact.dissolved(system.components))
+        assert_close(slopes.solids[0, :, k], exact.solids(system.solid_names))
+        assert slopes.ph[0, k] == pytest.approx(exact.ph(), rel=AGREES, abs=1e-6)
+        assert slopes.titrant[0, k] == pytest.approx(exact.titrant(), rel=AGREES, abs=1e-9)
+
+
 def test_the_waters_have_the_solids_that_their_names_say(system: System) -> None:
     counts = [int(solved(system, w, Held()).active.sum()) for w in WATERS.values()]
     assert counts[0] == 0

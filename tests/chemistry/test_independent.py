@@ -49,7 +49,7 @@ class Case:
 
     @property
     def system(self) -> System:
-        return load_system(components=["H+", *KINDS[self.kind]])
+        return load_system(components=["H+", *KINDS[self.kind]], activity="davies")
 
     @property
     def totals(self) -> FloatArray:
@@ -112,7 +112,7 @@ HELD = {
 
 @pytest.mark.parametrize("held", HELD.values(), ids=list(HELD))
 def test_fifty_digits_agree_where_ph_or_pressure_is_held(held: Held) -> None:
-    system = load_system(components=["H+", *KINDS["plating rinse"]])
+    system = load_system(components=["H+", *KINDS["plating rinse"]], activity="davies")
     totals = {"Na+": 2e-3, "Ca+2": 1e-3, "Cu+2": 6e-4, "Zn+2": 3e-4, "Cl-": 2e-3, "SO4-2": 5e-3}
     totals["H+"] = 1.0e-2 + 2e-3 - 2e-3 - 2 * (1e-3 + 6e-4 + 3e-4)
     titrant = np.array([held.titrant.get(c, 0.0) for c in system.components])
@@ -120,6 +120,28 @@ def test_fifty_digits_agree_where_ph_or_pressure_is_held(held: Held) -> None:
     exact, _ = solve_exact(*water_of(state, held))
     assert worst_difference(state, exact) < DISSOLVED_AGREES
     assert float(exact.titrant) == pytest.approx(float(state.titrant_mol_per_l[0]), rel=1e-9)
+
+
+SALTY = {
+    "sodium chloride brine with lime": {
+        "Na+": 1.4, "Cl-": 1.5, "Ca+2": 0.1, "SO4-2": 0.02, "H+": -0.06,
+    },
+    "sulfate brine at its gypsum": {"Na+": 0.8, "Ca+2": 0.05, "SO4-2": 0.45, "H+": 0.0},
+    "acid chloride brine with lead": {"Na+": 0.3, "Pb+2": 0.05, "Cl-": 0.7, "H+": 0.3},
+    "copper ammonia brine": {"NH4+": 0.8, "Cu+2": 0.01, "Cl-": 0.5, "H+": -0.32},
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("totals", SALTY.values(), ids=list(SALTY))
+def test_fifty_digits_agree_in_salty_water(totals: dict[str, float]) -> None:
+    """Specific ion interaction, water activity included, written twice."""
+    system = load_system(components=list(dict.fromkeys(["H+", *totals])), activity="sit")
+    state = equilibrate(system, totals)
+    assert state.ionic_strength[0] > 0.5
+    exact, _ = solve_exact(*water_of(state))
+    assert worst_difference(state, exact) < DISSOLVED_AGREES
+    assert abs(float(exact.ph) - state.ph[0]) < 1e-9
+    assert float(exact.ionic_strength) == pytest.approx(state.ionic_strength[0], rel=1e-9)
 
 
 def gibbs_dissolved(state: EquilibriumState) -> FloatArray:
