@@ -242,7 +242,7 @@ class ActivityModel:
         x = SIT_BA * np.sqrt(np.maximum(y[:, 0], 0.0))
         screening = 1.0 + x - 2.0 * np.log1p(x) - 1.0 / (1.0 + x)
         groups = y[:, 2:]
-        pairs = 0.5 * ((groups @ self._among_groups) * groups).sum(axis=1)
+        pairs = 0.5 * ((groups @ self.among_groups) * groups).sum(axis=1)
         total = y[:, 1] - 2.0 * self.a_ln / SIT_BA**3 * screening + pairs
         return np.asarray(-total / WATER_MOL_PER_KG, dtype=float)
 
@@ -256,11 +256,12 @@ class ActivityModel:
         rise = x / (1.0 + x) ** 2 * SIT_BA**2 / 2.0
         result[:, 0] = 2.0 * self.a_ln / SIT_BA**3 * rise
         result[:, 1] = -1.0
-        result[:, 2:] = -(y[:, 2:] @ self._among_groups)
+        result[:, 2:] = -(y[:, 2:] @ self.among_groups)
         return result / WATER_MOL_PER_KG
 
     @cached_property
-    def _among_groups(self) -> FloatArray:
+    def among_groups(self) -> FloatArray:
+        """Coefficients of the groups with each other, natural log, (groups, groups)."""
         members = np.argmax(self.groups, axis=0)
         return np.ascontiguousarray(self.interactions[members])
 

@@ -13,7 +13,6 @@ from chemistry.coupling import Coupling
 from chemistry.system import System
 
 LN_MOLALITY_CAP = 30.0
-KEPT_COUPLINGS = 8  # sets of surroundings whose products a kernel keeps
 
 
 class Kernel:
@@ -42,7 +41,7 @@ class Kernel:
         self.largest = np.maximum(self.absolute.max(axis=0), 1.0)
         self.proton = system.index.get("H+", -1)
         self.carbonate = system.index.get("CO3-2", -1)
-        self._couplings: dict[bytes, Coupling] = {}
+        self.coupling = Coupling(self.model, self.formation)
 
     # -- shared evaluations -------------------------------------------------------------------
 
@@ -56,15 +55,6 @@ class Kernel:
     def surroundings(self, m: FloatArray) -> FloatArray:
         """What the activity model sees of the species, (n, width), ionic strength first."""
         return m @ self.functionals
-
-    def coupling(self, columns: IntArray) -> Coupling:
-        """Products for these surroundings, the last few kept."""
-        key = columns.tobytes()
-        if key not in self._couplings:
-            if len(self._couplings) >= KEPT_COUPLINGS:
-                self._couplings.pop(next(iter(self._couplings)))
-            self._couplings[key] = Coupling(self.model, self.formation, columns)
-        return self._couplings[key]
 
     def saturation_ln(self, ln_activity: FloatArray, surroundings: FloatArray) -> FloatArray:
         """Natural-log saturation index of every candidate solid, (n, solids)."""

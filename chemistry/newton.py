@@ -106,8 +106,9 @@ def linearise(
     model, y = kernel.model, part.surroundings
     m = kernel.molalities(part.ln_activity, y)
     sums, scale = kernel.amounts(m, part.solids)
-    off = kernel.surroundings(m) - y
-    coupled = kernel.coupling(columns).at(m, y)
+    seen = kernel.surroundings(m)
+    off = seen - y
+    coupled = kernel.coupling.at(m, y, seen, columns)
     known = np.concatenate([coupled.by_activity, off[:, columns, None]], axis=2)
     alone = columns.size == 1
     followed = known / coupled.held_back if alone else solve_batch(coupled.held_back, known)

@@ -1,4 +1,4 @@
-"""The table of interaction coefficients: its rows, their sources, and what it leaves to the rule."""
+"""The table of interaction coefficients: rows, sources, and what it leaves to the rule."""
 
 from __future__ import annotations
 
