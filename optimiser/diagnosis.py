@@ -138,12 +138,9 @@ def _broken_where_lowest(
             continue
         if findings.lowest[number] > checks[number].target:
             continue
-        seen = evaluator.evaluate(point)
-        ratios = _ratios(seen, 0)
-        names = _check_names(evaluator, seen)
-        broken = [n for n, r in zip(names, ratios, strict=True) if r > FEASIBLE_RATIO]
-        own = names[number]
-        others = list(dict.fromkeys(n for n in broken if n != own))
+        ratios = _ratios(evaluator, evaluator.evaluate(point), 0)
+        own = f"{checks[number].label}, {checks[number].averaging}"
+        others = [n for n, r in ratios.items() if r > FEASIBLE_RATIO and n != own]
         if others:
             reasons.append(f"where {own} is lowest, broken are: {'; '.join(others)}")
     return reasons
@@ -154,30 +151,30 @@ def _at_their_limit(evaluator: Evaluator, seen: Evaluation, point: int) -> list[
 
     They either are at their limit, or a small move that lessens the worst miss breaks them.
     """
-    names = _check_names(evaluator, seen)
-    here = _ratios(seen, point)
-    stand = (here > -AT_LIMIT) & (here <= FEASIBLE_RATIO)
-    worst = int(np.argmax(here))
+    here = _ratios(evaluator, seen, point)
+    stand = [name for name, ratio in here.items() if -AT_LIMIT < ratio <= FEASIBLE_RATIO]
+    worst = max(here, key=lambda name: here[name])
     for trial in _small_moves(evaluator, seen, point):
-        there = _ratios(trial, 0)
+        there = _ratios(evaluator, trial, 0)
         if there[worst] < here[worst]:
-            stand |= (there > FEASIBLE_RATIO) & (here <= FEASIBLE_RATIO)
-    return list(dict.fromkeys(names[i] for i in np.flatnonzero(stand)))
+            stand += [
+                name
+                for name, ratio in there.items()
+                if ratio > FEASIBLE_RATIO and here.get(name, 0.0) <= FEASIBLE_RATIO
+            ]
+    return list(dict.fromkeys(stand))
 
 
-def _check_names(evaluator: Evaluator, seen: Evaluation) -> list[str]:
-    checks = [f"{c.label}, {c.averaging}" for c in evaluator.judge.checks]
-    return checks + [rule.label for rule in seen.rules]
-
-
-def _ratios(seen: Evaluation, point: int) -> FloatArray:
-    """Worst ratio of every check, then of every rule, at one point."""
-    worst = np.full(seen.judged[0].ratio.shape[1], -np.inf)
+def _ratios(evaluator: Evaluator, seen: Evaluation, point: int) -> dict[str, float]:
+    """Worst ratio of every check and of every rule that applies, at one point."""
+    checks = evaluator.judge.checks
+    worst = np.full(len(checks), -np.inf)
     for part in seen.judged:
         mine = (seen.rows.point[part.block.rows] == point) & part.block.reached
         if mine.any():
             worst = np.maximum(worst, part.ratio[mine].max(axis=0))
-    return np.concatenate([worst, [float(rule.ratio[point]) for rule in seen.rules]])
+    found = {f"{c.label}, {c.averaging}": float(r) for c, r in zip(checks, worst, strict=True)}
+    return {**found, **{rule.label: float(rule.ratio[point]) for rule in seen.rules}}
 
 
 def _small_moves(evaluator: Evaluator, seen: Evaluation, point: int) -> list[Evaluation]:

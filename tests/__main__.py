@@ -10,6 +10,7 @@ import sys
 from pathlib import Path
 
 ROOT = Path(__file__).resolve().parent.parent
+WORKERS = "2"  # processes that share the tests: the suite is planned for two cores
 CHECKS = (
     ("ruff", "format", "--check", "."),
     ("ruff", "check", "."),
@@ -19,7 +20,7 @@ CHECKS = (
 
 def main(arguments: list[str]) -> int:
     """Run the checks in order, all of them, and return the first exit code that is not zero."""
-    commands = [*CHECKS, ("pytest", *arguments)]
+    commands = [*CHECKS, ("pytest", "-n", WORKERS, *arguments)]
     codes = []
     for command in commands:
         sys.stderr.write(f"== {' '.join(command)}\n")
