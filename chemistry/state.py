@@ -17,12 +17,12 @@ from numpy.typing import NDArray
 from chemistry.batch import ABSENT_LN, Batch, BoolArray, FloatArray, new_batch
 from chemistry.equilibrium import solve, solve_warm
 from chemistry.errors import EquilibriumError, WaterError
+from chemistry.failures import failure_text
 from chemistry.gas import CO2_SPECIES, H2S_SPECIES, LOG10_HENRY_CO2, LOG10_HENRY_H2S, ln_henry
 from chemistry.kernel import Kernel
 from chemistry.request import (
     LARGEST_TOTAL_MOL_PER_L,
     Totals,
-    co2_formation_ln,
     read_request,
     read_totals,
 )
@@ -283,7 +283,7 @@ def equilibrate(
         solve_warm(kernel, batch)
     state = _as_state(system, kernel, batch)
     if on_failure == "raise" and not state.converged.all():
-        raise EquilibriumError(_failure_text(state))
+        raise EquilibriumError(failure_text(state))
     return state
 
 
@@ -365,38 +365,3 @@ def _as_state(system: System, kernel: Kernel, batch: Batch) -> EquilibriumState:
         & (off <= CERTIFIED_SURROUNDINGS * np.maximum(batch.surroundings[:, 0], 1e-9))
     )
     return state
-
-
-def _failure_text(state: EquilibriumState) -> str:
-    rows = np.flatnonzero(~state.converged)
-    proof = state.certificate_arrays
-    lines = [
-        f"state {i}: mass balance {proof['mass_balance'][i]:.1e}, supersaturation "
-        f"{proof['supersaturation'][i]:.1e}, presence {proof['presence'][i]:.1e}; "
-        f"totals {_water(state, i)!r}{_held_text(state, i)}"
-        for i in rows[:3]
-    ]
-    count = f"{rows.size} of {state.converged.size} states missed their certificate"
-    return "\n".join([count, *lines])
-
-
-def _water(state: EquilibriumState, i: int) -> dict[str, float]:
-    """Totals of one state as they were given, without the zeros."""
-    values = zip(state.system.components, state.batch.totals[i], strict=True)
-    return {name: float(value) for name, value in values if value != 0.0}
-
-
-def _held_text(state: EquilibriumState, i: int) -> str:
-    """What is held in one state, and that no water may be able to hold it."""
-    batch, text = state.batch, ""
-    if not np.isnan(batch.co2_ln[i]):
-        solubility = ln_henry(CO2_SPECIES, state.system.temperature_degc)
-        ln_pressure = batch.co2_ln[i] - solubility + co2_formation_ln(state.system)
-        text += f", pCO2 {np.exp(ln_pressure):.17g} atm held"
-    if not np.isnan(batch.ph_ln[i]):
-        vector = zip(state.system.components, batch.titrant[i], strict=True)
-        titrant = {name: float(value) for name, value in vector if value != 0.0}
-        text += f", pH {-batch.ph_ln[i] / LN10:.17g} held with {titrant!r}"
-    if text:
-        text += ": perhaps no dose reaches it"
-    return text
