@@ -253,6 +253,17 @@ def _curves(options: argparse.Namespace) -> int:
     return DONE
 
 
+def _floors(options: argparse.Namespace) -> int:
+    from optimiser.floors import explain_floors
+    from optimiser.render_floors import floors_text
+
+    floors = explain_floors(_load(options))
+    if options.csv is not None:
+        floors.to_frame().to_csv(options.csv, index=False, lineterminator="\n")
+    _print(floors.to_dict(), options.json, floors_text)
+    return DONE
+
+
 def _print(
     data: Mapping[str, Any], as_json: bool, text: Callable[[Mapping[str, Any], Ink], str]
 ) -> None:
@@ -281,6 +292,7 @@ _COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
     "plan": _plan,
     "assess": _assess,
     "curves": _curves,
+    "floors": _floors,
     "check": _check,
     "new": _new,
 }

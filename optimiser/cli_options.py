@@ -90,6 +90,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_plan(commands)
     _add_assess(commands)
     _add_curves(commands)
+    _add_floors(commands)
     _add_command(commands, "check", "read a site and report every problem found", "check site.yaml")
     new = _add_command(
         commands, "new", "write a commented starter site with its price book", "new my-plant",
@@ -177,5 +178,16 @@ def _add_curves(commands: _Commands) -> None:
     )  # fmt: skip
     parser.add_argument(
         "--csv", metavar="FILE", type=Path, help="write every state to FILE as well"
+    )
+    _add_json(parser)
+
+
+def _add_floors(commands: _Commands) -> None:
+    parser = _add_command(
+        commands, "floors", "tell how low each metal comes with each ligand and what stops it",
+        "floors site.yaml --csv floors.csv",
+    )  # fmt: skip
+    parser.add_argument(
+        "--csv", metavar="FILE", type=Path, help="write every floor to FILE as well"
     )
     _add_json(parser)
