@@ -51,6 +51,18 @@ def _metal(analyte: str, name: str, component: str, charge: int, note: str = "")
     )  # fmt: skip
 
 
+def _ligand(
+    analyte: str, name: str, component: str, charge: int, *, acid_protons: int = 0
+) -> Analyte:
+    """A chelating ligand; with ``acid_protons`` its mg/L are those of the acid."""
+    acid = acid_protons * molar_mass_g_per_mol("H")
+    return Analyte(
+        analyte=analyte, name=name, component=component, charge=charge,
+        molar_mass_g_per_mol=molar_mass_g_per_mol(component) + acid,
+        note=f"mg/L of {name}; holds metals in solution",
+    )  # fmt: skip
+
+
 def _ion(
     analyte: str, name: str, component: str, charge: int, formula: str = "", protons: int = 0
 ) -> Analyte:
@@ -99,10 +111,20 @@ _TABLE: tuple[Analyte, ...] = (
     _ion("F", "fluoride", "F-", -1),
     _ion("PO4", "phosphate", "PO4-3", -3),
     _ion("acetate", "acetate", "CH3COO-", -1),
+    # EDTA and NTA are names of acids, and what laboratories state them as; the others are anions.
+    _ligand("EDTA", "EDTA (as the acid, H4EDTA)", "(EDTA)-4", -4, acid_protons=4),
+    _ligand("NTA", "NTA (as the acid, H3NTA)", "(NTA)-3", -3, acid_protons=3),
+    _ligand("citrate", "citrate (as the anion)", "(Cit)-3", -3),
+    _ligand("tartrate", "tartrate (as the anion)", "(Tart)-2", -2),
+    _ligand("oxalate", "oxalate (as the anion)", "(Ox)-2", -2),
+    _ligand("gluconate", "gluconate (as the anion)", "(Gluc)-", -1),
 )  # fmt: skip
 
 ANALYTES: Mapping[str, Analyte] = {a.analyte: a for a in _TABLE}
 """Every analyte by its id."""
+
+CHELATES: tuple[str, ...] = ("EDTA", "NTA", "citrate", "tartrate", "oxalate", "gluconate")
+"""Ids of the chelating ligands."""
 
 METALS: tuple[str, ...] = tuple(a.analyte for a in _TABLE if a.is_metal)
 """Ids of the metals, whose total and dissolved amounts may differ."""

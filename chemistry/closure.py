@@ -33,7 +33,10 @@ FloatArray = NDArray[np.float64]
 # Proton count of each weak acid at the carbon dioxide end point, where alkalinity is zero:
 # the definition of Dickson 1981, Deep-Sea Research 28A, 609 (acids weaker than pK 4.5 count as
 # acids at that point), from memory.
-ALKALINITY_LEVEL = {"CO3-2": 2.0, "HS-": 1.0, "PO4-3": 2.0, "CH3COO-": 1.0}
+ALKALINITY_LEVEL = {
+    "CO3-2": 2.0, "HS-": 1.0, "PO4-3": 2.0, "CH3COO-": 1.0, "(EDTA)-4": 2.0, "(NTA)-3": 1.0,
+    "(Cit)-3": 2.0,
+}  # fmt: skip
 
 MOST_MOL_PER_L = 5.0  # no closing amount and no carbonate beyond this is looked for
 

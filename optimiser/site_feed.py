@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from catalogs.entries import NON_NEGATIVE, PH, POSITIVE, Entry, Range, to_day, to_number
 from catalogs.positions import Items, Node, Table, describe
 from catalogs.problems import Spot, did_you_mean, echo, listed
-from chemistry.analysis import ACIDITY_END_PH
+from chemistry.analysis import ACIDITY_END_PH, CHELATES
 from chemistry.errors import WaterError
 from chemistry.feed import ANALYTES, METALS, Measurement, WaterAnalysis
 from optimiser.quantities import Concentration, read_alkalinity, read_concentration
@@ -30,7 +30,11 @@ PRETREATMENT_MG_PER_L: Mapping[str, tuple[float, str]] = {
 }
 """Dissolved amounts that must be pretreated, and how (hydroxide and sulfide leave both alone)."""
 
-CLOSING_IONS = tuple(a.analyte for a in ANALYTES.values() if a.is_modelled and not a.is_metal)
+CLOSING_IONS = tuple(
+    a.analyte
+    for a in ANALYTES.values()
+    if a.is_modelled and not a.is_metal and a.analyte not in CHELATES
+)
 _TEMPERATURE_DEGC = Range(low=0.0, high=60.0)
 _DAYS_PER_YEAR = Range(above=0.0, high=366.0)
 
