@@ -13,8 +13,10 @@ from numpy.typing import NDArray
 
 from catalogs.reagents import CAUTIONS_DEFER_TO
 from chemistry.burden import BURDENS, water_burden
-from chemistry.state import H2S_SPECIES, EquilibriumState
+from chemistry.state import CO2_SPECIES, H2S_SPECIES, EquilibriumState
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator
+from optimiser.gas_figures import gas_figures
+from optimiser.held_up import HeldUp, held_up_by
 from optimiser.points import END_TEXT
 from optimiser.quality import LOAD
 from optimiser.quality_slopes import RULE
@@ -24,6 +26,7 @@ Data = dict[str, Any]
 
 FEED_HOURS_PER_DAY = 24.0
 SMALLEST_SHOWN_KG_PER_D = 1e-6
+LEAST_SHARE_OF_RESIDUAL = 0.25  # of dissolved in total metal, for a word on what holds it up
 
 
 class Describer:
@@ -137,6 +140,7 @@ class Describer:
             carried = part.carried[k, metals].sum() if metals else 0.0
             floor = part.floor[k, metals].sum() if metals else 0.0
             predicted = value * scale * check.variability
+            held = self._held_up(part, k, metals)
             rows.append(
                 {
                     "parameter": check.label, "averaging": check.averaging, "unit": check.unit,
@@ -147,9 +151,34 @@ class Describer:
                     "margin_percent": 100.0 * (1.0 - predicted / check.limit),
                     "meets": bool(part.ratio[k, number] <= FEASIBLE_RATIO),
                     "worst_state": self._state_text(part.block.end, int(part.block.rows[k])),
+                    "held_up_by": held.to_dict() if held else None,
                 }
             )  # fmt: skip
         return rows
+
+    def _held_up(self, part: Any, k: int, metals: list[int]) -> HeldUp | None:
+        """What holds the metals of a check in solution in one state of the tank."""
+        if not metals:
+            return None
+        return held_up_by(part.block.state, k, self.evaluator.judge.weights[metals].sum(axis=0))
+
+    def _complexed(self) -> list[str]:
+        """Say where complexing matter carries more than half of a residual that counts."""
+        texts = []
+        for number, check in enumerate(self.evaluator.judge.checks):
+            part, k = self._worst(number)
+            held = self._held_up(part, k, list(check.metals))
+            if held is None or not held.is_complexed:
+                continue
+            metals = list(check.metals)
+            residual, carried = part.residual[k, metals].sum(), part.carried[k, metals].sum()
+            if residual >= LEAST_SHARE_OF_RESIDUAL * (residual + carried):
+                texts.append(
+                    f"{held.complexing} holds {check.label} up: "
+                    f"{held.complexing_share_percent:.0f} % of what stays dissolved in the worst "
+                    f"state is bound to it ({held.species} first)"
+                )
+        return list(dict.fromkeys(texts))
 
     def _worst(self, check: int) -> tuple[Any, int]:
         best: tuple[float, Any, int] | None = None
@@ -262,7 +291,12 @@ class Describer:
             "ionic_strength_mol_per_l": float(state.ionic_strength[0]),
             "tds_mg_per_l": float(water_burden(liquid, self.plant.system)["TDS"]),
             "h2s_ppm": 1e6 * float(state.partial_pressure_atm(H2S_SPECIES)[0]),
+            "co2_ppm": 1e6 * float(state.partial_pressure_atm(CO2_SPECIES)[0]),
         }  # fmt: skip
+
+    def gas(self) -> Data:
+        """Gas over the water, with thresholds in air."""
+        return gas_figures(self.plant, self.seen, self.point, self._state_text)
 
     def burden(self) -> Data:
         """Burden of feed and effluent, the dearest end's."""
@@ -327,6 +361,7 @@ class Describer:
                 f"ionic strength reaches {strength:.2f} mol/L: the Davies equation holds to about "
                 "0.5, so residuals are less certain here"
             )
+        texts += self._complexed()
         return [*dict.fromkeys(texts), CAUTIONS_DEFER_TO] if texts else []
 
     def assumptions(self) -> list[str]:
@@ -402,7 +437,8 @@ def describe(
         "compliant": bool(seen.feasible[point]) and one.ph()["meets"],
         "set_points": one.set_points(), "doses": one.dose_map(), "feeding": one.feeding(),
         "purchases": one.purchases(), "cost": cost, "limits": one.limits(), "ph": one.ph(),
-        "rules_missed": one.missed_rules(), "water": one.water(), "burden": one.burden(),
+        "rules_missed": one.missed_rules(), "water": one.water(), "gas": one.gas(),
+        "burden": one.burden(),
         "sludge": one.sludge(), "cautions": one.cautions(),
         "assumptions": [*one.assumptions(), *extra],
         "proof": {**proof, "certificate": one.certificate()},

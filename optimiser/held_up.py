@@ -70,7 +70,7 @@ class HeldUp:
         """Return plain data."""
         return {
             "species": self.species, "share_percent": self.share_percent, "kind": self.kind,
-            "ligand": self.ligand, "complexing": self.complexing,
+            "ligand": self.ligand, "text": self.text, "complexing": self.complexing,
             "complexing_share_percent": self.complexing_share_percent,
         }  # fmt: skip
 

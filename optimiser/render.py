@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any
 
+from optimiser.render_gas import gas_lines
 from optimiser.tables import INDENT, PLAIN, Ink, bullets, given, money, number, paragraph, table
 
 Data = Mapping[str, Any]
@@ -53,6 +54,7 @@ def _document(title: str, data: Data, ink: Ink) -> str:
         (f"Cost, {data['site']['currency']} a year", _cost(data)),
         ("Limits", _limits(data, ink)),
         ("pH through the train", _ph(data, ink)),
+        ("Gas over the water", gas_lines(data)),
         ("Burden: what the doses add to the water, mg/L", _burden(data)),
         ("Sludge", _sludge(data)),
         ("Cautions", bullets(data["cautions"])),
@@ -193,9 +195,23 @@ def _limits(data: Data, ink: Ink) -> list[str]:
         "Floor: the least value promised without a jar test of this water. Factor: from the value "
         "of the analysis to that of the period. Target: the limit less its design margin."
     )
+    lines += _held_up(data["limits"])
     lines += _grouped("Worst case", data["limits"], "worst_state", plain=True)
     lines += _grouped("Source of the limit", data["limits"], "source")
     return lines
+
+
+def _held_up(limits: Sequence[Data]) -> list[str]:
+    """What holds up the metals of which more stays dissolved than slips past the separator."""
+    held = {
+        str(limit["parameter"]): limit["held_up_by"]["text"]
+        for limit in limits
+        if limit.get("held_up_by") and limit["residual"] > limit["carry_over"]
+    }
+    if not held:
+        return []
+    text = "; ".join(f"{name} as {species}" for name, species in held.items())
+    return paragraph(f"Held in solution: {text}.", indent=INDENT * 2, first=INDENT)
 
 
 def _verdict_colour(line: str, ink: Ink) -> str:
