@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from chemistry.analysis import CHELATES
 from chemistry.state import EquilibriumState
 from chemistry.system import System
 
@@ -25,7 +26,6 @@ LIGANDS: Mapping[str, str] = {
 }  # fmt: skip
 """Components that bind metals in solution, as people call them."""
 
-CHELATES = ("EDTA", "NTA", "citrate", "tartrate", "oxalate", "gluconate")
 COMPLEXING = (*CHELATES, "ammonia", "acetate")
 """Complexing matter that a feed may carry and that no alkali takes out."""
 
