@@ -48,6 +48,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return BAD_INPUT
     if arguments is None and not options.debug:
         sys.excepthook = _report_fault
+    # numpy is not loaded yet: matrices here are far too small for threads to help, and those that
+    # wait for work burn a second core
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     try:
         code = _COMMANDS[options.command](options)
         sys.stdout.flush()
