@@ -10,6 +10,7 @@ import numpy as np
 
 from chemistry.batch import Batch, FloatArray, IntArray
 from chemistry.coupling import Coupling
+from chemistry.gas import CO2_SPECIES
 from chemistry.system import System
 
 LN_MOLALITY_CAP = 30.0
@@ -42,6 +43,10 @@ class Kernel:
         self.proton = system.index.get("H+", -1)
         self.carbonate = system.index.get("CO3-2", -1)
         self.coupling = Coupling(self.model, self.formation)
+        known = CO2_SPECIES in system.species_names
+        self.co2_water = (
+            float(system.water[system.species_names.index(CO2_SPECIES)]) if known else 0.0
+        )
 
     # -- shared evaluations -------------------------------------------------------------------
 
@@ -81,6 +86,11 @@ class Kernel:
         return total, scale
 
     # -- held pH and pCO2 ----------------------------------------------------------------------
+
+    def co2_product_ln(self, ln_activity: FloatArray, surroundings: FloatArray) -> FloatArray:
+        """What a held CO2 pressure holds: ln a(CO3) + 2 ln a(H), less ln of the water, (n,)."""
+        product = ln_activity[:, self.carbonate] + 2.0 * ln_activity[:, self.proton]
+        return np.asarray(product + self.co2_water * self.model.ln_water(surroundings), dtype=float)
 
     def doses(self, batch: Batch, gap: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Titrant and carbon dioxide that fill a gap in the balances, each (n,). [mol/L]
@@ -161,7 +171,7 @@ class Kernel:
             matrix[co2, c] = 0.0
             matrix[co2, c, c] = 1.0
             matrix[co2, c, h] = 2.0
-            here = batch.ln_activity[co2, c] + 2.0 * batch.ln_activity[co2, h]
+            here = self.co2_product_ln(batch.ln_activity[co2], batch.surroundings[co2])
             rhs[co2, c] = batch.co2_ln[co2] - here
 
     def independent_columns(self, batch: Batch) -> FloatArray:
@@ -188,7 +198,7 @@ class Kernel:
             miss[ph] = np.abs(part.ph_ln[ph] - part.ln_activity[ph, self.proton])
         co2 = ~np.isnan(part.co2_ln)
         if co2.any():
-            value = part.ln_activity[co2, self.carbonate] + 2.0 * part.ln_activity[co2, self.proton]
+            value = self.co2_product_ln(part.ln_activity[co2], part.surroundings[co2])
             miss[co2] = np.maximum(miss[co2], np.abs(part.co2_ln[co2] - value))
         return miss
 

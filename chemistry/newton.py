@@ -193,6 +193,7 @@ def assemble(kernel: Kernel, part: Batch, lin: Linearised, used: BoolArray) -> A
     rhs[:, :count] = lin.rhs
     rhs[:, count:] = -lin.saturation
     kernel.hold(part, matrix, rhs)
+    _hold_through_water(kernel, part, lin, matrix, rhs)
     gone = ~part.present
     matrix[:, :count][gone] = 0.0
     rhs[:, :count][gone] = 0.0
@@ -200,3 +201,17 @@ def assemble(kernel: Kernel, part: Batch, lin: Linearised, used: BoolArray) -> A
     diagonal[:, :count][gone] = 1.0
     diagonal[:, count:][~used] = 1.0
     return Assembled(matrix, rhs)
+
+
+def _hold_through_water(
+    kernel: Kernel, part: Batch, lin: Linearised, matrix: FloatArray, rhs: FloatArray
+) -> None:
+    """Let a held CO2 pressure see that the activity of water moves too, in place."""
+    opened = np.flatnonzero(~np.isnan(part.co2_ln))
+    if not opened.size or kernel.model.name != "sit":
+        return
+    c, count = kernel.carbonate, part.totals.shape[1]
+    water = kernel.model.ln_water_slope(part.surroundings[opened])[:, lin.columns]
+    follow, gap = lin.follow[opened], lin.follow_gap[opened]
+    matrix[opened, c, :count] += kernel.co2_water * np.einsum("ny,nyc->nc", water, follow)
+    rhs[opened, c] -= kernel.co2_water * np.einsum("ny,ny->n", water, gap)

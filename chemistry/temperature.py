@@ -104,10 +104,11 @@ def temperature_sensitivity_of(state: EquilibriumState) -> Sensitivity:
     moved = q + np.einsum("nsy,ny->ns", slope, followed)  # d ln m at fixed log activities
     n, count = batch.totals.shape
     rhs = np.zeros((n, count + used.shape[1]))
-    rhs[:, :count] = _balances(kernel, batch, -(lin.m * moved) @ kernel.formation, drift)
     water = by_a_ln[:, -1] + np.einsum(
         "ny,ny->n", kernel.model.ln_water_slope(batch.surroundings)[:, columns], followed
     )
+    held = drift.co2_ln - kernel.co2_water * water
+    rhs[:, :count] = _balances(kernel, batch, -(lin.m * moved) @ kernel.formation, held)
     risen = drift.solid_ln_k + water[:, None] * kernel.solid_water
     rhs[:, count:] = np.where(used, -np.take_along_axis(risen, slots, axis=1), 0.0)
     answer = solve_equilibrated(assemble(kernel, batch, lin, used).matrix, rhs)
@@ -140,13 +141,14 @@ def _followed(kernel: Kernel, batch: Batch, lin: Linearised, q: FloatArray) -> F
     return np.asarray(np.linalg.solve(held_back, pushed[:, :, None])[:, :, 0], dtype=float)
 
 
-def _balances(kernel: Kernel, batch: Batch, rhs: FloatArray, drift: Drift) -> FloatArray:
+def _balances(kernel: Kernel, batch: Batch, rhs: FloatArray, co2_ln: FloatArray) -> FloatArray:
     """Right-hand side of the balances with the rows that something held replaces."""
     kernel.hold(batch, np.zeros((*rhs.shape, rhs.shape[1])), rhs)
     held = np.flatnonzero(~np.isnan(batch.ph_ln))
     rhs[held, batch.pivot[held]] = 0.0
     if kernel.carbonate >= 0:
-        rhs[~np.isnan(batch.co2_ln), kernel.carbonate] = drift.co2_ln
+        opened = ~np.isnan(batch.co2_ln)
+        rhs[opened, kernel.carbonate] = co2_ln[opened]
     rhs[~batch.present] = 0.0
     return rhs
 

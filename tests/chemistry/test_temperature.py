@@ -41,6 +41,7 @@ CASES = [
     *((RINSE, held) for held in HELD),
     *((LIMED, held) for held in HELD),
     (SALTY, "free"),
+    (SALTY, "pCO2"),
     (GYPSUM, "free"),
 ]
 
