@@ -366,7 +366,8 @@ def _versions(data: Data) -> list[str]:
 def _names(data: Data) -> dict[str, str]:
     """Dose keys and reagent ids as people call them."""
     names = {str(feed["key"]): _feed_name(feed) for feed in data["feeding"]}
-    return {**{key: _plain_key(key) for key in data["doses"]}, **names}
+    reagents = {str(feed["reagent"]): _plain_key(str(feed["reagent"])) for feed in data["feeding"]}
+    return {**reagents, **{key: _plain_key(key) for key in data["doses"]}, **names}
 
 
 def _feed_name(feed: Data) -> str:
