@@ -284,9 +284,9 @@ def _rising_root(
     high = max(guess, lowest + 1e-9)
     step = max(abs(guess), 1e-6)
     while function(high) < 0.0:
-        high += step
-        step *= 2.0
-        if high > MOST_MOL_PER_L:
+        if high >= MOST_MOL_PER_L:
             return None
+        high = min(high + step, MOST_MOL_PER_L)
+        step *= 2.0
     root, _ = brentq(function, lowest, high, xtol=1e-18, rtol=1e-15, full_output=True)
     return float(root)

@@ -23,8 +23,6 @@ FloatArray = NDArray[np.float64]
 # closing ion (common practice).
 WORTH_A_NOTE_PERCENT = 5.0
 LEANS_ON_CLOSING_PERCENT = 10.0
-# Ionic strength above which the Davies equation is a guide only (Davies 1962).
-DAVIES_LIMIT_MOL_PER_L = 0.5
 O2_MG_PER_MG_FERROUS = 31.998 / 4.0 / 55.845
 USUAL_ANIONS = ("Cl-", "SO4-2")
 USUAL_CATIONS = ("Na+", "K+", "Ca+2")
@@ -132,10 +130,11 @@ def _other_notes(water: FeedWater) -> list[str]:
             f"air turns {iron:.3g} mg/L of Fe(II) into Fe(III): {iron / 55.845:.3g} meq/L of acid "
             f"and {iron * O2_MG_PER_MG_FERROUS:.2g} mg/L of oxygen are used"
         )
-    if water.ionic_strength > DAVIES_LIMIT_MOL_PER_L:
+    trusted = water.system.activity_model.trusted_to_mol_per_l
+    if water.ionic_strength > trusted:
         notes.append(
             f"ionic strength {water.ionic_strength:.2f} mol/L is above "
-            f"{DAVIES_LIMIT_MOL_PER_L} mol/L: activity coefficients are a guide only"
+            f"{trusted:g} mol/L: activity coefficients are a guide only"
         )
     off = water.analysis.temperature_degc - water.system.temperature_degc
     if abs(off) > 0.5:

@@ -20,6 +20,7 @@ from optimiser.held_up import HeldUp, held_up_by
 from optimiser.points import END_TEXT
 from optimiser.quality import LOAD
 from optimiser.quality_slopes import RULE
+from optimiser.site_salt import MODEL_TEXT
 
 FloatArray = NDArray[np.float64]
 Data = dict[str, Any]
@@ -356,10 +357,11 @@ class Describer:
                 f"{self.plant.reagents[i].name}: {c}" for c in self.plant.reagents[i].cautions
             ]
         strength = max(float(b.state.ionic_strength.max()) for b in self.seen.blocks)
-        if strength > 0.5:
+        model = self.plant.system.activity_model
+        if strength > model.trusted_to_mol_per_l:
             texts.append(
-                f"ionic strength reaches {strength:.2f} mol/L: the Davies equation holds to about "
-                "0.5, so residuals are less certain here"
+                f"ionic strength reaches {strength:.2f} mol/L: {MODEL_TEXT[model.name]} holds to "
+                f"about {model.trusted_to_mol_per_l:g}, so residuals are less certain here"
             )
         texts += self._complexed()
         return [*dict.fromkeys(texts), CAUTIONS_DEFER_TO] if texts else []

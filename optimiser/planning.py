@@ -15,10 +15,12 @@ from optimiser.polish import Track
 from optimiser.recipes import recipe_of
 from optimiser.search import SETTLE_STEP, Findings, Search
 from optimiser.site import Site
+from optimiser.site_salt import MODEL_TEXT
 from optimiser.solver import solver_from
 
 RUNNERS_UP = 5
-LARGEST_IONIC_STRENGTH = 1.0
+# Largest ionic strength planned on unless the site says otherwise, by activity model. [mol/L]
+LARGEST_IONIC_STRENGTH = {"davies": 1.0, "sit": 3.0, "ideal": 1.0}
 
 
 def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
@@ -75,12 +77,15 @@ def refuse_salty(site: Site, ionic_strength: float, what: str) -> None:
     Raises
     ------
     FeedRefused
-        The ionic strength exceeds 1 mol/L.
+        The ionic strength exceeds that of `LARGEST_IONIC_STRENGTH`.
     """
-    if ionic_strength > LARGEST_IONIC_STRENGTH and not site.treatment.salty_water_allowed:
+    model = site.system.activity_model
+    largest = LARGEST_IONIC_STRENGTH[model.name]
+    if ionic_strength > largest and not site.treatment.salty_water_allowed:
         raise FeedRefused(
             f"{site.path}: {what} has an ionic strength of {ionic_strength:.2f} mol/L; the "
-            "activity model is trusted to about 0.5 and refused above 1.\n    Set treatment."
+            f"activity model, {MODEL_TEXT[model.name]}, is trusted to about "
+            f"{model.trusted_to_mol_per_l:g} and refused above {largest:g}.\n    Set treatment."
             "salty_water_allowed: true to plan all the same, and confirm by bench tests."
         )
 

@@ -17,14 +17,16 @@ from catalogs.entries import NON_NEGATIVE, Entry
 from catalogs.positions import load_yaml
 from catalogs.problems import InputFileError, ProblemLog, echo
 from catalogs.reagents import Reagent, load_reagents
+from chemistry.activity import choose_activity
 from chemistry.errors import WaterError
-from chemistry.feed import ANALYTES, BURDENS, feed_water
+from chemistry.feed import ANALYTES, BURDENS, FeedWater, feed_water
 from chemistry.system import System
 from optimiser.offers_reader import OFFER_COLUMNS, expired_notes, read_offers
 from optimiser.site import Disposal, Offer, Site, SolverSettings
 from optimiser.site_constants import OwnBlock, read_own
 from optimiser.site_feed import FeedBlock, read_feed
 from optimiser.site_limits import Foreseen, LimitsBlock, read_limits
+from optimiser.site_salt import ACTIVITY_CHOICES, AUTO, activity_notes, saltiest_mol_per_l
 from optimiser.site_treatment import (
     TreatmentBlock,
     read_disposal,
@@ -51,6 +53,15 @@ class _Blocks:
     solver: SolverSettings
     doses_today: Mapping[str, float]
     own: OwnBlock
+    activity: str
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _Chemistry:
+    """The system of a site, and what is said about its choice."""
+
+    system: System
+    notes: tuple[str, ...] = ()
 
 
 def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
@@ -81,9 +92,9 @@ def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
     reagents = load_reagents()
     entry = Entry.top(table, str(path), log)
     blocks = _read_blocks(entry, file, reagents)
-    system = _checked_system(blocks, reagents)
+    chemistry = _checked_chemistry(blocks, reagents)
     log.raise_if_any()
-    return _site(blocks, file, reagents, system, on_day or datetime.date.today())
+    return _site(blocks, file, reagents, chemistry, on_day or datetime.date.today())
 
 
 def _read_blocks(entry: Entry, file: Path, reagents: Mapping[str, Reagent]) -> _Blocks:
@@ -105,6 +116,7 @@ def _read_blocks(entry: Entry, file: Path, reagents: Mapping[str, Reagent]) -> _
         solver=read_solver(entry.block_or_none("solver")),
         doses_today=entry.numbers("today", known, "reagents allowed in treatment", NON_NEGATIVE),
         own=read_own(entry),
+        activity=entry.choice_or("activity", AUTO, ACTIVITY_CHOICES, "activity models"),
     )  # fmt: skip
     entry.finish()
     return blocks
@@ -156,25 +168,47 @@ def _read_price_book(
     return offers
 
 
-def _checked_system(blocks: _Blocks, reagents: Mapping[str, Reagent]) -> System | None:
+def _checked_chemistry(blocks: _Blocks, reagents: Mapping[str, Reagent]) -> _Chemistry | None:
     """Build the site's system, and record it when the feed cannot be electroneutral in it."""
     feed = blocks.feed
     if feed is None or feed.analysis is None:
         return None
+    first = "sit" if blocks.activity == "sit" else "davies"
+    water = _feed_in(blocks, feed, _system(blocks, feed, reagents, first))
+    if water is None or blocks.treatment is None:
+        return None
+    saltiest = saltiest_mol_per_l(water, blocks.treatment.treatment, reagents)
+    if blocks.activity == AUTO and choose_activity(saltiest) != first:
+        chosen = choose_activity(saltiest)
+        water = _feed_in(blocks, feed, _system(blocks, feed, reagents, chosen))
+    if water is None:
+        return None
+    return _Chemistry(water.system, tuple(activity_notes(water, blocks.activity, saltiest)))
+
+
+def _system(
+    blocks: _Blocks, feed: FeedBlock, reagents: Mapping[str, Reagent], activity: str
+) -> System:
     allowed = blocks.treatment.allowed_at if blocks.treatment else {}
     catalogued = load_system(
-        feed.temperature_degc, components=site_components(feed, allowed, reagents)
-    )
-    system = blocks.own.applied_to(catalogued)
+        feed.temperature_degc, components=site_components(feed, allowed, reagents),
+        activity=activity,
+    )  # fmt: skip
+    return blocks.own.applied_to(catalogued)
+
+
+def _feed_in(blocks: _Blocks, feed: FeedBlock, system: System) -> FeedWater | None:
+    """The feed in a system; None, and a problem, where it cannot be."""
+    assert feed.analysis is not None
     try:
-        feed_water(feed.analysis, system)
+        return feed_water(feed.analysis, system)
     except WaterError as error:
         feed.analysis_spot.problem(
             f"an analysis that does not hold ({error})",
             f"a water that can exist, its charge closed with {feed.closing_analyte}",
             "Check its units and look for missing ions; then correct what is named above.",
         )
-    return system
+        return None
 
 
 def site_components(
@@ -195,14 +229,15 @@ def site_components(
 
 
 def _site(
-    blocks: _Blocks, file: Path, reagents: Mapping[str, Reagent], system: System | None,
+    blocks: _Blocks, file: Path, reagents: Mapping[str, Reagent], chemistry: _Chemistry | None,
     day: datetime.date,
 ) -> Site:  # fmt: skip
     feed, treatment, limits, disposal = (
         blocks.feed, blocks.treatment, blocks.limits, blocks.disposal,
     )  # fmt: skip
-    if not (feed and treatment and limits and disposal and system and feed.analysis):
+    if not (feed and treatment and limits and disposal and chemistry and feed.analysis):
         raise AssertionError("a block that is missing leaves a problem")
+    system = chemistry.system
     return Site(
         name=blocks.name, path=file, currency=blocks.currency,
         flow_m3_per_d=feed.flow_m3_per_d, operating_days_per_year=feed.operating_days_per_year,
@@ -215,8 +250,8 @@ def _site(
         pretreated=feed.pretreated, today=blocks.doses_today,
         own_constants=blocks.own.constants, solid_switches=blocks.own.switches,
         notes=(
-            *blocks.own.notes(system), *feed.notes, *limits.notes, *_closing_notes(feed, limits),
-            *expired_notes(blocks.offers, day),
+            *blocks.own.notes(system), *chemistry.notes, *feed.notes, *limits.notes,
+            *_closing_notes(feed, limits), *expired_notes(blocks.offers, day),
         ),
     )  # fmt: skip
 

@@ -65,8 +65,8 @@ def test_hexavalent_chromium_counts_in_a_limit_on_total_chromium() -> None:
     assert row["residual"] >= 0.04
 
 
-SALTY: Tree = {"feed": {"analysis": {"Na": "14 g/L"}}}
-BRINE: Tree = {"feed": {"analysis": {"Na": "26 g/L"}}}
+SALTY: Tree = {"activity": "davies", "feed": {"analysis": {"Na": "14 g/L"}}}
+BRINE: Tree = {"activity": "davies", "feed": {"analysis": {"Na": "26 g/L"}}}
 
 
 def test_an_ionic_strength_above_one_half_warns() -> None:
