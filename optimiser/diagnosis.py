@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from optimiser.errors import NoPlan
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator, Place
+from optimiser.held_up import held_up_by
 from optimiser.points import END_TEXT, Points
 from optimiser.polish import polish
 from optimiser.quality_slopes import RULE
@@ -219,15 +220,7 @@ def _burden_stopper(evaluator: Evaluator, burden: str) -> str:
 
 
 def _leading_species(evaluator: Evaluator, seen: Evaluation, metal: int) -> str:
-    system = evaluator.plant.system
-    weights = system.formation @ evaluator.judge.weights[metal]
     state = seen.blocks[0].state
-    amounts = state.species_mol_per_l[0] * weights
-    lead = int(np.argmax(amounts))
-    share = 100.0 * amounts[lead] / max(float(amounts.sum()), 1e-300)
-    name = system.species_names[lead]
-    kind = "free ion" if lead < len(system.components) else "complex"
-    return (
-        f"dissolved as {name} ({kind}, {share:.0f} %) at pH {float(state.ph[0]):.1f}; "
-        f"{END_TEXT[seen.blocks[0].end]}"
-    )
+    held = held_up_by(state, 0, evaluator.judge.weights[metal])
+    what = f"dissolved as {held.text}," if held else "in a form that does not precipitate,"
+    return f"{what} at pH {float(state.ph[0]):.1f}; {END_TEXT[seen.blocks[0].end]}"
