@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from chemistry.analysis import ANALYTES, analyte_of
+from chemistry.analysis import ANALYTES, CHELATES, METALS, analyte_of
 from chemistry.system import System
 
 if TYPE_CHECKING:
@@ -32,7 +32,7 @@ def with_notes(water: FeedWater) -> FeedWater:
     """Return the feed with every note that applies."""
     notes = [
         *water.analysis.notes, *_charge_notes(water), *_acid_notes(water), *_solid_notes(water),
-        *_other_notes(water),
+        *_chelate_notes(water), *_other_notes(water),
     ]  # fmt: skip
     return replace(water, notes=tuple(notes))
 
@@ -110,6 +110,28 @@ def _solid_notes(water: FeedWater) -> list[str]:
             notes.append(
                 f"particles carry {sum(carried.values()):.3g} mg/L of analytes, more than the "
                 f"suspended solids of {water.analysis.tss_mg_per_l:g} mg/L: check both"
+            )
+    return notes
+
+
+def _chelate_notes(water: FeedWater) -> list[str]:
+    """Metals and chelates of the water that no constant joins."""
+    system, there = water.system, water.totals_mol_per_l > 0.0
+
+    def present(names: tuple[str, ...]) -> list[tuple[str, str]]:
+        pairs = [(name, ANALYTES[name].component) for name in names]
+        return [(n, c) for n, c in pairs if c in system.index and there[system.index[c]]]
+
+    joined = [set(s.stoichiometry) for s in system.species]
+    notes = []
+    for ligand, anion in present(CHELATES):
+        alone = [
+            metal for metal, ion in present(METALS) if not any({anion, ion} <= s for s in joined)
+        ]
+        if alone:
+            notes.append(
+                f"no constants are known here for {', '.join(alone)} with {ligand}: more of it may "
+                "stay dissolved than is shown"
             )
     return notes
 

@@ -14,7 +14,7 @@ from catalogs.constants import CHELATES, COMPONENTS, load_system, solid_table, s
 from catalogs.packaged import read_rows
 from chemistry import System, equilibrate
 from chemistry.activity import build_activity
-from chemistry.analysis import ANALYTES, analyte_of
+from chemistry.analysis import ANALYTES, Measurement, WaterAnalysis, analyte_of
 from chemistry.analysis import CHELATES as CHELATE_IDS
 from chemistry.feed import feed_water
 from chemistry.formula import charge_of, molar_mass_g_per_mol
@@ -135,6 +135,22 @@ def test_a_feed_with_a_chelate_loads_from_a_site_file(chelated_site: Path) -> No
     feed = feed_water(site.analysis, site.system)
     amount = float(feed.totals_mol_per_l[site.system.index["(EDTA)-4"]])
     assert amount == pytest.approx(12.0 / 292.24 / 1000.0, rel=1e-4)
+
+
+def test_a_metal_without_constants_for_a_chelate_of_the_feed_is_named() -> None:
+    amounts = {"Hg": 0.5, "Cu": 20.0, "EDTA": 30.0, "Cl": 100.0, "Na": 50.0}
+    analysis = WaterAnalysis(
+        measurements={
+            name: Measurement(dissolved_mg_per_l=mg, total_mg_per_l=mg)
+            for name, mg in amounts.items()
+        },
+        ph=3.0, close_charge_with="Cl",
+    )  # fmt: skip
+    system = load_system(components=[ANALYTES[name].component for name in amounts])
+    said = [note for note in feed_water(analysis, system).notes if "no constants" in note]
+    assert said == [
+        "no constants are known here for Hg with EDTA: more of it may stay dissolved than is shown"
+    ]
 
 
 # -- what they do to a plan ------------------------------------------------------------------------
