@@ -136,7 +136,7 @@ def explain_floors(site: Site) -> Floors:
     judge = search.judge
     present = [j for j in range(len(judge.metals)) if _feed_mg_per_l(search, j) > 0.0]
     found: dict[tuple[int, str], Lowest] = {}
-    for family in search.families():
+    for family in search.families() if present else ():
         for lowest in search.lowest(family, present):
             found[lowest.metal, family] = lowest
     explained = [

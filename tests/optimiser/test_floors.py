@@ -204,6 +204,22 @@ def test_ammonia_that_holds_copper_up_is_a_complex_with_its_share() -> None:
     assert not plain.held_up_by.is_complexed
 
 
+def test_a_chelate_is_a_floor_that_no_set_point_lowers() -> None:
+    chelated = floors_of(small_site({"feed": {"analysis": {"EDTA": "60 mg/L"}}}))
+    plain = floors_of(small_site())
+    copper = chelated["Cu", "hydroxide"]
+    assert copper.residual_mg_per_l > 50.0 * plain["Cu", "hydroxide"].residual_mg_per_l
+    assert copper.stopped_by == "dissolved species"
+    assert copper.held_up_by is not None
+    assert (copper.held_up_by.kind, copper.held_up_by.ligand) == ("chelate", "EDTA")
+
+
+def test_a_site_that_limits_no_metal_has_no_floors() -> None:
+    found = explain_floors(small_site(own({"parameter": "Cl", "daily_mg_per_l": 900.0})))
+    assert found.floors == ()
+    assert "No metal with a limit is in this water." in floors_text(found.to_dict())
+
+
 def test_metals_that_the_water_lacks_are_listed_apart() -> None:
     site = small_site(
         {"feed": {"analysis": {"Pb": "0 mg/L"}}},
