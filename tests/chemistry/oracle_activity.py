@@ -8,13 +8,29 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
+from itertools import pairwise
 
 from mpmath import mp, mpf
 
 from chemistry import System
 
-A_AT_25_DEGC = "0.509"
+# Debye and Hueckel's A, (kg/mol)^0.5 by C: Freeze & Cherry 1979, Groundwater, Appendix IV.
+A_TABLE = (
+    (0, "0.4883"), (10, "0.4960"), (15, "0.5000"), (20, "0.5042"), (25, "0.5090"),
+    (30, "0.5130"), (40, "0.5221"), (50, "0.5319"), (60, "0.5425"),
+)  # fmt: skip
 WATER_MOL_PER_KG = "55.508"
+SIMPLE_CATIONS = {"Na+", "K+", "NH4+"}
+
+
+def a_at(temperature_degc: float) -> mpf:
+    """A between the two temperatures of the table that enclose one."""
+    for (low, at_low), (high, at_high) in pairwise(A_TABLE):
+        if low <= temperature_degc <= high:
+            share = (mpf(temperature_degc) - low) / (high - low)
+            return (1 - share) * mpf(at_low) + share * mpf(at_high)
+    raise ValueError(f"{temperature_degc} C is off the table of A")
 
 
 @dataclass(frozen=True)
@@ -26,9 +42,10 @@ class Coefficients:
     charges: Sequence[int]
     waters: Sequence[mpf]
 
-    def __post_init__(self) -> None:
-        if self.system.activity != "ideal" and self.system.temperature_degc != 25.0:
-            raise ValueError("the oracle knows Debye and Hueckel's A at 25 C alone")
+    @cached_property
+    def a_ln(self) -> mpf:
+        """A in natural-log units."""
+        return a_at(self.system.temperature_degc) * mp.log(10)
 
     @property
     def is_sit(self) -> bool:
@@ -46,13 +63,24 @@ class Coefficients:
         return {0: mpf(self.charges[species]) ** 2 / 2}
 
     def epsilon(self, one: int, other: int) -> mpf:
-        """Interaction coefficient in natural-log units."""
+        """Interaction coefficient in natural-log units: the table's, else the documented rule's."""
         assert self.system.interactions is not None
-        z = self.charges
-        value = self.system.interactions.of(
-            self.names[one], self.names[other], float(z[one]), float(z[other])
-        )
-        return mp.log(10) * mpf(value)
+        table, names, z = self.system.interactions.pairs, self.names, self.charges
+        for pair in ((names[one], names[other]), (names[other], names[one])):
+            if pair in table:
+                return mp.log(10) * mpf(str(table[pair]))
+        cation, anion = (one, other) if z[one] > z[other] else (other, one)
+        if not z[cation] > 0 > z[anion]:
+            return mpf(0)
+        if names[cation] in SIMPLE_CATIONS:
+            return mp.log(10) * mpf("-0.05") * abs(z[anion])
+        return mp.log(10) * (mpf("0.1") * z[cation] - mpf("0.05")) if z[anion] == -1 else mpf(0)
+
+    @cached_property
+    def pairs(self) -> list[list[mpf]]:
+        """Interaction coefficients of every species with every other."""
+        count = range(len(self.names))
+        return [[self.epsilon(i, j) for j in count] for i in count]
 
     def evaluate(self, y: Sequence[mpf]) -> Evaluated:
         """Offsets ``-ln g + w ln a_w`` and ln a_w with their slopes, at some surroundings."""
@@ -67,7 +95,7 @@ class Coefficients:
     def _davies(self, strength: mpf) -> tuple[mpf, mpf]:
         if self.system.activity == "ideal":
             return mpf(0), mpf(0)
-        a = mpf(A_AT_25_DEGC) * mp.log(10)
+        a = self.a_ln
         held = min(strength, mpf("0.5"))
         root = mp.sqrt(held)
         value = a * (root / (1 + root) - mpf("0.3") * held)
@@ -75,12 +103,11 @@ class Coefficients:
         return value, slope if strength < mpf("0.5") else mpf(0)
 
     def _sit(self, y: Sequence[mpf]) -> Evaluated:
-        a, count = mpf(A_AT_25_DEGC) * mp.log(10), len(self.names)
+        a, pairs, count = self.a_ln, self.pairs, len(self.names)
         squares = [mpf(z) ** 2 for z in self.charges]
         root = mp.sqrt(sum(q * m for q, m in zip(squares, y, strict=True)) / 2)
         value = a * root / (1 + mpf("1.5") * root)
         slope = a / (2 * root * (1 + mpf("1.5") * root) ** 2)
-        pairs = [[self.epsilon(i, j) for j in range(count)] for i in range(count)]
         crowd = [sum(e * m for e, m in zip(row, y, strict=True)) for row in pairs]
         x = mpf("1.5") * root
         term = 1 + x - 2 * mp.log(1 + x) - 1 / (1 + x)

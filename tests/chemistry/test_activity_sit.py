@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from mpmath import mp, mpf
+from mpmath import mpf
 from numpy.typing import NDArray
 
 from catalogs import load_system
@@ -16,7 +16,8 @@ from chemistry.activity import (
     choose_activity,
     interaction_by_rule,
 )
-from tests.chemistry.salty_oracle import DIGITS, SaltyWater
+from tests.chemistry.oracle import Factors, solve_exact, water_of
+from tests.chemistry.oracle_differences import Difference
 from tests.chemistry.test_random_waters import assert_same_states
 from tests.chemistry.waters import random_waters, replay
 
@@ -217,32 +218,24 @@ def test_the_groups_of_species_give_the_sum_over_all_pairs(brine: EquilibriumSta
     assert model.width < 0.75 * len(names)
 
 
-def test_forty_digits_give_the_same_water_and_the_same_derivatives(
+def test_fifty_digits_give_the_same_water_and_the_same_derivatives(
     brine: EquilibriumState,
 ) -> None:
     assert brine.active.sum() >= 3
     assert brine.ionic_strength[0] > 0.9
-    system, slopes = brine.system, brine.sensitivity(np.eye(len(brine.system.components)))
-    water = SaltyWater(brine)
-    given = {c: float(t) for c, t in zip(system.components, brine.totals[0], strict=True)}
-    inverse = np.linalg.inv(water.jacobian(given))
-    with mp.workdps(DIGITS + 10):
-        totals = {c: mpf(t) for c, t in given.items()}
-        exact = water.dissolved(water.solve(totals, inverse))
-        for c, value in exact.items():
-            found = brine.dissolved_mol_per_l[0, system.index[c]]
-            assert float(abs(value - mpf(float(found)))) < 1e-10 * max(abs(float(value)), 1e-4), c
-        for k, component in enumerate(system.components):
-            step = mpf(10) ** -15 * max(abs(totals[component]), mpf("1e-6"))
-            ends = []
-            for sign in (-1, 1):
-                moved = totals | {component: totals[component] + sign * step}
-                ends.append(water.dissolved(water.solve(moved, inverse)))
-            exact_slopes = [float((ends[1][c] - ends[0][c]) / (2 * step)) for c in given]
-            np.testing.assert_allclose(
-                slopes.dissolved[0, :, k], exact_slopes, rtol=1e-8,
-                atol=1e-9 * max(1.0, float(np.abs(exact_slopes).max())),
-            )  # fmt: skip
+    names, slopes = brine.system.components, brine.sensitivity(np.eye(len(brine.totals[0])))
+    water, start = water_of(brine)
+    factors = Factors(water, start)
+    exact, unknowns = solve_exact(water, start, factors=factors)
+    for column, name in enumerate(names):
+        found = brine.dissolved_mol_per_l[0, column]
+        value = exact.dissolved[name]
+        assert float(abs(value - mpf(float(found)))) < 1e-10 * max(abs(float(value)), 1e-4), name
+        expected = Difference(water, unknowns, name, factors).dissolved(names)
+        np.testing.assert_allclose(
+            slopes.dissolved[0, :, column], expected, rtol=1e-8,
+            atol=1e-9 * max(1.0, float(np.abs(expected).max())),
+        )  # fmt: skip
 
 
 # -- random salty waters ---------------------------------------------------------------------------

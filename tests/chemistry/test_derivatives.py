@@ -6,17 +6,16 @@ from collections.abc import Mapping
 
 import numpy as np
 import pytest
-from mpmath import mp, mpf
 from numpy.typing import NDArray
 
 from catalogs import load_system
 from chemistry import EquilibriumState, System, equilibrate
 from chemistry.state import Sensitivity
-from tests.chemistry.oracle import DIGITS, GUARD_DIGITS, Exact, Held, Water, solve_exact, water_of
+from tests.chemistry.oracle import Factors, Held, solve_exact, water_of
+from tests.chemistry.oracle_differences import Difference
 
 FloatArray = NDArray[np.float64]
 
-STEP = mpf(10) ** -18  # of a difference, as a share of the total
 AGREES = 1e-8  # relative to the largest derivative of the same kind
 
 COMPONENTS = ("H+", "Na+", "Ca+2", "Cu+2", "Zn+2", "Cl-", "SO4-2", "CO3-2")
@@ -58,44 +57,6 @@ def solved(system: System, totals: Mapping[str, float], held: Held) -> Equilibri
     return equilibrate(system, totals, ph=held.ph, pco2_atm=held.pco2_atm, titrant=titrant)
 
 
-class Difference:
-    """Central differences of a water's exact solution along one component's total."""
-
-    def __init__(self, water: Water, unknowns: list[mpf], component: str) -> None:
-        before = water.totals[component]
-        with mp.workdps(DIGITS + GUARD_DIGITS):
-            self.step = STEP * max(abs(before), mpf("1e-6"))
-            self.low, self.high = (
-                self._at(water, unknowns, component, before + sign * self.step) for sign in (-1, 1)
-            )
-        water.totals[component] = before
-
-    @staticmethod
-    def _at(water: Water, unknowns: list[mpf], component: str, total: mpf) -> Exact:
-        water.totals[component] = total
-        return solve_exact(water, unknowns)[0]
-
-    def slope(self, low: mpf, high: mpf) -> float:
-        with mp.workdps(DIGITS + GUARD_DIGITS):
-            return float((high - low) / (2 * self.step))
-
-    def dissolved(self, names: tuple[str, ...]) -> FloatArray:
-        low, high = self.low.dissolved, self.high.dissolved
-        return np.array([self.slope(low[c], high[c]) for c in names])
-
-    def solids(self, names: tuple[str, ...]) -> FloatArray:
-        low, high = self.low.solids, self.high.solids
-        return np.array([self.slope(low.get(n, mpf(0)), high.get(n, mpf(0))) for n in names])
-
-    def ph(self) -> float:
-        with mp.workdps(DIGITS + GUARD_DIGITS):
-            ln_low, ln_high = self.low.ln_activity["H+"], self.high.ln_activity["H+"]
-            return self.slope(-ln_low / mp.log(10), -ln_high / mp.log(10))
-
-    def titrant(self) -> float:
-        return self.slope(self.low.titrant, self.high.titrant)
-
-
 def assert_close(found: FloatArray | float, expected: FloatArray | float) -> None:
     largest = max(1.0, float(np.abs(expected).max(initial=0.0)) if np.ndim(expected) else 0.0)
     np.testing.assert_allclose(found, expected, rtol=AGREES, atol=AGREES * largest)
@@ -110,8 +71,9 @@ def test_derivatives_are_those_of_the_exact_solution(
     slopes = state.sensitivity(np.eye(len(COMPONENTS)))
     water, start = water_of(state, held)
     _, unknowns = solve_exact(water, start)
+    factors = Factors(water, unknowns)
     for k, component in enumerate(system.components):
-        exact = Difference(water, unknowns, component)
+        exact = Difference(water, unknowns, component, factors)
         assert_close(slopes.dissolved[0, :, k], exact.dissolved(system.components))
         assert_close(slopes.solids[0, :, k], exact.solids(system.solid_names))
         assert slopes.ph[0, k] == pytest.approx(exact.ph(), rel=AGREES, abs=1e-7)
@@ -129,8 +91,9 @@ def test_derivatives_in_salty_water_are_exact_too(held_name: str) -> None:
     slopes = state.sensitivity(np.eye(len(system.components)))
     water, start = water_of(state, held)
     _, unknowns = solve_exact(water, start)
+    factors = Factors(water, unknowns)
     for k, component in enumerate(system.components):
-        exact = Difference(water, unknowns, component)
+        exact = Difference(water, unknowns, component, factors)
         assert_close(slopes.dissolved[0, :, k], exact.dissolved(system.components))
         assert_close(slopes.solids[0, :, k], exact.solids(system.solid_names))
         assert slopes.ph[0, k] == pytest.approx(exact.ph(), rel=AGREES, abs=1e-6)
