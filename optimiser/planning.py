@@ -43,22 +43,8 @@ def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
         The time limit came before a verified plan was found.
     """
     begun = time.perf_counter()
-    evaluator = Evaluator(site)
-    refuse_salty(site, evaluator.plant.feed.ionic_strength, "the feed")
-    solver = solver_from(site.solver)
-    search = Search(
-        evaluator, solver, time_limit_s=site.solver.time_limit_s,
-        progress=progress,
-    )  # fmt: skip
-    findings = search.run()
+    evaluator, findings = find(site, progress)
     ranked = findings.feasible
-    if not ranked:
-        if findings.stopped_early:
-            raise Interrupted(
-                f"stopped after {site.solver.time_limit_s:g} s before a verified plan was found: "
-                "raise the time limit or allow fewer reagents"
-            )
-        raise explain_no_plan(evaluator, findings, solver)
     _, best = ranked[0]
     seen = evaluator.evaluate(best.point, slopes=False)
     strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)
@@ -69,6 +55,32 @@ def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
         **findings.seconds, "total": time.perf_counter() - begun,
     }  # fmt: skip
     return Plan(doses=data["doses"], cost=data["cost"], compliant=data["compliant"], data=data)
+
+
+def find(site: Site, progress: Callable[[str], None] | None = None) -> tuple[Evaluator, Findings]:
+    """Search a site; the first of ``findings.feasible`` is the plan.
+
+    Raises
+    ------
+    NoPlan, FeedRefused, Interrupted
+        As `plan` does.
+    """
+    evaluator = Evaluator(site)
+    refuse_salty(site, evaluator.plant.feed.ionic_strength, "the feed")
+    solver = solver_from(site.solver)
+    search = Search(
+        evaluator, solver, time_limit_s=site.solver.time_limit_s,
+        progress=progress,
+    )  # fmt: skip
+    findings = search.run()
+    if not findings.feasible:
+        if findings.stopped_early:
+            raise Interrupted(
+                f"stopped after {site.solver.time_limit_s:g} s before a verified plan was found: "
+                "raise the time limit or allow fewer reagents"
+            )
+        raise explain_no_plan(evaluator, findings, solver)
+    return evaluator, findings
 
 
 def refuse_salty(site: Site, ionic_strength: float, what: str) -> None:

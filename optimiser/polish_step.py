@@ -103,7 +103,7 @@ def _linear(
 def _add_checks(
     model: Model, seen: Evaluation, row: int, moves: dict[int, tuple[str, float]], back_off: float
 ) -> None:
-    ratios, slopes = [], []
+    ratios, slopes, labels = [], [], []
     parts = []
     for part in seen.judged:
         mine = np.flatnonzero((seen.rows.point[part.block.rows] == row) & part.block.reached)
@@ -115,8 +115,10 @@ def _add_checks(
             near = ratio > np.maximum(worst - NEAR_WORST, NEAR_RATIO)
             ratios.append(ratio[near])
             slopes.append(slope[near])
-    for rule in seen.rules:
+            labels += [f"check {number}" for number in np.nonzero(near)[1]]
+    for number, rule in enumerate(seen.rules):
         if np.isfinite(rule.ratio[row]):
+            labels.append(f"rule {number}")
             ratios.append(rule.ratio[row : row + 1])
             slopes.append(rule.slope[row : row + 1])
     if not ratios:
@@ -129,7 +131,10 @@ def _add_checks(
         terms, constant = _linear(np.clip(slope[k], -1e6, 1e6), moves)
         terms["miss"] = -1.0
         model.add_row(
-            f"check {number}", terms, Sense.AT_MOST, -back_off - float(ratio[k]) - constant
+            f"{labels[k]} row {number}",
+            terms,
+            Sense.AT_MOST,
+            -back_off - float(ratio[k]) - constant,
         )
 
 
