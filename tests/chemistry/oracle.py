@@ -11,6 +11,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 
+import numpy as np
 from mpmath import mp, mpf
 
 from chemistry import EquilibriumState, Solid, Species, System
@@ -19,8 +20,10 @@ from tests.chemistry.oracle_activity import Coefficients
 
 DIGITS = 50
 GUARD_DIGITS = 15
+SEED = 7
 GAS_CONSTANT_KJ_PER_MOL_K = "8.314462618e-3"
-LOG10_HENRY_CO2 = "-1.468"  # CO2(g) = CO2(aq), Plummer & Busenberg 1982
+# CO2(g) = CO2(aq) at 25 C, and its enthalpy in kJ/mol: Plummer & Busenberg 1982.
+LOG10_HENRY_CO2, ENTHALPY_HENRY_CO2 = "-1.468", "-19.98"
 CARBON_DIOXIDE = {"CO3-2": 1, "H+": 2}
 
 
@@ -92,15 +95,17 @@ class Water:
         self.at_co2, self.size = self.at_dose + 1, self.at_dose + 2
 
     def formed(self, item: Species | Solid) -> Formed:
-        """With natural log K at the system's temperature by van 't Hoff."""
-        with mp.workdps(DIGITS + GUARD_DIGITS):
-            value = mp.log(10) * mpf(item.log10_k)
-            if item.enthalpy_kj_per_mol is not None:
-                kelvin = mpf(self.system.temperature_degc) + mpf("273.15")
-                shift = 1 / kelvin - 1 / mpf("298.15")
-                value -= mpf(item.enthalpy_kj_per_mol) / mpf(GAS_CONSTANT_KJ_PER_MOL_K) * shift
+        """With natural log K at the system's temperature."""
+        value = self.ln_k_at(item.log10_k, item.enthalpy_kj_per_mol)
         charge = item.charge if isinstance(item, Species) else 0
         return Formed(item.name, item.stoichiometry, value, charge, mpf(item.water))
+
+    def ln_k_at(self, log10_k: float | str, enthalpy_kj_per_mol: float | str | None) -> mpf:
+        """Natural log of a constant given at 25 C at the system's temperature."""
+        with mp.workdps(DIGITS + GUARD_DIGITS):
+            kelvin = mpf(self.system.temperature_degc) + mpf("273.15")
+            shift = (1 / kelvin - 1 / mpf("298.15")) / mpf(GAS_CONSTANT_KJ_PER_MOL_K)
+            return mp.log(10) * mpf(log10_k) - mpf(enthalpy_kj_per_mol or 0) * shift
 
     def ln_activity_product(self, item: Formed, unknowns: Sequence[mpf]) -> mpf:
         """ln K plus the log activities of the components that form a species or solid."""
@@ -154,7 +159,7 @@ class Water:
             errors[self.at_dose] = unknowns[index["H+"]] + mp.log(10) * mpf(held.ph)
         if held.pco2_atm is not None:
             gas = next(s for s in self.species if s.name == "CO2(aq)")
-            ln_a = mp.log(mpf(held.pco2_atm)) + mp.log(10) * mpf(LOG10_HENRY_CO2)
+            ln_a = mp.log(mpf(held.pco2_atm)) + self.ln_k_at(LOG10_HENRY_CO2, ENTHALPY_HENRY_CO2)
             slopes[self.at_co2, self.at_co2] = mpf(0)
             errors[self.at_co2] = self.ln_activity_product(gas, unknowns) - ln_a
             for c, n in gas.parts.items():
@@ -229,12 +234,17 @@ def _read(water: Water, unknowns: Sequence[mpf]) -> Exact:
     )  # fmt: skip
 
 
-def water_of(state: EquilibriumState, held: Held | None = None) -> tuple[Water, list[mpf]]:
-    """A state of one water as a `Water` with its solids, and a start from its numbers."""
+def water_of(
+    state: EquilibriumState, held: Held | None = None, totals: Mapping[str, float] | None = None
+) -> tuple[Water, list[mpf]]:
+    """A state of one water as a `Water` with its solids, and a start from its numbers.
+
+    ``totals`` are the state's unless given.
+    """
     system = state.system
-    given = zip(system.components, state.batch.totals[0], strict=True)
+    given = dict(zip(system.components, map(float, state.batch.totals[0]), strict=True))
     present = [n for n, a in zip(system.solid_names, state.active[0], strict=True) if a]
-    water = Water(system, {c: float(t) for c, t in given}, present, held or Held())
+    water = Water(system, totals or given, present, held or Held())
     start = [float(state.log_activity[0, system.index[c]]) for c in water.components]
     start += [float(state.solids_mol_per_l[0, system.solid_names.index(n)]) for n in present]
     if water.coefficients.is_sit:
@@ -248,3 +258,20 @@ def water_of(state: EquilibriumState, held: Held | None = None) -> tuple[Water, 
         filled = float((state.totals - state.batch.totals)[0, system.index["CO3-2"]])
         co2 = filled - dose * water.held.titrant.get("CO3-2", 0.0)
     return water, [mpf(value) for value in (*start, dose, co2)]
+
+
+def blurred(start: Sequence[mpf]) -> list[mpf]:
+    """A start that only shows the size of each number, so that the oracle has to find the rest."""
+    rng = np.random.default_rng(SEED)
+    return [u + mpf(float(rng.uniform(-0.3, 0.3))) * min(mpf(1), abs(u)) for u in start]
+
+
+def worst_difference(state: EquilibriumState, exact: Exact) -> float:
+    """Largest relative difference of a dissolved total, protons against the sum of their terms."""
+    system, worst = state.system, 0.0
+    scale = state.species_mol_per_l[0] @ np.abs(system.formation)
+    for name, value in exact.dissolved.items():
+        column = system.index[name]
+        difference = float(abs(value - mpf(float(state.dissolved_mol_per_l[0, column]))))
+        worst = max(worst, difference / (scale[column] if name == "H+" else float(abs(value))))
+    return worst

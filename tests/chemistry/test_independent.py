@@ -12,7 +12,15 @@ from numpy.typing import NDArray
 from catalogs import load_system
 from chemistry import EquilibriumState, System, equilibrate
 from tests.chemistry.certificate import ln_gamma
-from tests.chemistry.oracle import DIGITS, Exact, Held, solve_exact, water_of
+from tests.chemistry.oracle import (
+    DIGITS,
+    SEED,
+    Held,
+    blurred,
+    solve_exact,
+    water_of,
+    worst_difference,
+)
 
 FloatArray = NDArray[np.float64]
 
@@ -36,7 +44,6 @@ KINDS: dict[str, tuple[str, ...]] = {
     "struvite": ("K+", "Mg+2", "Ca+2", "NH4+", "PO4-3", "CO3-2", "Cl-"),
 }  # fmt: skip
 PER_KIND = 3
-SEED = 7
 
 
 @dataclass(frozen=True)
@@ -68,23 +75,6 @@ class Case:
 DECADES = ((-6.0, -0.7), (-4.0, -1.0), (-8.0, -2.0))
 CASES = [Case(kind, n, DECADES[n % len(DECADES)]) for kind in KINDS for n in range(PER_KIND)]
 GIBBS_CASES = [c for c in CASES if np.delete(c.totals, 0).min() >= GIBBS_FROM_MOL_PER_L]
-
-
-def blurred(start: list[mpf]) -> list[mpf]:
-    """A start that only shows the size of each number, so that the oracle has to find the rest."""
-    rng = np.random.default_rng(SEED)
-    return [u + mpf(float(rng.uniform(-0.3, 0.3))) * min(mpf(1), abs(u)) for u in start]
-
-
-def worst_difference(state: EquilibriumState, exact: Exact) -> float:
-    """Largest relative difference of a dissolved total, protons against the sum of their terms."""
-    system, worst = state.system, 0.0
-    scale = state.species_mol_per_l[0] @ np.abs(system.formation)
-    for name, value in exact.dissolved.items():
-        column = system.index[name]
-        difference = float(abs(value - mpf(float(state.dissolved_mol_per_l[0, column]))))
-        worst = max(worst, difference / (scale[column] if name == "H+" else float(abs(value))))
-    return worst
 
 
 @pytest.mark.parametrize("case", CASES, ids=str)
