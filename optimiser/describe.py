@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 from catalogs.reagents import CAUTIONS_DEFER_TO
 from chemistry.burden import BURDENS, water_burden
 from chemistry.state import CO2_SPECIES, H2S_SPECIES, EquilibriumState
+from optimiser.assumptions import assumptions, versions
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator
 from optimiser.gas_figures import gas_figures
 from optimiser.held_up import HeldUp, held_up_by
@@ -21,12 +22,12 @@ from optimiser.points import END_TEXT
 from optimiser.quality import LOAD
 from optimiser.quality_slopes import RULE
 from optimiser.site_salt import MODEL_TEXT
+from optimiser.sludge_figures import sludge_data
 
 FloatArray = NDArray[np.float64]
 Data = dict[str, Any]
 
 FEED_HOURS_PER_DAY = 24.0
-SMALLEST_SHOWN_KG_PER_D = 1e-6
 LEAST_SHARE_OF_RESIDUAL = 0.25  # of dissolved in total metal, for a word on what holds it up
 
 
@@ -317,35 +318,6 @@ class Describer:
 
     # -- sludge ------------------------------------------------------------------------------------
 
-    def sludge(self) -> Data:
-        """Sludge of the dearest end."""
-        chosen = self.seen.priced.sludges[self.point]
-        if chosen is None:
-            return {}
-        made, row, rule = chosen
-        flow = self.site.flow_m3_per_d / 1000.0
-        per_year = self.site.operating_days_per_year / 1000.0
-        minerals = {s.name: s.mineral or s.name for s in self.plant.system.solids}
-        solids = made.masses_by_name(row, least_mg_per_l=SMALLEST_SHOWN_KG_PER_D / flow)
-        dry = float(made.dry_mg_per_l[row]) * flow
-        wet = float(made.wet_mg_per_l[row]) * flow
-        text = rule.text or (
-            f"first rule whose condition holds: {', '.join(rule.metals)} above "
-            f"{rule.above_mg_per_kg_dry:g} mg/kg dry" if rule.metals else "no other rule applies"
-        )  # fmt: skip
-        return {
-            "dry_kg_per_d_by_solid": {
-                f"{name} ({minerals[name]})" if minerals[name] != name else name: mass * flow
-                for name, mass in solids.items()
-            },
-            "unreacted_kg_per_d": float(made.unreacted_mg_per_l[row]) * flow,
-            "feed_solids_kg_per_d": float(made.feed_particles_mg_per_l[row]) * flow,
-            "polymer_kg_per_d": float(made.polymer_mg_per_l[row]) * flow,
-            "dry_t_per_year": dry * per_year, "wet_t_per_year": wet * per_year,
-            "cake_solids_fraction": made.cake_solids_fraction,
-            "sludge_class": rule.sludge_class, "rule": text,
-        }  # fmt: skip
-
     # -- words -------------------------------------------------------------------------------------
 
     def cautions(self) -> list[str]:
@@ -365,33 +337,6 @@ class Describer:
             )
         texts += self._complexed()
         return [*dict.fromkeys(texts), CAUTIONS_DEFER_TO] if texts else []
-
-    def assumptions(self) -> list[str]:
-        """What the numbers rest on."""
-        treatment, site = self.plant.treatment, self.site
-        separator = treatment.separator
-        texts = [
-            f"{separator.name}: {separator.tss_mg_per_l:g} mg/L suspended solids or "
-            f"{100.0 * (1.0 - separator.capture_fraction):g} % of the solids formed pass, "
-            "whichever is less",
-            f"design margin {site.design_margin:g}: predictions stay at or below that share of "
-            "each limit",
-            f"limits hold at set point +-{treatment.ph_tolerance:g} pH and doses "
-            f"+-{100.0 * treatment.dose_tolerance_fraction:g} %, with gypsum and calcite formed "
-            f"and held back to SI {treatment.scale_supersaturation_si:g}, and with carbon dioxide "
-            "from carbonate kept and vented",
-            "fresh solids control; slow and aged ones are off",
-        ]
-        from catalogs.constants import enthalpy_unknown
-
-        if abs(self.plant.system.temperature_degc - 25.0) > 0.5:
-            kept = list(enthalpy_unknown(self.plant.system))
-            if kept:
-                texts.append(
-                    f"{len(kept)} constants without a known enthalpy keep their 25 C value: "
-                    f"{', '.join(sorted(kept)[:6])}{' and others' if len(kept) > 6 else ''}"
-                )
-        return [*texts, *self.plant.feed.notes, *site.notes]
 
     def certificate(self) -> Data:
         """Worst certificate of the point's states."""
@@ -441,21 +386,8 @@ def describe(
         "purchases": one.purchases(), "cost": cost, "limits": one.limits(), "ph": one.ph(),
         "rules_missed": one.missed_rules(), "water": one.water(), "gas": one.gas(),
         "burden": one.burden(),
-        "sludge": one.sludge(), "cautions": one.cautions(),
-        "assumptions": [*one.assumptions(), *extra],
+        "sludge": sludge_data(evaluator, seen, point), "cautions": one.cautions(),
+        "assumptions": [*assumptions(evaluator), *extra],
         "proof": {**proof, "certificate": one.certificate()},
         "runners_up": [], "versions": versions(site.solver.name),
     }  # fmt: skip
-
-
-def versions(solver: str) -> dict[str, str]:
-    """Versions of the program and of what its numbers depend on."""
-    from importlib.metadata import PackageNotFoundError, version
-
-    found = {}
-    for name in ("dosewright", "pulp", "highspy", "numpy", "scipy"):
-        try:
-            found[name] = version(name)
-        except PackageNotFoundError:
-            continue
-    return {**found, "solver": solver}
