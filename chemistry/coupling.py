@@ -20,12 +20,14 @@ class Coupled:
 
     ``held_back`` (n, columns, columns) is ``1 - L'MO``, ``by_activity`` (n, columns, components)
     ``L'MA`` and ``side`` (n, columns, components) ``O'MA``, with the concentrations M, the
-    functionals L, the offset slopes O and the stoichiometry A.
+    functionals L, the offset slopes O and the stoichiometry A; ``water`` (n, columns) is the slope
+    of ln a_w, None where the model leaves water alone.
     """
 
     held_back: FloatArray
     by_activity: FloatArray
     side: FloatArray
+    water: FloatArray | None = None
 
 
 class Coupling:
@@ -62,6 +64,7 @@ class Coupling:
         spread[:, :, 0] = slope[:, None] * screened[:, c + columns]
         side[:, 0] = slope[:, None] * screened[:, :c]
         by_activity = 0.5 * screened[:, None, :c]
+        water = None
         if self.model.name == "sit":
             grouped = self.members.sums(m)
             by_activity = np.concatenate(
@@ -71,7 +74,7 @@ class Coupling:
             hydrated, water = m @ self.hydrated, self.model.ln_water_slope(y)[:, columns]
             spread += hydrated[:, c + columns, None] * water[:, None, :]
             side += water[:, :, None] * hydrated[:, None, :c]
-        return Coupled(np.eye(k) - spread, by_activity, side)
+        return Coupled(np.eye(k) - spread, by_activity, side, water)
 
     def _add_groups(
         self, spread: FloatArray, side: FloatArray, columns: IntArray, sums: Sums

@@ -103,7 +103,7 @@ def linearise(
     With ``y = m L`` and ``d ln m = A dl + O dy`` the surroundings follow the log activities by
     ``(1 - L'MO) dy = (m L - y) + L'MA dl``, which is eliminated.
     """
-    model, y = kernel.model, part.surroundings
+    y = part.surroundings
     m = kernel.molalities(part.ln_activity, y)
     sums, scale = kernel.amounts(m, part.solids)
     seen = kernel.surroundings(m)
@@ -118,11 +118,10 @@ def linearise(
     g = kernel.solid_formation[slots]
     si = np.take_along_axis(kernel.saturation_ln(part.ln_activity, y), slots, axis=1)
     saturation = si
-    if model.name == "sit":
-        water = model.ln_water_slope(y)[:, columns]
-        moles = kernel.solid_water[slots]
-        g = g + moles[:, :, None] * np.einsum("ny,nyc->nc", water, follow)[:, None, :]
-        saturation = si + moles * np.einsum("ny,ny->n", water, follow_gap)[:, None]
+    if coupled.water is not None:
+        water, moles = coupled.water[:, None, :], kernel.solid_water[slots]
+        g = g + moles[:, :, None] * (water @ follow)
+        saturation = si + moles * (water @ follow_gap[:, :, None])[:, 0]
     stoichiometry = kernel.solid_formation[slots] * used[:, :, None] * part.present[:, None, :]
     return Linearised(
         m=m, sums=sums, scale=scale, matrix=matrix, rhs=rhs, stoichiometry=stoichiometry,
