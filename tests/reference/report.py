@@ -8,6 +8,7 @@ where a range is published), decades their log10, for a pH the difference.
 from __future__ import annotations
 
 import sys
+from statistics import median
 
 from tests.reference.cases import Reading, readings
 
@@ -33,7 +34,7 @@ def line(reading: Reading) -> str:
 
 
 def report() -> str:
-    """The whole table, case by case, and the counts at its end."""
+    """The whole table, case by case, with counts, medians and worst at its end."""
     rows = [HEADER]
     seen = ""
     for reading in readings():
@@ -44,25 +45,48 @@ def report() -> str:
         rows.append(f"  {line(reading)}")
         if reading.expectation.not_asserted:
             rows.append(f"    * not asserted: {reading.expectation.not_asserted}")
-    return "\n".join([*rows, "", *totals()]) + "\n"
+    return "\n".join([*rows, "", *totals(), "", *spread()]) + "\n"
 
 
-def totals() -> list[str]:
-    """Counts by use: values, met, missed."""
-    lines = []
-    groups = {
+def groups() -> dict[str, list[Reading]]:
+    """Readings by what is asked of them."""
+    return {
         "hard, asserted": [r for r in readings() if r.asserted],
         "hard, not asserted": [r for r in readings() if r.case.use == "hard" and not r.asserted],
         "soft": [r for r in readings() if r.case.use == "soft"],
         "info": [r for r in readings() if r.case.use == "info"],
     }
-    for name, members in groups.items():
+
+
+def totals() -> list[str]:
+    """Counts by use: values, met, missed."""
+    lines = []
+    for name, members in groups().items():
         met = sum(r.passes is True for r in members)
         missed = [r.label for r in members if r.passes is False]
         tail = f", missed: {', '.join(missed)}" if missed else ""
         open_ = sum(r.passes is None for r in members)
         free = f", {open_} published without a tolerance" if open_ else ""
         lines.append(f"{name}: {len(members)} values, {met} met{free}{tail}")
+    return lines
+
+
+def spread() -> list[str]:
+    """Median and worst miss by use and by group of cases, pH apart from decades."""
+    lines = []
+    everything = {"all": list(readings()), **groups()}
+    for letter in sorted({r.case.group for r in readings()}):
+        everything[f"group {letter}"] = [r for r in readings() if r.case.group == letter]
+    for name, members in everything.items():
+        for what, unit in (("|log10(computed/published)|", ""), ("|pH difference|", "pH")):
+            some = [r for r in members if (r.expectation.unit == "pH") == bool(unit)]
+            if some:
+                worst = max(some, key=lambda r: abs(r.log10_ratio))
+                middle = median(abs(r.log10_ratio) for r in some)
+                lines.append(
+                    f"{name}: {what} of {len(some)} values: median {middle:.4f}, "
+                    f"worst {abs(worst.log10_ratio):.3f} ({worst.label})"
+                )
     return lines
 
 
