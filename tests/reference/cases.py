@@ -24,6 +24,7 @@ FILES = (
     "acid_and_base.yaml",
     "sludge.yaml",
     "reagents.yaml",
+    "practice.yaml",
 )
 TOLERANCES = ("relative", "factor", "absolute", "within")
 USES = ("hard", "soft", "info")
