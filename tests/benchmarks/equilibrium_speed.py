@@ -1,8 +1,8 @@
 """Speed of the equilibrium: cold and warm, against a general root finder, and what it grows with.
 
-``OPENBLAS_NUM_THREADS=1 python -m tests.benchmarks.equilibrium_speed [--csv FILE]``. Speeds are
-states per second of processor time on one core. The root finder solves one state at a time in log
-activities and without solids; ours finds the solids too.
+``OPENBLAS_NUM_THREADS=1 python -m tests.benchmarks.equilibrium_speed [--csv FILE]
+[--chart FILE.svg]``. Speeds are states per second of processor time on one core. The root finder
+solves one state at a time in log activities and without solids; ours finds the solids too.
 """
 
 from __future__ import annotations
@@ -21,6 +21,7 @@ from catalogs import load_system
 from catalogs.constants import COMPONENTS as CATALOG
 from catalogs.constants import solid_table
 from chemistry import EquilibriumState, System, equilibrate
+from tests.benchmarks.speed_chart import chart
 from tests.chemistry.waters import random_waters
 
 FloatArray = NDArray[np.float64]
@@ -177,6 +178,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """Run; the exit code is 1 below a floor."""
     parser = argparse.ArgumentParser(prog="python -m tests.benchmarks.equilibrium_speed")
     parser.add_argument("--csv", type=Path, help="write the sweep there instead of printing it")
+    parser.add_argument("--chart", type=Path, help="draw the sweep there, as SVG")
     parser.add_argument("--no-sweep", action="store_true", help="only the floors")
     options = parser.parse_args(arguments)
     system = the_system()
@@ -199,7 +201,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
         f"random waters of the whole catalog: {mixed.cold:.0f} cold, {mixed.warm:.0f} warm\n"
     )
     if not options.no_sweep:
-        text = "\n".join(sweep()) + "\n"
+        rows = sweep()
+        text = "\n".join(rows) + "\n"
+        if options.chart is not None:
+            options.chart.write_text(chart(rows), encoding="utf-8")
         if options.csv is None:
             sys.stdout.write(text)
         else:
