@@ -37,7 +37,7 @@ __all__ += ["EquilibriumState", "Sensitivity", "equilibrate", "kernel_of", "read
 
 CERTIFIED_MASS_BALANCE = 1e-10
 CERTIFIED_SATURATION = 1e-8
-CERTIFIED_SURROUNDINGS = 1e-9  # what the coefficients saw against the species, share of I
+CERTIFIED_SURROUNDINGS = 1e-9  # seen against species: share of I, for the others of the largest
 
 
 @dataclass(frozen=True, eq=False)
@@ -356,12 +356,14 @@ def _as_state(system: System, kernel: Kernel, batch: Batch) -> EquilibriumState:
         dose, batch.active, batch.converged, batch, kernel,
     )  # fmt: skip
     proof = state.certificate_arrays
-    off = np.abs(kernel.surroundings(m) - batch.surroundings).max(axis=1)
+    off = np.abs(kernel.surroundings(m) - batch.surroundings)
+    strength, most = batch.surroundings[:, 0], batch.surroundings.max(axis=1)
     batch.converged[:] &= (
         (proof["mass_balance"] <= CERTIFIED_MASS_BALANCE)
         & (proof["supersaturation"] <= CERTIFIED_SATURATION)
         & (proof["presence"] <= CERTIFIED_SATURATION)
         & (np.abs(totals).max(axis=1, initial=0.0) <= LARGEST_TOTAL_MOL_PER_L)
-        & (off <= CERTIFIED_SURROUNDINGS * np.maximum(batch.surroundings[:, 0], 1e-9))
+        & (off[:, 0] <= CERTIFIED_SURROUNDINGS * np.maximum(strength, 1e-9))
+        & (off.max(axis=1) <= CERTIFIED_SURROUNDINGS * np.maximum(most, 1e-9))
     )
     return state

@@ -283,6 +283,17 @@ def test_every_random_salty_water_is_certified(
     assert not failed, "\n".join([f"{len(failed)} of {COUNT} waters failed:", *failed[:5]])
 
 
+def test_a_water_of_neutral_species_alone_is_certified() -> None:
+    """Ionic strength 1.6e-7 beside 3.7 mmol/L of mercury hydroxide: sums of unlike sizes."""
+    water = {
+        "Ca+2": 1.1402058973404794e-09, "Cl-": 7.146662097170147e-08,
+        "Cr+3": 9.692282507766287e-06, "Hg+2": 0.003703821383457356,
+        "H+": -0.007436650428228835,
+    }  # fmt: skip
+    state = equilibrate(load_system(activity="sit"), water)
+    assert state.ionic_strength[0] < 1e-3 * state.species_mol_per_l[0].sum()
+
+
 def test_two_starts_of_salty_waters_agree(
     salty: tuple[System, FloatArray, EquilibriumState],
 ) -> None:
