@@ -181,6 +181,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument("--chart", type=Path, help="draw the sweep there, as SVG")
     parser.add_argument("--no-sweep", action="store_true", help="only the floors")
     options = parser.parse_args(arguments)
+    if options.no_sweep and (options.csv or options.chart):
+        parser.error("--csv and --chart need the sweep: leave --no-sweep out")
     system = the_system()
     totals = waters_of(system, STATES)
     speed = speed_of(system, totals)

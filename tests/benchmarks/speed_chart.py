@@ -46,8 +46,7 @@ class Panel:
             y = self.y(10.0**decade)
             yield f'<path d="M{self.left} {y:.1f}h{WIDTH}" class="grid"/>'
             yield text(self.left - 6, y + 4, f"{10**decade:,}".replace(",", " "), "end")
-        ticks = self.rows if len(self.rows) <= 8 else self.rows[::2]
-        for row in ticks:
+        for row in self.rows:
             yield text(self.x(float(row["value"])), TOP + HEIGHT + 17, row["value"])
         for column, colour in SERIES.values():
             places = [

@@ -16,7 +16,7 @@ from mpmath import mp, mpf
 
 from chemistry import EquilibriumState, Solid, Species, System
 from chemistry.formula import charge_of
-from tests.chemistry.oracle_activity import Coefficients
+from tests.chemistry.oracle_activity import Coefficients, Evaluated
 
 DIGITS = 50
 GUARD_DIGITS = 15
@@ -52,7 +52,8 @@ class Exact:
     @property
     def ph(self) -> mpf:
         """-log10 of the proton activity."""
-        return -self.ln_activity["H+"] / mp.log(10)
+        with mp.workdps(DIGITS + GUARD_DIGITS):
+            return -self.ln_activity["H+"] / mp.log(10)
 
 
 @dataclass(frozen=True)
@@ -140,10 +141,12 @@ class Water:
                 slopes[row, index[c]] = slopes[index[c], row] = mpf(n)
                 errors[index[c]] += n * unknowns[row]
                 scale[index[c]] += abs(n * unknowns[row])
-        self._additions(unknowns, errors, slopes)
+        self._additions(unknowns, seen, errors, slopes)
         return errors, slopes, scale
 
-    def _additions(self, unknowns: Sequence[mpf], errors: mp.matrix, slopes: mp.matrix) -> None:
+    def _additions(
+        self, unknowns: Sequence[mpf], seen: Evaluated, errors: mp.matrix, slopes: mp.matrix
+    ) -> None:
         """Totals with what is added, and the conditions held, else that nothing is added."""
         index, held = self.index, self.held
         for at, way in ((self.at_dose, held.titrant), (self.at_co2, CARBON_DIOXIDE)):
@@ -161,7 +164,10 @@ class Water:
             gas = next(s for s in self.species if s.name == "CO2(aq)")
             ln_a = mp.log(mpf(held.pco2_atm)) + self.ln_k_at(LOG10_HENRY_CO2, ENTHALPY_HENRY_CO2)
             slopes[self.at_co2, self.at_co2] = mpf(0)
-            errors[self.at_co2] = self.ln_activity_product(gas, unknowns) - ln_a
+            ln_gas = self.ln_activity_product(gas, unknowns) + gas.water * seen.ln_water
+            errors[self.at_co2] = ln_gas - ln_a
+            for k, by_water in enumerate(seen.by_water):
+                slopes[self.at_co2, self.at_y + k] = gas.water * by_water
             for c, n in gas.parts.items():
                 slopes[self.at_co2, index[c]] = mpf(n)
 
