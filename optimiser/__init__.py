@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from optimiser.assessment import assess as assess
     from optimiser.errors import NoPlan as NoPlan
+    from optimiser.explain import explain_plan as explain_plan
     from optimiser.floors import explain_floors as explain_floors
     from optimiser.planning import plan as plan
     from optimiser.purchasing import purchase as purchase
@@ -21,12 +22,13 @@ _HOMES = {
     "NoPlan": "optimiser.errors",
     "assess": "optimiser.assessment",
     "explain_floors": "optimiser.floors",
+    "explain_plan": "optimiser.explain",
     "load_site": "optimiser.site_reader",
     "plan": "optimiser.planning",
     "purchase": "optimiser.purchasing",
 }
 
-__all__ = ["NoPlan", "assess", "explain_floors", "load_site", "plan", "purchase"]
+__all__ = ["NoPlan", "assess", "explain_floors", "explain_plan", "load_site", "plan", "purchase"]
 
 
 def __getattr__(name: str) -> object:

@@ -267,6 +267,24 @@ def _floors(options: argparse.Namespace) -> int:
     return DONE
 
 
+def _explain(options: argparse.Namespace) -> int:
+    import optimiser
+    from optimiser.explain import explain_plan
+    from optimiser.render_explain import explain_text
+    from optimiser.render_no_plan import no_plan_data, no_plan_text
+
+    site = _load(options)
+    try:
+        found = explain_plan(site, progress=_progress())
+    except optimiser.NoPlan as none:
+        _clear_progress()
+        _print(no_plan_data(site.name, none), options.json, no_plan_text)
+        return NO_PLAN
+    _clear_progress()
+    _print(found.to_dict(), options.json, explain_text)
+    return DONE
+
+
 def _print(
     data: Mapping[str, Any], as_json: bool, text: Callable[[Mapping[str, Any], Ink], str]
 ) -> None:
@@ -294,6 +312,7 @@ def _new(options: argparse.Namespace) -> int:
 _COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
     "plan": _plan,
     "assess": _assess,
+    "explain": _explain,
     "curves": _curves,
     "floors": _floors,
     "check": _check,

@@ -89,6 +89,7 @@ def build_parser() -> argparse.ArgumentParser:
     commands = parser.add_subparsers(dest="command", metavar="COMMAND", parser_class=_Parser)
     _add_plan(commands)
     _add_assess(commands)
+    _add_explain(commands)
     _add_curves(commands)
     _add_floors(commands)
     _add_command(commands, "check", "read a site and report every problem found", "check site.yaml")
@@ -162,6 +163,14 @@ def _add_assess(commands: _Commands) -> None:
     parser.add_argument(
         "--trim", choices=("auto", "none"), default="auto",
         help="whether the discharge pH is trimmed where it needs it (default: auto)",
+    )  # fmt: skip
+    _add_json(parser)
+
+
+def _add_explain(commands: _Commands) -> None:
+    parser = _add_command(
+        commands, "explain", "tell what binds a plan, where each dose goes and why the rest lost",
+        "explain catalogs/sites/DEMO/site.yaml",
     )  # fmt: skip
     _add_json(parser)
 

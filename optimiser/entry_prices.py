@@ -86,7 +86,7 @@ def _entry(plan: Standing, offer: Offer, known: Sequence[Track]) -> Data:
     if not bids:
         return {**row, "why": f"{row['why']}, and no recipe that uses it is known to comply"}
     bids.sort(key=lambda bid: -bid.price_per_t)
-    # where no price pays as the points stand, the cheapest with the offer for nothing may move there
+    # where no price pays as the points stand, the cheapest at a price of 0 may still move there
     free = min(bids, key=lambda bid: -bid.price_per_t * bid.tonnes)
     tried = dict.fromkeys([*bids[:RECIPES_TRIED], *([free] if bids[0].price_per_t <= 0.0 else [])])
     return {**row, **_rise(plan, offer, list(tried))}
