@@ -390,7 +390,9 @@ def _unmodelled(analysis: WaterAnalysis) -> dict[str, float]:
 def _supersaturation(system: System, state: EquilibriumState) -> dict[str, float]:
     """Solids of the full system above saturation in a state found without them."""
     possible = (system.solid_formation != 0.0) @ (state.totals[0] == 0.0).astype(float) == 0.0
-    index = (system.solid_formation @ state.log_activity[0] + system.solid_ln_k) / np.log(10.0)
+    ln_water = float(state.kernel.model.ln_water(state.surroundings)[0])
+    ln_index = system.solid_formation @ state.log_activity[0] + system.solid_ln_k
+    index = (ln_index + ln_water * system.solid_water) / np.log(10.0)
     above = [
         (float(index[i]), name)
         for i, name in enumerate(system.solid_names)
