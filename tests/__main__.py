@@ -5,12 +5,15 @@ The exit code is the first one that is not zero; pytest runs last, so its closin
 
 from __future__ import annotations
 
+import os
 import subprocess
 import sys
 from pathlib import Path
 
 ROOT = Path(__file__).resolve().parent.parent
 WORKERS = "2"  # processes that share the tests: the suite is planned for two cores
+# the matrices are far too small for threads of the linear algebra to help: they only wait
+ENVIRONMENT = {"OPENBLAS_NUM_THREADS": "1", **os.environ}
 CHECKS = (
     ("ruff", "format", "--check", "."),
     ("ruff", "check", "."),
@@ -26,7 +29,9 @@ def main(arguments: list[str]) -> int:
         sys.stderr.write(f"== {' '.join(command)}\n")
         sys.stderr.flush()
         codes.append(
-            subprocess.run([sys.executable, "-m", *command], cwd=ROOT, check=False).returncode
+            subprocess.run(
+                [sys.executable, "-m", *command], cwd=ROOT, env=ENVIRONMENT, check=False
+            ).returncode
         )
     for command, code in zip(commands, codes, strict=True):
         if code:
