@@ -132,7 +132,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument("--count", type=int, default=100_000)
     parser.add_argument("--seed", type=int, default=FIXED_SEED)
     parser.add_argument("--fresh", action="store_true", help="draw a seed nobody has seen")
-    parser.add_argument("--activity", default="davies", help="davies or ideal")
+    parser.add_argument("--activity", default="davies", help="davies, sit or ideal")
     options = parser.parse_args(arguments)
     seed = secrets.randbelow(2**31) if options.fresh else options.seed
     system = load_system(activity=options.activity)

@@ -3,17 +3,19 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 from numpy.typing import NDArray
 
-from chemistry import EquilibriumState
+from chemistry import EquilibriumState, System
 from chemistry.formula import charge_of
+from tests.chemistry.oracle_activity import WATER_MOL_PER_KG, Coefficients
 
 FloatArray = NDArray[np.float64]
 
 LN10 = float(np.log(10.0))
-DAVIES_A_25_DEGC = 0.509
+A_25_DEGC = 0.509
 
 
 @dataclass(frozen=True)
@@ -55,6 +57,8 @@ def certify(state: EquilibriumState) -> Certificate:
         there[:, column["H+"]] = True
     whole = (~there).astype(float) @ (stoichiometry != 0.0).T == 0.0
     expected = state.log_activity @ stoichiometry.T + ln_k - ln_gamma(state, charges)
+    ln_aw = ln_water(state, charges)[:, None]
+    expected += ln_aw * np.array([0.0] * len(column) + [s.water for s in system.species])
     known = whole & (m > 1e-280)
     wrong = np.where(known, np.abs(np.log(np.maximum(m, 1e-300)) - expected), 0.0)
     sums = np.where(whole, m, 0.0) @ stoichiometry + amounts @ solid
@@ -63,6 +67,7 @@ def certify(state: EquilibriumState) -> Certificate:
     strength = 0.5 * np.where(whole, m, 0.0) @ charges**2
     log10_ks = np.array([s.log10_k for s in system.solids])
     si = state.log_activity @ solid.T / LN10 + log10_ks
+    si += ln_aw / LN10 * np.array([s.water for s in system.solids])
     si = np.where((~there).astype(float) @ (solid != 0.0).T > 0.0, -np.inf, si)
     present = amounts > 0.0
     return Certificate(
@@ -76,10 +81,38 @@ def certify(state: EquilibriumState) -> Certificate:
 
 
 def ln_gamma(state: EquilibriumState, charges: FloatArray) -> FloatArray:
-    """Natural log activity coefficients at 25 C, (n, species): Davies frozen above I = 0.5."""
+    """Natural log activity coefficients at 25 C, (n, species).
+
+    By specific ion interaction, or by Davies frozen above I = 0.5.
+    """
     if state.system.activity == "ideal":
         return np.zeros((state.totals.shape[0], charges.size))
     assert state.system.temperature_degc == 25.0
+    a_ln, squares = A_25_DEGC * LN10, charges**2
+    if state.system.activity == "sit":
+        m = state.species_mol_per_l
+        root = np.sqrt(0.5 * m @ squares)
+        term = root / (1.0 + 1.5 * root)
+        return m @ interactions_of(state.system) - a_ln * term[:, None] * squares
     held = np.minimum(state.ionic_strength, 0.5)
     term = np.sqrt(held) / (1.0 + np.sqrt(held)) - 0.3 * held
-    return -DAVIES_A_25_DEGC * LN10 * term[:, None] * charges**2
+    return -a_ln * term[:, None] * squares
+
+
+def ln_water(state: EquilibriumState, charges: FloatArray) -> FloatArray:
+    """Natural log activity of water at 25 C, (n,): by Gibbs-Duhem with interactions, else 0."""
+    if state.system.activity != "sit":
+        return np.zeros(state.totals.shape[0])
+    m = state.species_mol_per_l
+    x = 1.5 * np.sqrt(0.5 * m @ charges**2)
+    screening = 2.0 * A_25_DEGC * LN10 / 1.5**3 * (1.0 + x - 2.0 * np.log1p(x) - 1.0 / (1.0 + x))
+    pairs = 0.5 * np.einsum("ni,ni->n", m @ interactions_of(state.system), m)
+    return -(m.sum(axis=1) - screening + pairs) / float(WATER_MOL_PER_KG)
+
+
+@cache
+def interactions_of(system: System) -> FloatArray:
+    """Interaction coefficients of all species in natural-log units, as the oracle reads them."""
+    names = system.species_names
+    charges = [charge_of(c) for c in system.components] + [s.charge for s in system.species]
+    return np.array(Coefficients(system, names, charges, []).pairs, dtype=float)
