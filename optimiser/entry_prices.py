@@ -75,8 +75,9 @@ def _entry(plan: Standing, offer: Offer, known: Sequence[Track]) -> Data:
         "price_per_t": offer.price_per_t, "freight_per_t": offer.freight_per_t,
         "entry_price_per_t": None, "bracket_low": None, "bracket_high": None, "verified": False,
         "recipe": None, "at_price_0_dearer_by": None, "in_plan": False,
+        "allowed": offer.reagent in evaluator.plant.index,
     }  # fmt: skip
-    if offer.reagent not in evaluator.plant.index:
+    if not row["allowed"]:
         return {**row, "why": "its reagent is not allowed at this site"}
     in_plan = _bid(evaluator, offer, plan.place, plan.total) is not None
     row["in_plan"] = in_plan

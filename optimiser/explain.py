@@ -18,7 +18,7 @@ from optimiser.entry_prices import entry_prices
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluator, Place
 from optimiser.ledger import dose_ledger
 from optimiser.marginal import binding_otherwise, marginal_costs
-from optimiser.nearby import NEAR_STEPS, Standing, repolish, stand, worst_ratios
+from optimiser.nearby import NEAR_STEPS, RESOLUTION, Standing, repolish, stand, worst_ratios
 from optimiser.planning import find
 from optimiser.polish import Track
 from optimiser.quality import UNREACHED_RATIO
@@ -132,7 +132,8 @@ def explain_plan(site: Site, progress: Callable[[str], None] | None = None) -> E
             "reagents": list(plan.recipe), "total": plan.total, "doses": _doses(plan),
             "compliant": plan.track.feasible, "purchases": purchases,
         },
-        "scope": LOCAL, "marginal_costs": marginal, "also_at_its_end": binding_otherwise(plan),
+        "scope": LOCAL, "resolution_per_year": RESOLUTION * plan.total,
+        "marginal_costs": marginal, "also_at_its_end": binding_otherwise(plan),
         "ledger": [
             one.to_dict() for one in dose_ledger(evaluator, plan.place.seen, plan.place.point)
         ],
@@ -250,7 +251,8 @@ def _missing(plan: Standing, track: Track) -> Data:
     return {
         "kind": "safety rule" if is_rule else "cannot meet", "verified": True, "recipe": recipe,
         "difference_per_year": None, "difference_by_cause": {},
-        "why": f"no recipe with it was found to comply; the nearest {_missed(label, ratio)}",
+        "why": "no recipe with it was found to comply; the nearest "
+        + _missed(label, ratio, is_rule),
     }  # fmt: skip
 
 
@@ -261,13 +263,15 @@ def _alone(evaluator: Evaluator, findings: Findings, name: str) -> str:
         return "not tried alone"
     if track.feasible:
         return "complies alone"
-    label, ratio, _ = _worst_miss(evaluator, track.place)
-    return f"alone it {_missed(label, ratio)}"
+    label, ratio, is_rule = _worst_miss(evaluator, track.place)
+    return f"alone it {_missed(label, ratio, is_rule)}"
 
 
-def _missed(label: str, ratio: float) -> str:
+def _missed(label: str, ratio: float, is_rule: bool) -> str:
     if ratio >= UNREACHED_RATIO - 1e-6:
         return "does not reach its set point"
+    if is_rule:
+        return f"breaks the rule on {label}"
     if label == PH_WINDOW:
         return "leaves the pH window and nothing trims it back"
     times = math.exp(ratio)

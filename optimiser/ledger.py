@@ -25,6 +25,7 @@ Data = dict[str, Any]
 PROTON = "H+"
 FREE_ACID, FREE_BASE, ALKALINITY = "free acid", "free base", "alkalinity"
 WEAK, SOLID, COMPLEX = "weak acids and bases", "solid", "complexes"
+TOOK_UP_ACID = "took up acid, dissolved"
 LEFT, OTHER, UNREACTED, SPARE = "left dissolved", "another dose", "unreacted", "other states"
 
 # What a family is bought for; iron is bought for its own metal.
@@ -148,7 +149,8 @@ class _Accountant:
         if self.is_metal[active]:
             return LEFT, name
         if component != PROTON:
-            return LEFT, name
+            acid = row[self.plant.system.index[PROTON]] > 0.0
+            return (TOOK_UP_ACID if acid else LEFT), name
         if name == PROTON:
             return (FREE_ACID, PROTON) if sign < 0.0 else (LEFT, PROTON)
         others = [n for n, v in zip(self.names, row, strict=True) if v != 0.0 and n != PROTON]

@@ -23,6 +23,8 @@ from optimiser.solver import SolverPort
 RADIUS = 0.05
 STEPS = 6
 NEAR_STEPS = 14
+STANDING_RADII = (0.05, 0.01, 0.05)
+RESOLUTION = 2e-5  # share of the cost that a polish stops at; smaller differences say nothing
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -51,9 +53,11 @@ class Standing:
 
 def stand(evaluator: Evaluator, solver: SolverPort, track: Track) -> Standing:
     """Polish a plan once more, so that what is polished from it differs by the change alone."""
-    again = repolish(evaluator, track.place, solver)
-    better = again.feasible and again.total <= track.total
-    return Standing(evaluator=evaluator, solver=solver, track=again if better else track)
+    for radius in STANDING_RADII:
+        again = repolish(evaluator, track.place, solver, radius=radius, steps=NEAR_STEPS)
+        if again.feasible and again.total <= track.total:
+            track = again
+    return Standing(evaluator=evaluator, solver=solver, track=track)
 
 
 def changed(evaluator: Evaluator, site: Site) -> Evaluator:

@@ -51,7 +51,11 @@ def _limits(data: Data, ink: Ink) -> list[str]:
         lines += paragraph("No limit binds: 1 % off any of them changes nothing near the plan.")
     if data["also_at_its_end"]:
         lines += paragraph(f"Also at its end: {'; '.join(data['also_at_its_end'])}.")
-    return lines + paragraph(f"All of it is {data['scope']}.")
+    least = money(max(data["resolution_per_year"], 0.01))
+    return lines + paragraph(
+        f"All of it is {data['scope']}. Differences below {currency} {least} a year are finer than "
+        "polishing goes."
+    )
 
 
 def _limit_name(row: Data) -> str:
@@ -122,14 +126,19 @@ def _reagent(row: Data, currency: str) -> str:
 def _offers(data: Data, ink: Ink) -> list[str]:
     currency = data["site"]["currency"]
     lines = [ink.heading(f"Why the other offers lost, and their entry price ({currency}/t)")]
-    if not data["offers"]:
-        return lines + paragraph("Every offer is bought.")
+    rivals = [row for row in data["offers"] if row["allowed"]]
+    others = [row for row in data["offers"] if not row["allowed"]]
+    if others:
+        names = ", ".join(f"{row['offer']} ({_names([row['reagent']])})" for row in others)
+        lines += paragraph(f"Of reagents that the site does not allow: {names}.")
+    if not rivals:
+        return lines + paragraph("No other offer of an allowed reagent.")
     rows = [
         [
             row["offer"], row["reagent"].replace("_", " "), number(row["price_per_t"], 4),
             _entry(row), _bracket(row), _why(row),
         ]
-        for row in data["offers"]
+        for row in rivals
     ]  # fmt: skip
     headers = ["offer", "reagent", "price\nnow", "entry\nprice", "bracket", "why it lost"]
     lines += table(headers, rows, text_columns=(0, 1, 5))
