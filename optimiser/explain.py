@@ -214,9 +214,7 @@ def _best_with(plan: Standing, findings: Findings, name: str) -> Track | None:
         again = repolish(plan.evaluator, best.place, plan.solver, steps=NEAR_STEPS)
         return again if again.feasible and again.total <= best.total else best
     nearest = min(mine, key=lambda track: track.violation)
-    again = repolish(
-        plan.evaluator, nearest.place, plan.solver, steps=NEAR_STEPS, radius=0.2, patient=True
-    )
+    again = repolish(plan.evaluator, nearest.place, plan.solver, steps=NEAR_STEPS, radius=0.2)
     return again if again.feasible or again.violation < nearest.violation else nearest
 
 

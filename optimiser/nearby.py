@@ -75,13 +75,13 @@ def changed(evaluator: Evaluator, site: Site) -> Evaluator:
 
 def repolish(
     evaluator: Evaluator, place: Place, solver: SolverPort, *, steps: int = STEPS,
-    radius: float = RADIUS, patient: bool = False,
+    radius: float = RADIUS,
 ) -> Track:  # fmt: skip
-    """Polish from an evaluated point. ``patient`` puts what is missed before any cost."""
+    """Polish from an evaluated point."""
     point: Points = place.seen.points.take([place.point])
     return polish(
         evaluator, point, solver, bounds=set_point_bounds(evaluator), steps=steps, radius=radius,
-        rival=None if patient else np.inf, near=[place],
+        rival=np.inf, near=[place],
     )[0]  # fmt: skip
 
 

@@ -112,7 +112,8 @@ def _reagents(data: Data, ink: Ink) -> list[str]:
 def _reagent(row: Data, currency: str) -> str:
     text = f"{_names([row['reagent']])}: {row['alone']}; {row['why']}"
     if row["recipe"]:
-        text += f" (best recipe with it: {_names(row['recipe'])})"
+        which = "nearest" if row["difference_per_year"] is None else "best"
+        text += f" ({which} recipe with it: {_names(row['recipe'])})"
     if row["difference_per_year"] is not None:
         parts = ", ".join(
             f"{cause} {_signed(value)}"

@@ -36,6 +36,13 @@ WEAK = ("NA-30", "caustic_soda", 30, 1.33, 330, "t", 55, 0.5)
 BULK = ("NA-XL", "caustic_soda", 50, 1.525, 300, "t", 20, 60.0)
 
 
+# sulfide needs a higher pH than this site's set points allow
+NO_WAY = {
+    "treatment": {
+        "reagents": ["caustic_soda", "sodium_hydrosulfide"], "sulfide_least_ph": 10.9,
+        "equipment_cost_per_year": {"hydrated_lime": None},
+    },
+}  # fmt: skip
 LOOSE = {
     "limits": {"own": [{"parameter": "Cd", "daily_mg_per_l": 5.0, "source": "invented"}]},
 }  # fmt: skip
@@ -173,6 +180,16 @@ def test_a_rule_that_is_broken_is_named_as_one() -> None:
     # sulfide dosed alone meets the acid feed
     evaluator, findings = find(small_site(SULFIDE, {"treatment": {"most_reagents": 1}}, LOOSE))
     assert _alone(evaluator, findings, "sodium_hydrosulfide").startswith("alone it breaks the rule")
+
+
+def test_a_reagent_that_no_recipe_complies_with_gets_no_price_but_a_reason() -> None:
+    site = small_site(NO_WAY)
+    found = explain_plan(site)
+    row = next(r for r in found.data["reagents"] if r["reagent"] == "sodium_hydrosulfide")
+    assert row["difference_per_year"] is None
+    assert "no recipe with it was found to comply" in row["why"]
+    assert offer_row(found, "HS-30")["entry_price_per_t"] is None
+    assert "nearest recipe with it" in " ".join(explain_text(found.data).split())
 
 
 # -- faces ----------------------------------------------------------------------------------------
