@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+import logging
 from dataclasses import replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from optimiser.errors import NoPlan
+from optimiser.errors import NoPlan, SolverFault
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator, Place
 from optimiser.held_up import held_up_by
 from optimiser.points import END_TEXT, Points
@@ -19,6 +20,8 @@ from optimiser.search import Findings
 from optimiser.solver import SolverPort
 
 FloatArray = NDArray[np.float64]
+
+LOG = logging.getLogger(__name__)
 
 SMALL_MOVES = (0.05, 0.2)  # of a dose; twice that in pH
 NEAREST = 4  # recipes that are polished to the nearest miss
@@ -68,11 +71,16 @@ def _nearest_miss(
 ) -> tuple[Evaluation, int]:
     """Polish the least misses seen to where the largest miss is least."""
     ranked = sorted(findings.best.values(), key=lambda track: track.violation)[:NEAREST]
-    tracks = polish(
-        evaluator, Points.join([track.point for track in ranked]), solver,
-        bounds=set_point_bounds(evaluator), near=[track.place for track in ranked],
-        rival=None,
-    )  # fmt: skip
+    try:
+        tracks = polish(
+            evaluator, Points.join([track.point for track in ranked]), solver,
+            bounds=set_point_bounds(evaluator), near=[track.place for track in ranked],
+            rival=None,
+        )  # fmt: skip
+    except SolverFault as fault:
+        # the answer is that there is no plan; without the polish its reasons are only less sharp
+        LOG.warning("the nearest miss was not polished: %s", fault)
+        tracks = ranked
     best = min(tracks, key=lambda track: track.violation)
     return best.place.seen, best.place.point
 
