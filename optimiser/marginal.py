@@ -14,7 +14,7 @@ import numpy as np
 
 from optimiser.costing import DISPOSAL
 from optimiser.nearby import Standing, changed, repolish, worst_ratios
-from optimiser.polish_step import build_step
+from optimiser.polish_step import build_step, cost_unit, in_cost_units
 from optimiser.quality import DAILY, LOAD, MONTHLY
 from optimiser.quality_slopes import RULE
 from optimiser.recipes import set_point_bounds
@@ -98,14 +98,15 @@ def _check_prices(plan: Standing) -> dict[int, float]:
     model = build_step(
         evaluator, plan.place.seen, plan.place.point, MODEL_RADIUS, set_point_bounds(evaluator)
     )
-    report = plan.solver.solve(model)
+    unit = cost_unit(plan.place.seen, plan.place.point)
+    report = plan.solver.solve(in_cost_units(model, unit))
     if report.termination.has_solution and model.integers:
         report = plan.solver.solve_with_integers_fixed(model, report.values)
     prices: dict[int, float] = {}
     for key, price in report.marginal_values.items():
         words = key.split()
         if words[0] == "check":
-            prices[int(words[1])] = prices.get(int(words[1]), 0.0) + price
+            prices[int(words[1])] = prices.get(int(words[1]), 0.0) + price * unit
     return prices
 
 

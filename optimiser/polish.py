@@ -14,7 +14,14 @@ from numpy.typing import NDArray
 
 from optimiser.evaluation import Evaluator, Place
 from optimiser.points import Points
-from optimiser.polish_step import BACK_OFF, PENALTY, Bounds, build_step
+from optimiser.polish_step import (
+    BACK_OFF,
+    PENALTY,
+    Bounds,
+    build_step,
+    cost_unit,
+    in_cost_units,
+)
 from optimiser.solver import SolverPort
 
 FloatArray = NDArray[np.float64]
@@ -28,7 +35,7 @@ DEARER_EARLY, DEARER_LATE = 1.2, 1.06
 HOPELESS_RATIO = 5e-3
 SHRINKS_BY = 0.8
 HOPELESS_RADIUS = 5e-3
-MISS_FIRST = 100.0 * PENALTY
+MISS_FIRST = 1e4 * PENALTY
 RESTORING_STEPS = 4
 RESTORING_RADIUS = 0.02
 
@@ -182,9 +189,9 @@ def step(
     """
     seen, row = track.place.seen, track.place.point
     model = build_step(
-        evaluator, seen, row, track.radius, bounds, inward=inward, penalty=track.penalty
+        evaluator, seen, row, track.radius, bounds, inward=inward, miss_only=track.patient
     )
-    report = solver.solve(model)
+    report = solver.solve(in_cost_units(model, cost_unit(seen, row)))
     if not report.termination.has_solution:
         return None
     point = seen.points.take([row])

@@ -42,7 +42,7 @@ class Bounds:
 
 def build_step(
     evaluator: Evaluator, seen: Evaluation, row: int, radius: float, bounds: Bounds,
-    *, inward: float = 0.0, penalty: float = PENALTY,
+    *, inward: float = 0.0, miss_only: bool = False,
 ) -> Model:  # fmt: skip
     """Build the mixed-integer model of one step.
 
@@ -51,19 +51,36 @@ def build_step(
     With moves ``v`` of set point and paced doses, every near check asks
     ``ratio + slope . v <= -back-off + miss``; the controller's, the trim's and the sludge's amounts
     are at least their linearised values at every end. Costs are the purchasing block, disposal by
-    the tariff of the point's sludge class, burden charges and a penalty on ``miss``.
+    the tariff of the point's sludge class, burden charges and a penalty on ``miss``; with
+    ``miss_only`` nothing but the miss counts.
     """
     model = Model("polish step")
     moves = _add_moves(model, evaluator, seen.points, row, radius, bounds)
     model.add_variable("miss", high=60.0)
+    _add_checks(model, seen, row, moves, BACK_OFF + inward)
+    if miss_only:
+        model.add_cost("miss", Expression({"miss": 1.0}))
+        return model
     total = float(seen.total[row])
     scale = total if np.isfinite(total) else 1e6
-    model.add_cost("miss", Expression({"miss": penalty * scale}))
-    _add_checks(model, seen, row, moves, BACK_OFF + inward)
+    model.add_cost("miss", Expression({"miss": PENALTY * scale}))
     demand = _add_amounts(model, evaluator, seen, row, moves)
     _add_purchases(model, evaluator, seen, row, radius, demand)
     _add_disposal(model, evaluator, seen, row, moves)
     _add_burden(model, evaluator, seen, row, moves)
+    return model
+
+
+def cost_unit(seen: Evaluation, row: int) -> float:
+    """A thousandth of the point's cost: costs in this unit are of a size that solvers like."""
+    total = float(seen.total[row])
+    return total / 1000.0 if np.isfinite(total) and total > 0.0 else 1.0
+
+
+def in_cost_units(model: Model, unit: float) -> Model:
+    """Count a model's costs in another unit, in place; returns the model."""
+    for cause, amount in model.costs.items():
+        model.costs[cause] = amount.times(1.0 / unit)
     return model
 
 
