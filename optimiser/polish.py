@@ -31,7 +31,8 @@ FIRST_RADIUS = 0.5
 LAST_RADIUS = 2e-4
 MOST_STEPS = 14
 PATIENCE = 3
-DEARER_EARLY, DEARER_LATE = 1.12, 1.05
+REST_EARLY, REST_LATE = 2, 4  # steps after which dear candidates are rested
+DEARER_EARLY, DEARER_LATE = 1.12, 1.04
 HOPELESS_RATIO = 5e-3
 SHRINKS_BY = 0.8
 HOPELESS_RADIUS = 5e-3
@@ -175,8 +176,8 @@ def _rest_dear(tracks: list[Track], rival: float) -> None:
     """Rest candidates that fall behind: far dearer early on, a little dearer later."""
     best = min([rival, *(t.total for t in tracks if t.feasible)])
     for track in tracks:
-        if track.alive and track.steps >= PATIENCE:
-            late = track.steps >= 2 * PATIENCE
+        if track.alive and track.steps >= REST_EARLY:
+            late = track.steps >= REST_LATE
             track.alive = track.total <= (DEARER_LATE if late else DEARER_EARLY) * best
 
 
