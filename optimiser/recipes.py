@@ -28,6 +28,7 @@ BULK_SHARES = (0.3, 0.6, 0.85, 0.97)
 SHORT_SHARES = (0.5, 0.9)
 SET_POINT_STEP = 0.5
 SHORT_SET_POINT_STEP = 0.75
+STARTS_PER_RECIPE = 3
 
 
 @dataclass(frozen=True, slots=True)
@@ -191,3 +192,15 @@ def grid(
         np.array(doses), np.full(len(ph), controller, dtype=np.int64), np.array(ph),
         np.array(trims, dtype=np.int64),
     )  # fmt: skip
+
+
+def basins(ph: FloatArray, merit: FloatArray) -> list[int]:
+    """Rows of the best local minima of merit over the set point, one per basin."""
+    levels = np.unique(ph)
+    rows = [int(np.flatnonzero(ph == p)[np.argmin(merit[ph == p])]) for p in levels]
+    values = merit[rows]
+    padded = np.concatenate([[np.inf], values, [np.inf]])
+    minima = (padded[1:-1] <= padded[:-2]) & (padded[1:-1] <= padded[2:]) & np.isfinite(values)
+    picked = [rows[k] for k in np.flatnonzero(minima)]
+    picked.sort(key=lambda k: float(merit[k]))
+    return picked[:STARTS_PER_RECIPE]

@@ -20,6 +20,7 @@ from optimiser.polish import Track, polish
 from optimiser.polish_step import PENALTY, Bounds
 from optimiser.recipes import (
     Recipe,
+    basins,
     grid,
     make_recipe,
     recipe_of,
@@ -30,14 +31,15 @@ from optimiser.recipes import (
 from optimiser.solver import SolverPort
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 
-STARTS_PER_RECIPE = 3
 POLISHED_AT_ONCE = 40
 KEPT_PARTS = 10
 SETTLE_STEP = 0.01
 SETTLED = 2
 SETTLE_ROUNDS = 12
 GRID_CHUNK = 600
+FAR_RATIO, NEAR_RATIO, ENOUGH_NEAR = 1.5, 0.5, 4
 
 
 @dataclass(slots=True)
@@ -173,7 +175,7 @@ class Search:
                 rows = slice(begin, begin + len(points))
                 begin += len(points)
                 self.findings.recipes_examined.add(self._names(recipe))
-                found = _basins(points.ph, merit[rows])
+                found = basins(points.ph, merit[rows])
                 starts += [Place(seen, rows.start + k) for k in found]
         return starts
 
@@ -194,7 +196,7 @@ class Search:
         seen = self.evaluator.evaluate(joined, near=starts)
         self.findings.cells_examined += len(joined)
         self.findings.note_values(seen)
-        order = np.argsort(self._merit(seen), kind="stable")
+        order = self._worth_polishing(seen, np.argsort(self._merit(seen), kind="stable"))
         for begin in range(0, order.size, POLISHED_AT_ONCE):
             if self._late():
                 return
@@ -209,6 +211,16 @@ class Search:
             for track in tracks:
                 self.findings.cells_examined += track.steps
                 self.findings.keep(recipe_of(self.evaluator.plant, track.point, 0), track)
+
+    def _worth_polishing(self, seen: Evaluation, order: IntArray) -> IntArray:
+        """Leave starts that miss by far where enough others are near; they are kept as they are."""
+        far = seen.violation[order] > FAR_RATIO
+        if np.count_nonzero(seen.violation < NEAR_RATIO) < ENOUGH_NEAR or not far.any():
+            return order
+        for row in order[far]:
+            recipe = recipe_of(self.evaluator.plant, seen.points, int(row))
+            self.findings.keep(recipe, Track(Place(seen, int(row))))
+        return order[~far]
 
     def _best_total(self) -> float:
         found = self.findings.feasible
@@ -373,18 +385,6 @@ def _moves(point: Points, bounds: Bounds) -> Points | None:
     return Points(
         np.array(doses), np.repeat(point.controller, n), np.array(ph), np.repeat(point.trim, n)
     )
-
-
-def _basins(ph: FloatArray, merit: FloatArray) -> list[int]:
-    """Rows of the best local minima of merit over the set point, one per basin."""
-    levels = np.unique(ph)
-    rows = [int(np.flatnonzero(ph == p)[np.argmin(merit[ph == p])]) for p in levels]
-    values = merit[rows]
-    padded = np.concatenate([[np.inf], values, [np.inf]])
-    minima = (padded[1:-1] <= padded[:-2]) & (padded[1:-1] <= padded[2:]) & np.isfinite(values)
-    picked = [rows[k] for k in np.flatnonzero(minima)]
-    picked.sort(key=lambda k: float(merit[k]))
-    return picked[:STARTS_PER_RECIPE]
 
 
 def _chunks(grids: Sequence[tuple[Recipe, Points]], size: int) -> list[list[tuple[Recipe, Points]]]:
