@@ -18,7 +18,6 @@ from chemistry.batch import new_batch
 from chemistry.newton import finish
 from chemistry.state import (
     EquilibriumState,
-    Sensitivity,
     certified_or_solved,
     equilibrate,
     kernel_of,
@@ -277,42 +276,3 @@ def _inside(
     middle = np.where(np.isfinite(high), 0.5 * (low + high), ceiling)
     bisected = np.where(miss < 0, middle, 0.5 * (low + np.minimum(high, old)))
     return np.where(outside & (np.abs(new - old) > 0), bisected, new)
-
-
-def at_held_ph(free: Sensitivity, titrant_column: int) -> tuple[Sensitivity, FloatArray]:
-    """Turn derivatives of free states into derivatives with the pH held by a titrant.
-
-    Parameters
-    ----------
-    free
-        Sensitivity along k directions, one of which is the titrant.
-    titrant_column
-        Which of the k.
-
-    Returns
-    -------
-    Sensitivity, ndarray (n, k)
-        Derivatives at held pH along every direction, and the change of the titrant dose.
-
-    Notes
-    -----
-    ``d pH = pH_t dt + pH_d dd = 0`` gives ``dd/dt = -pH_t / pH_d``.
-    """
-    by_dose = free.ph[:, titrant_column]
-    safe = np.where(by_dose == 0.0, np.inf, by_dose)
-    dose = -free.ph / safe[:, None]
-    dose[:, titrant_column] = 0.0
-
-    def held(array: FloatArray) -> FloatArray:
-        column = array[:, :, titrant_column]
-        return array + column[:, :, None] * dose[:, None, :]
-
-    log_activity = (
-        free.ln_activity + free.ln_activity[:, titrant_column][:, None, :] * dose[:, :, None]
-    )
-    return (
-        Sensitivity(
-            held(free.dissolved), np.zeros_like(free.ph), held(free.solids), dose, log_activity
-        ),
-        dose,
-    )

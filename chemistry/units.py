@@ -17,7 +17,6 @@ from chemistry.formula import molar_mass_g_per_mol
 Amount = TypeVar("Amount", float, NDArray[np.float64])
 
 MG_PER_G = 1000.0
-L_PER_M3 = 1000.0
 KG_PER_TONNE = 1000.0
 KG_PER_POUND = 0.45359237
 """International avoirdupois pound, exact by the 1959 agreement. [kg]"""
@@ -27,24 +26,6 @@ L_PER_US_GALLON = 3.785411784
 MG_CACO3_PER_MEQ = 50.04
 """Half the molar mass of CaCO3 (100.087 g/mol, rounded as the trade does). [mg/meq]"""
 PPM_PER_ATM = 1.0e6
-
-UNIT_LABELS = {
-    "mg_per_l": "mg/L",
-    "mg_per_l_as_caco3": "mg/L as CaCO3",
-    "mg_per_l_as_n": "mg/L as N",
-    "mg_per_l_as_p": "mg/L as P",
-    "mg_per_l_as_s": "mg/L as S",
-    "mol_per_l": "mol/L",
-    "meq_per_l": "meq/L",
-    "kg_per_l": "kg/L",
-    "kg_per_d": "kg/d",
-    "kg_per_m3": "kg/m3",
-    "l_per_h": "L/h",
-    "m3_per_d": "m3/d",
-    "degc": "C",
-    "ph": "pH",
-}
-"""Printed label of each unit suffix used in names."""
 
 
 def mg_per_l_to_mol_per_l(mass_mg_per_l: Amount, molar_mass_g_per_mol: float) -> Amount:

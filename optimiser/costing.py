@@ -18,7 +18,7 @@ from optimiser.plant import Plant
 from optimiser.points import CLOSED_FORMED, VENTED_FORMED, Block, Points, Rows
 from optimiser.price_book import PriceBook
 from optimiser.quality import Judged
-from optimiser.site import DisposalRule, Offer
+from optimiser.site import DisposalRule
 
 FloatArray = NDArray[np.float64]
 
@@ -171,12 +171,6 @@ class Pricing:
             point = rows.point[part.block.rows[nominal]]
             np.maximum.at(cost, point, here[nominal])
         return cost
-
-
-def yearly_cost(offer: Offer, kg_pure: float) -> float:
-    """Goods and freight of one offer for a demand in kg pure per year."""
-    tonnes = max(kg_pure / (1000.0 * offer.strength_fraction), offer.least_order_t)
-    return tonnes * (offer.price_per_t + offer.freight_per_t)
 
 
 def _content(content: dict[str, float], metal: str) -> float:

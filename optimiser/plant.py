@@ -88,6 +88,12 @@ class Plant:
         return self.system.narrowed(solids=())
 
     @cached_property
+    def co2(self) -> FloatArray:
+        """Components that a mole of carbon dioxide takes along as it leaves, (components,)."""
+        parts = {"CO3-2": 1.0, "H+": 2.0}
+        return np.array([parts.get(name, 0.0) for name in self.system.components])
+
+    @cached_property
     def scale_columns(self) -> BoolArray:
         """Which candidate solids are scale formers, (solids,)."""
         return np.array([s.scale_former for s in self.system.solids], dtype=bool)
@@ -155,10 +161,7 @@ class Plant:
         lost, slope = self._vented(points, rows, doses)
         venting = np.flatnonzero(lost > 1e-9)
         if venting.size:
-            co2 = np.zeros_like(self.totals)
-            co2[self.system.index["CO3-2"]] = 1.0
-            co2[self.system.index["H+"]] = 2.0
-            vented = base - lost[:, None] * co2
+            vented = base - lost[:, None] * self.co2
             start = _or_state(warm, VENTED_FORMED, venting, first)
             block = self._block(points, rows, vented, venting, VENTED_FORMED, slope, start)
             found.append(block)

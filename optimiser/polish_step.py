@@ -5,14 +5,14 @@ Owns the rows and costs of the model; moving along its solutions is `optimiser.p
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from chemistry.sludge import dry_masses_mg_per_l
-from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER, yearly_cost
+from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER
 from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.linear_model import Expression, Model, Sense
 from optimiser.points import CLOSED_FORMED, VENTED_FORMED, Points
@@ -204,22 +204,19 @@ def _add_purchases(
     fed = seen.priced.doses[row] + seen.priced.trim_doses[row]
     offers: list[Offer] = []
     wanted = dict(demand)
-    for i in (evaluator.plant.index[name] for name in demand):
-        mine = pricing.by_reagent[i]
+    for name in demand:
+        i = evaluator.plant.index[name]
         ends = [fed[i] * pricing.kg_per_mg_per_l * f for f in (1.0 / (1.0 + radius), 1.0 + radius)]
-        best, other = (_cheapest(mine, kg) for kg in ends)
-        least_kg = 1000.0 * best.least_order_t * best.strength_fraction if best else 0.0
-        if best is None or best is not other or ends[0] < least_kg < ends[1]:
-            offers += mine
+        best, other = (pricing.book.offer_for(name, kg) for kg in ends)
+        least_kg = 1000.0 * best.least_order_t * best.strength_fraction
+        if best is not other or ends[0] < least_kg < ends[1]:
+            offers += pricing.by_reagent[i]
         elif ends[0] >= least_kg:
             offers.append(replace(best, least_order_t=0.0))
-        elif wanted.pop(evaluator.plant.names[i], None) is not None:
-            model.add_cost("least order", Expression({}, yearly_cost(best, ends[0])))
+        else:
+            del wanted[name]
+            model.add_cost("least order", Expression({}, pricing.book.cost(name, ends[0])))
     add_purchasing(model, offers, wanted)
-
-
-def _cheapest(offers: Sequence[Offer], kg_pure: float) -> Offer | None:
-    return min(offers, key=lambda offer: yearly_cost(offer, kg_pure), default=None)
 
 
 def _amount_rows(seen: Evaluation, row: int, kind: str) -> list[tuple[float, FloatArray]]:

@@ -122,6 +122,16 @@ class PriceBook:
         used = demand > 0.0
         return np.where(used, goods, 0.0), np.where(used, freight, 0.0)
 
+    def offer_for(self, reagent: str, demand_kg_per_year: float) -> Offer:
+        """The offer that a demand is bought on, as in `cheapest`.
+
+        Raises
+        ------
+        NoPurchase
+            No offer sells it, or the demand is no amount.
+        """
+        return self._best_line(reagent, self._counted(reagent, demand_kg_per_year)).offer
+
     def entry_cost(self, reagent: str) -> float:
         """Least yearly cost of buying any of a reagent at all: the jump at a demand of 0.
 
@@ -169,8 +179,7 @@ class PriceBook:
         return deal_of(buys, gap=0.0, solver="closed form")
 
     def _buy(self, reagent: str, demand_kg: float) -> Buy:
-        lines = self._cheapest_lines(reagent, demand_kg)
-        line = min(lines, key=lambda one: max(demand_kg, one.least_kg))
+        line = self._best_line(reagent, demand_kg)
         offer = line.offer
         at_least = demand_kg <= line.least_kg
         tonnes = (
@@ -188,6 +197,10 @@ class PriceBook:
         if reagent not in self._lines:
             raise NoPurchase([no_offer(reagent, self.reagents)])
         return self._lines[reagent]
+
+    def _best_line(self, reagent: str, demand_kg: float) -> _Line:
+        lines = self._cheapest_lines(reagent, demand_kg)
+        return min(lines, key=lambda one: max(demand_kg, one.least_kg))
 
     def _cheapest_lines(self, reagent: str, demand_kg: float) -> list[_Line]:
         lines = self._sold(reagent)

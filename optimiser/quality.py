@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from chemistry.analysis import ANALYTES, METALS
-from chemistry.burden import BURDENS, burden_weights
+from chemistry.burden import BURDENS, burden_weights, water_burden
 from chemistry.sludge import formula_masses_g_per_mol
 from chemistry.state import H2S_SPECIES
 from optimiser.plant import Plant
@@ -99,10 +99,6 @@ class Judge:
         self.families = self._families()
         self.burden_weights = burden_weights(plant.system)
         self.checks: tuple[Check, ...] = tuple(self._compile())
-        self.vent_co2 = np.zeros(len(plant.system.components))
-        if "CO3-2" in plant.system.index:
-            self.vent_co2[plant.system.index["CO3-2"]] = 1.0
-            self.vent_co2[plant.system.index["H+"]] = 2.0
 
     # -- compile -------------------------------------------------------------------------------
 
@@ -276,8 +272,6 @@ class Judge:
         return result
 
     def _burden(self, effluent: FloatArray) -> dict[str, FloatArray]:
-        from chemistry.burden import water_burden
-
         return water_burden(effluent, self.plant.system)
 
     def _values(self, total: FloatArray, burden: dict[str, FloatArray], block: Block) -> FloatArray:

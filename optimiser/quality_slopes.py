@@ -40,7 +40,7 @@ def _directions(judge: Judge, points: Points, rows: Rows, block: Block) -> Float
     ways[:, 1:] = factor[:, :, None] * plant.reacting[None]
     if block.end in (VENTED_FORMED, VENTED_HELD):
         lost = block.lost_slope[None, :] * dosed
-        ways[:, 1:] -= lost[:, :, None] * judge.vent_co2
+        ways[:, 1:] -= lost[:, :, None] * plant.co2
     return ways
 
 

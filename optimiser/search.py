@@ -14,6 +14,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from chemistry.state import equilibrate
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator, Place
 from optimiser.points import Points
 from optimiser.polish import Track, polish
@@ -22,6 +23,7 @@ from optimiser.recipes import (
     Recipe,
     basins,
     grid,
+    ladder,
     make_recipe,
     recipe_of,
     recipes,
@@ -34,7 +36,6 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 POLISHED_AT_ONCE = 40
-KEPT_PARTS = 10
 SETTLE_STEP = 0.01
 SETTLED = 2
 SETTLE_ROUNDS = 12
@@ -142,17 +143,13 @@ class Search:
     def _propose(self, sizes: Sequence[int]) -> list[Place]:
         plant = self.evaluator.plant
         demand = self._demand()
-        starts: list[Place] = []
         wanted = [r for size in sizes for r in recipes(plant, size)]
         grids = [(r, grid(self.evaluator, r, self.bounds, demand)) for r in wanted]
         self.progress(f"trying {len(grids)} recipes")
-        starts += self._best_of([(r, g) for r, g in grids if g is not None])
-        return starts
+        return self._best_of([(r, g) for r, g in grids if g is not None])
 
     def _demand(self) -> dict[float, float]:
         """Alkali demand (eq/L) over the set points, by holding the pH with sodium hydroxide."""
-        from chemistry.state import equilibrate
-
         plant = self.evaluator.plant
         window = plant.treatment.ph_set_point
         ph = np.arange(window.low, window.high + 0.26, 0.5)
@@ -276,8 +273,6 @@ class Search:
                     row[previous] = max(share * fed, float(self.bounds.dose_low[previous]))
                     rows.append(row)
         else:
-            from optimiser.recipes import ladder
-
             for dose in ladder(self.evaluator, full, added, need, self.bounds, short=True):
                 row = base.copy()
                 row[added] = dose

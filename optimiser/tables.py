@@ -37,10 +37,6 @@ class Ink:
         """Text that says something fails."""
         return self._wrap("1;31", text)
 
-    def care(self, text: str) -> str:
-        """Text that asks for attention."""
-        return self._wrap("33", text)
-
 
 PLAIN = Ink()
 
