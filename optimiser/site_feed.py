@@ -12,10 +12,10 @@ from dataclasses import dataclass
 from catalogs.entries import NON_NEGATIVE, PH, POSITIVE, Entry, Range, to_day, to_number
 from catalogs.positions import Items, Node, Table, describe
 from catalogs.problems import Spot, did_you_mean, echo, listed
+from catalogs.quantities import Concentration, read_alkalinity, read_concentration
 from chemistry.analysis import ACIDITY_END_PH, CHELATES
 from chemistry.errors import WaterError
 from chemistry.feed import ANALYTES, METALS, Measurement, WaterAnalysis
-from optimiser.quantities import Concentration, read_alkalinity, read_concentration
 
 STATES_OF_ELEMENT: Mapping[str, tuple[str, ...]] = {
     "Fe": ("Fe(II)", "Fe(III)"),

@@ -77,7 +77,7 @@ def read_concentration(node: Node, spot: Spot, analyte: Analyte) -> Concentratio
     quantity = _parse(node, spot)
     if quantity is None or not _basis_fits(quantity, analyte, spot):
         return None
-    value = _to_mg_per_l(quantity, analyte)
+    value = to_mg_per_l(quantity, analyte)
     if value > _MOST_MG_PER_L:
         spot.problem(
             echo(quantity.as_written), "at most 1 kg/L", "Check the unit: mg/L, ug/L or g/L."
@@ -120,7 +120,7 @@ def _parse(node: Node, spot: Spot) -> Quantity | None:
             " as < and that limit.",
         )  # fmt: skip
         return None
-    number, unit = match["number"], _spelled(match["unit"])
+    number, unit = match["number"], spelled_unit(match["unit"])
     value = parse_number(number)
     if value is None or not math.isfinite(value):
         spot.problem(echo(text), _EXPECTED, number_remedy(number))
@@ -140,8 +140,14 @@ def _parse(node: Node, spot: Spot) -> Quantity | None:
     )  # fmt: skip
 
 
-def _spelled(unit: str) -> str:
-    """Spell a unit as the tables do: u for micro, a capital L for litre, 3 for cube."""
+def spelled_unit(unit: str) -> str:
+    """Spell a unit as the tables do: u for micro, a capital L for litre, 3 for cube.
+
+    Examples
+    --------
+    >>> spelled_unit("\N{MICRO SIGN}g/l")
+    'ug/L'
+    """
     plain = unit.replace("\N{MICRO SIGN}", "u").replace("\N{GREEK SMALL LETTER MU}", "u")
     plain = plain.replace("\N{SUPERSCRIPT THREE}", "3").replace(" / ", "/")
     return f"{plain[:-1]}L" if plain.endswith("/l") else plain
@@ -196,7 +202,8 @@ def _basis_fits(quantity: Quantity, analyte: Analyte, spot: Spot) -> bool:
     return False
 
 
-def _to_mg_per_l(quantity: Quantity, analyte: Analyte) -> float:
+def to_mg_per_l(quantity: Quantity, analyte: Analyte) -> float:
+    """Convert a quantity to the mass of the analyte itself. [mg/L]"""
     mass, charge = analyte.molar_mass_g_per_mol, analyte.charge
     if quantity.unit in AMOUNT_UNITS_IN_MOL_PER_L:
         amount = quantity.value * AMOUNT_UNITS_IN_MOL_PER_L[quantity.unit]

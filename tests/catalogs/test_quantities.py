@@ -6,8 +6,8 @@ import pytest
 
 from catalogs.positions import Scalar
 from catalogs.problems import ProblemLog, Spot
+from catalogs.quantities import bases_of, read_alkalinity, read_concentration
 from chemistry.feed import ANALYTES
-from optimiser.quantities import bases_of, read_alkalinity, read_concentration
 
 
 def read(text: str, analyte: str) -> tuple[float, bool]:
