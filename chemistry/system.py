@@ -326,11 +326,21 @@ class System:
 
         A solid held back to a supersaturation SI counts as more soluble by SI.
         """
+        return self.moved_constants({name: -shift for name, shift in shift_log10.items()})
+
+    def moved_constants(self, move_log10: Mapping[str, float]) -> System:
+        """Return the system with formation constants raised by these log10 units.
+
+        ``move_log10`` is keyed by the names of species and solids; the others stay.
+        """
+        species = tuple(
+            replace(s, log10_k=s.log10_k + move_log10.get(s.name, 0.0)) for s in self.species
+        )
         solids = tuple(
-            replace(s, log10_k=s.log10_k - shift_log10.get(s.name, 0.0)) for s in self.solids
+            replace(s, log10_k=s.log10_k + move_log10.get(s.name, 0.0)) for s in self.solids
         )
         return System(
-            self.components, self.species, solids,
+            self.components, species, solids,
             temperature_degc=self.temperature_degc, activity=self.activity,
             interactions=self.interactions,
         )  # fmt: skip

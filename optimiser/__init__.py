@@ -11,6 +11,8 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from optimiser.assessment import assess as assess
+    from optimiser.chances import explain_chances as explain_chances
+    from optimiser.confidence import plan_with_confidence as plan_with_confidence
     from optimiser.errors import NoPlan as NoPlan
     from optimiser.explain import explain_plan as explain_plan
     from optimiser.floors import explain_floors as explain_floors
@@ -21,14 +23,26 @@ if TYPE_CHECKING:
 _HOMES = {
     "NoPlan": "optimiser.errors",
     "assess": "optimiser.assessment",
+    "explain_chances": "optimiser.chances",
     "explain_floors": "optimiser.floors",
     "explain_plan": "optimiser.explain",
     "load_site": "optimiser.site_reader",
     "plan": "optimiser.planning",
+    "plan_with_confidence": "optimiser.confidence",
     "purchase": "optimiser.purchasing",
 }
 
-__all__ = ["NoPlan", "assess", "explain_floors", "explain_plan", "load_site", "plan", "purchase"]
+__all__ = [
+    "NoPlan",
+    "assess",
+    "explain_chances",
+    "explain_floors",
+    "explain_plan",
+    "load_site",
+    "plan",
+    "plan_with_confidence",
+    "purchase",
+]
 
 
 def __getattr__(name: str) -> object:

@@ -267,6 +267,33 @@ def _floors(options: argparse.Namespace) -> int:
     return DONE
 
 
+def _chances(options: argparse.Namespace) -> int:
+    import optimiser
+    from optimiser.chances import explain_chances
+    from optimiser.render_chances import chances_text, confidence_text
+    from optimiser.render_no_plan import no_plan_data, no_plan_text
+
+    site = _load(options)
+    try:
+        if options.confidence is None:
+            found = explain_chances(
+                site, draws=options.draws, seed=options.seed, progress=_progress()
+            )
+            _clear_progress()
+            _print(found.to_dict(), options.json, chances_text)
+            return DONE
+        sure = optimiser.plan_with_confidence(
+            site, options.confidence, draws=options.draws, seed=options.seed, progress=_progress()
+        )
+    except optimiser.NoPlan as none:
+        _clear_progress()
+        _print(no_plan_data(site.name, none), options.json, no_plan_text)
+        return NO_PLAN
+    _clear_progress()
+    _print(sure.to_dict(), options.json, confidence_text)
+    return DONE if sure.reached else NO_PLAN
+
+
 def _explain(options: argparse.Namespace) -> int:
     import optimiser
     from optimiser.explain import explain_plan
@@ -315,6 +342,7 @@ _COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
     "explain": _explain,
     "curves": _curves,
     "floors": _floors,
+    "chances": _chances,
     "check": _check,
     "new": _new,
 }

@@ -48,6 +48,16 @@ def _count(text: str) -> int:
     return int(text)
 
 
+def _chance(text: str) -> float:
+    value = _finite(text.strip().removesuffix("%"))
+    value = value / 100.0 if text.strip().endswith("%") else value
+    if not 0.5 <= value < 1.0:
+        raise argparse.ArgumentTypeError(
+            f"expected a chance from 0.5 to below 1 such as 0.95, found {text!r}"
+        )
+    return value
+
+
 def _ph(text: str) -> float:
     value = _finite(text)
     if not 0.0 <= value <= 14.0:
@@ -92,6 +102,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_explain(commands)
     _add_curves(commands)
     _add_floors(commands)
+    _add_chances(commands)
     _add_command(commands, "check", "read a site and report every problem found", "check site.yaml")
     new = _add_command(
         commands, "new", "write a commented starter site with its price book", "new my-plant",
@@ -199,4 +210,23 @@ def _add_floors(commands: _Commands) -> None:
     parser.add_argument(
         "--csv", metavar="FILE", type=Path, help="write every floor to FILE as well"
     )
+    _add_json(parser)
+
+
+def _add_chances(commands: _Commands) -> None:
+    parser = _add_command(
+        commands, "chances",
+        "tell how likely the plan meets each limit when constants and analysis are not exact",
+        "chances site.yaml --confidence 0.95",
+    )  # fmt: skip
+    parser.add_argument(
+        "--draws", metavar="N", type=_count, default=400, help="draws to solve (default: 400)"
+    )
+    parser.add_argument(
+        "--seed", metavar="N", type=_count, default=1, help="start of the random numbers"
+    )
+    parser.add_argument(
+        "--confidence", metavar="CHANCE", type=_chance,
+        help="tighten targets until all limits hold together with this chance, and tell its cost",
+    )  # fmt: skip
     _add_json(parser)

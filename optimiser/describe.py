@@ -149,7 +149,7 @@ class Describer:
                     "limit": check.limit, "source": check.source,
                     "residual": float(residual) * scale, "carry_over": float(carried) * scale,
                     "floor": float(floor) * scale, "variability_factor": check.variability,
-                    "predicted": predicted, "target": self.site.design_margin * check.limit,
+                    "predicted": predicted, "target": check.margin * check.limit,
                     "margin_percent": 100.0 * (1.0 - predicted / check.limit),
                     "meets": bool(part.ratio[k, number] <= FEASIBLE_RATIO),
                     "worst_state": self._state_text(part.block.end, int(part.block.rows[k])),

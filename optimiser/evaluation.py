@@ -25,6 +25,7 @@ BoolArray = NDArray[np.bool_]
 IntArray = NDArray[np.int64]
 
 FEASIBLE_RATIO = 1e-9  # a limit is met when ln(value/target) does not exceed this
+DOSE_RULE = "least real dose and dose ceiling"
 LEAST_DOSE_MG_PER_L = 1.0  # least real dose of a reagent in a recipe, unless the site says
 
 
@@ -185,7 +186,7 @@ class Evaluator:
         paced = (points.doses > 0.0) & (points.doses < self.least * (1.0 - 1e-9))
         over = points.doses > self.ceiling * (1.0 + 1e-9)
         ratio = np.where((paced | over).any(axis=1), np.maximum(ratio, 1.0), ratio)
-        return Rule("least real dose and dose ceiling", ratio, slope)
+        return Rule(DOSE_RULE, ratio, slope)
 
     def _before(
         self, seen: Evaluation, label: str, some: IntArray, without: BoolArray,

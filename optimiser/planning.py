@@ -44,11 +44,22 @@ def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
     """
     begun = time.perf_counter()
     evaluator, findings = find(site, progress)
+    return plan_of(evaluator, findings, begun)
+
+
+def plan_of(evaluator: Evaluator, findings: Findings, begun: float) -> Plan:
+    """Describe the best of a search's findings as a plan; ``begun`` is `time.perf_counter`'s.
+
+    Raises
+    ------
+    FeedRefused
+        The plan's water is too salty for the activity model.
+    """
     ranked = findings.feasible
     _, best = ranked[0]
     seen = evaluator.evaluate(best.point, slopes=False)
     strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)
-    refuse_salty(site, strength, "the plan's water")
+    refuse_salty(evaluator.site, strength, "the plan's water")
     data = describe(evaluator, seen, 0, proof=_proof(evaluator, findings))
     data["runners_up"] = _runners_up(evaluator, findings, best)
     data["proof"]["seconds"] = {

@@ -48,6 +48,8 @@ class Check:
     source: str = ""
     metals: tuple[int, ...] = ()
     burden: str = ""
+    margin: float = 1.0
+    limit_number: int = -1  # position among the site's limits, -1 for a rule
 
 
 @dataclass(frozen=True, eq=False)
@@ -156,8 +158,8 @@ class Judge:
 
     def _compile(self) -> list[Check]:
         checks = []
-        for limit in self.plant.site.limits:
-            checks += self._limit_checks(limit)
+        for number, limit in enumerate(self.plant.site.limits):
+            checks += self._limit_checks(limit, number)
         if "HS-" in self.plant.system.index:
             for place in ("tank", "after trim"):
                 checks.append(
@@ -172,8 +174,9 @@ class Judge:
                 )
         return checks
 
-    def _limit_checks(self, limit: Limit) -> list[Check]:
+    def _limit_checks(self, limit: Limit, number: int) -> list[Check]:
         site = self.plant.site
+        margin = site.design_margin if limit.design_margin is None else limit.design_margin
         parts = limit.of or (limit.parameter,)
         metals = tuple(self.metals.index(m) for m in parts if m in self.metals)
         burden = limit.parameter if limit.parameter in BURDENS else ""
@@ -187,7 +190,7 @@ class Judge:
         ):
             if value is None:
                 continue
-            target = site.design_margin * value * scale / factor
+            target = margin * value * scale / factor
             made.append(
                 Check(
                     label=limit.label,
@@ -199,6 +202,8 @@ class Judge:
                     source=limit.source,
                     metals=metals,
                     burden=burden,
+                    margin=margin,
+                    limit_number=number,
                 )
             )
         return made

@@ -21,6 +21,7 @@ class Limit:
     ``parameter`` is an analyte (``Cu``), a burden (``SO4``, ``TDS``, ``hardness``, ``sulfide``), or
     ``sum``, in which case ``of`` lists the analytes that are added up. Concentrations in mg/L of
     the total (dissolved and carried), loads in kg per day; ``None`` where none is written.
+    ``design_margin`` replaces the site's for this limit.
     """
 
     parameter: str
@@ -28,6 +29,7 @@ class Limit:
     daily_mg_per_l: float | None = None
     monthly_mg_per_l: float | None = None
     daily_load_kg_per_d: float | None = None
+    design_margin: float | None = None
     source: str = ""
 
     @property
@@ -168,6 +170,19 @@ class SolidSwitch:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Uncertainty:
+    """How far the site's own figures may be off, as standard deviations.
+
+    The defaults are common practice without a source: 5 % on a laboratory's analysis, 0.05 pH on a
+    calibrated electrode, 30 % on the solids that slip past a separator.
+    """
+
+    analysis_percent: float = 5.0
+    ph: float = 0.05
+    carried_solids_percent: float = 30.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class SolverSettings:
     """Choice and limits of the mixed-integer solver."""
 
@@ -200,6 +215,7 @@ class Site:
     burden_charges_per_kg: Mapping[str, float]
     offers: tuple[Offer, ...]
     solver: SolverSettings = SolverSettings()
+    uncertainty: Uncertainty = Uncertainty()
     pretreated: Mapping[str, str] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
     today: Mapping[str, float] = field(default_factory=dict)

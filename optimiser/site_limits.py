@@ -177,6 +177,7 @@ def _own_limit(entry: Entry, foreseen: Foreseen | None) -> Limit | None:
         key: entry.number_or(key, None, POSITIVE)
         for key in ("daily_mg_per_l", "monthly_mg_per_l", "daily_load_kg_per_d")
     }
+    margin = entry.number_or("design_margin", None, POSITIVE_FRACTION)
     source = entry.text_or("source", f"{entry.spot.file}, line {entry.spot.line}")
     if not any(entry.has(key) for key in values):
         entry.spot.problem(
@@ -190,7 +191,7 @@ def _own_limit(entry: Entry, foreseen: Foreseen | None) -> Limit | None:
     limit = Limit(
         parameter=parameter, of=of, daily_mg_per_l=values["daily_mg_per_l"],
         monthly_mg_per_l=values["monthly_mg_per_l"],
-        daily_load_kg_per_d=values["daily_load_kg_per_d"], source=source,
+        daily_load_kg_per_d=values["daily_load_kg_per_d"], design_margin=margin, source=source,
     )  # fmt: skip
     _check_own(limit, entry, foreseen)
     return limit

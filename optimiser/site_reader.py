@@ -22,7 +22,7 @@ from chemistry.errors import WaterError
 from chemistry.feed import ANALYTES, BURDENS, FeedWater, feed_water
 from chemistry.system import System
 from optimiser.offers_reader import OFFER_COLUMNS, expired_notes, read_offers
-from optimiser.site import Disposal, Offer, Site, SolverSettings
+from optimiser.site import Disposal, Offer, Site, SolverSettings, Uncertainty
 from optimiser.site_constants import OwnBlock, read_own
 from optimiser.site_feed import FeedBlock, read_feed
 from optimiser.site_limits import Foreseen, LimitsBlock, read_limits
@@ -32,6 +32,7 @@ from optimiser.site_treatment import (
     read_disposal,
     read_solver,
     read_treatment,
+    read_uncertainty,
 )
 
 ALWAYS_COMPONENTS = ("H+", "Na+", "CO3-2")
@@ -51,6 +52,7 @@ class _Blocks:
     charges: Mapping[str, float]
     offers: tuple[Offer, ...]
     solver: SolverSettings
+    uncertainty: Uncertainty
     doses_today: Mapping[str, float]
     own: OwnBlock
     activity: str
@@ -114,6 +116,7 @@ def _read_blocks(entry: Entry, file: Path, reagents: Mapping[str, Reagent]) -> _
         disposal=disposal, charges=entry.numbers("burden_charges_per_kg", BURDENS, "burdens"),
         offers=_read_price_book(entry, file, reagents, treatment),
         solver=read_solver(entry.block_or_none("solver")),
+        uncertainty=read_uncertainty(entry.block_or_none("uncertainty")),
         doses_today=entry.numbers("today", known, "reagents allowed in treatment", NON_NEGATIVE),
         own=read_own(entry),
         activity=entry.choice_or("activity", AUTO, ACTIVITY_CHOICES, "activity models"),
@@ -247,6 +250,7 @@ def _site(
         variability=limits.variability, floors_mg_per_l=limits.floors_mg_per_l,
         treatment=treatment.treatment, disposal=disposal,
         burden_charges_per_kg=blocks.charges, offers=blocks.offers, solver=blocks.solver,
+        uncertainty=blocks.uncertainty,
         pretreated=feed.pretreated, today=blocks.doses_today,
         own_constants=blocks.own.constants, solid_switches=blocks.own.switches,
         notes=(

@@ -28,6 +28,7 @@ from optimiser.site import (
     Separator,
     SolverSettings,
     Treatment,
+    Uncertainty,
 )
 from optimiser.site_feed import STATES_OF_ELEMENT
 
@@ -38,6 +39,7 @@ _TOLERANCE = Range(low=0.0, high=2.0)
 _SATURATION_INDEX = Range(low=0.0, high=3.0)
 _BOUND_WATER = Range(low=1.0, high=3.0)
 _GAP = Range(above=0.0, high=0.1)
+_PERCENT = Range(low=0.0, high=200.0)
 _DEFAULTS = Treatment(reagents=())
 
 
@@ -275,3 +277,19 @@ def read_solver(entry: Entry | None) -> SolverSettings:
     )
     entry.finish()
     return solver
+
+
+def read_uncertainty(entry: Entry | None) -> Uncertainty:
+    """Read how far the site's figures may be off; the block may be left out."""
+    usual = Uncertainty()
+    if entry is None:
+        return usual
+    unsure = Uncertainty(
+        analysis_percent=entry.number_or("analysis_percent", usual.analysis_percent, _PERCENT),
+        ph=entry.number_or("ph", usual.ph, _TOLERANCE),
+        carried_solids_percent=entry.number_or(
+            "carried_solids_percent", usual.carried_solids_percent, _PERCENT
+        ),
+    )
+    entry.finish()
+    return unsure
