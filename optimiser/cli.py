@@ -185,7 +185,7 @@ def _plan(options: argparse.Namespace) -> int:
     try:
         found = optimiser.plan(site, progress=_progress())
     except optimiser.NoPlan as none:
-        data = no_plan_data(site.name, none)
+        data = no_plan_data(site.name, none, site.currency)
         _clear_progress()
         _print(data, options.json, no_plan_text)
         return NO_PLAN
@@ -305,7 +305,7 @@ def _explain(options: argparse.Namespace) -> int:
         found = explain_plan(site, progress=_progress())
     except optimiser.NoPlan as none:
         _clear_progress()
-        _print(no_plan_data(site.name, none), options.json, no_plan_text)
+        _print(no_plan_data(site.name, none, site.currency), options.json, no_plan_text)
         return NO_PLAN
     _clear_progress()
     _print(found.to_dict(), options.json, explain_text)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import logging
+from collections.abc import Callable
 from dataclasses import replace
 from typing import Any
 
@@ -12,10 +13,12 @@ from numpy.typing import NDArray
 from optimiser.errors import NoPlan, SolverFault
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator, Place
 from optimiser.held_up import held_up_by
+from optimiser.openers import openers
 from optimiser.points import END_TEXT, Points
 from optimiser.polish import polish
 from optimiser.quality_slopes import RULE
 from optimiser.recipes import recipe_of, set_point_bounds
+from optimiser.relaxations import relaxations
 from optimiser.search import Findings
 from optimiser.solver import SolverPort
 
@@ -36,17 +39,19 @@ def explain_no_plan(evaluator: Evaluator, findings: Findings, solver: SolverPort
     the checks that stand at it there are the ones that clash.
     """
     if not findings.best:
-        return _nothing_to_try(evaluator, findings)
+        return _nothing_to_try(evaluator, findings, solver)
     checks = evaluator.judge.checks
     seen, point = _nearest_miss(evaluator, findings, solver)
     missed = _missed(evaluator, seen, point)
     lowest = findings.lowest if findings.lowest is not None else np.full(len(checks), np.inf)
     clashes: list[dict[str, Any]] = []
+    clashing: list[int] = []
     for number, check in enumerate(checks):
         alone = bool(lowest[number] > check.target * np.exp(FEASIBLE_RATIO))
         if not (alone and findings.lowest is not None) and number not in missed:
             continue
         scale = check.variability
+        clashing.append(number)
         clashes.append(
             {
                 "limit": f"{check.label}, {check.averaging}"
@@ -63,7 +68,20 @@ def explain_no_plan(evaluator: Evaluator, findings: Findings, solver: SolverPort
     )
     reasons = _reasons(evaluator, clashes, seen, point)
     reasons += _broken_where_lowest(evaluator, findings, missed)
-    return NoPlan(message, reasons=reasons, clashes=clashes)
+    return NoPlan(
+        message, reasons=reasons, clashes=clashes,
+        relaxations=lambda: _quietly(lambda: relaxations(evaluator, findings, solver, clashing)),
+        openers=lambda: _quietly(lambda: openers(evaluator, findings, solver)),
+    )  # fmt: skip
+
+
+def _quietly(look: Callable[[], list[dict[str, Any]]]) -> list[dict[str, Any]]:
+    """Nothing where the solver fails: that there is no plan stands without it."""
+    try:
+        return look()
+    except SolverFault as fault:
+        LOG.warning("ways to open a plan were not looked for to the end: %s", fault)
+        return []
 
 
 def _nearest_miss(
@@ -85,7 +103,7 @@ def _nearest_miss(
     return best.place.seen, best.place.point
 
 
-def _nothing_to_try(evaluator: Evaluator, findings: Findings) -> NoPlan:
+def _nothing_to_try(evaluator: Evaluator, findings: Findings, solver: SolverPort) -> NoPlan:
     """No point could be examined: say which windows and rules leave none."""
     treatment, window = evaluator.plant.treatment, evaluator.site.ph_window
     asked = treatment.ph_set_point
@@ -100,7 +118,10 @@ def _nothing_to_try(evaluator: Evaluator, findings: Findings) -> NoPlan:
     if tried:
         reasons.append(f"none of the {tried} recipes reaches a set point in there")
     message = "no plan: no set point and doses are left inside the site's windows and rules"
-    return NoPlan(message, reasons=reasons)
+    return NoPlan(
+        message, reasons=reasons,
+        openers=lambda: _quietly(lambda: openers(evaluator, findings, solver)),
+    )  # fmt: skip
 
 
 def _missed(evaluator: Evaluator, seen: Evaluation, point: int) -> dict[int, float]:

@@ -15,8 +15,9 @@ Mistakes in files and tables that users write are `catalogs.problems.InputFileEr
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
-from typing import ClassVar
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from functools import cached_property
+from typing import Any, ClassVar
 
 _MOST_SHOWN = 5
 
@@ -31,7 +32,9 @@ class NoPlan(OptimiserError):  # noqa: N818 - a public name that says what happe
     """No doses were found that meet every limit with what the site allows.
 
     ``reasons`` holds one sentence for each cause found; ``clashes`` one mapping for each limit that
-    cannot be met (``limit``, ``lowest_reachable``, ``target``, ``stopped_by``).
+    cannot be met (``limit``, ``lowest_reachable``, ``target``, ``stopped_by``). ``relaxations``,
+    what limits would have to be loosened to, and ``openers``, what else would open a plan, are
+    looked for when they are asked for: that takes longer than to see that there is no plan.
     """
 
     exit_code: ClassVar[int] = 3
@@ -42,10 +45,23 @@ class NoPlan(OptimiserError):  # noqa: N818 - a public name that says what happe
         *,
         reasons: Iterable[str] = (),
         clashes: Iterable[Mapping[str, object]] = (),
+        relaxations: Callable[[], Sequence[Mapping[str, Any]]] = tuple,
+        openers: Callable[[], Sequence[Mapping[str, Any]]] = tuple,
     ) -> None:
         self.reasons: tuple[str, ...] = tuple(reasons)
         self.clashes: tuple[Mapping[str, object], ...] = tuple(clashes)
+        self._relaxations, self._openers = relaxations, openers
         super().__init__(_with_reasons(message, self.reasons))
+
+    @cached_property
+    def relaxations(self) -> tuple[Mapping[str, Any], ...]:
+        """The least loosening of each clashing limit that opens a plan."""
+        return tuple(self._relaxations())
+
+    @cached_property
+    def openers(self) -> tuple[Mapping[str, Any], ...]:
+        """What the site does not allow and was tried, what opens a plan first."""
+        return tuple(self._openers())
 
 
 class NoPurchase(OptimiserError):  # noqa: N818 - a public name that says what happened

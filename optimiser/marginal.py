@@ -112,8 +112,8 @@ def _check_prices(plan: Standing) -> dict[int, float]:
 
 def _limit_row(plan: Standing, number: int, prices: Mapping[int, float]) -> Data:
     check = plan.evaluator.judge.checks[number]
-    tight = _with_limit(plan.evaluator.site, number, 1.0 - CHANGE)
-    loose = _with_limit(plan.evaluator.site, number, 1.0 + CHANGE)
+    tight = with_limits(plan.evaluator.site, {number: 1.0 - CHANGE})
+    loose = with_limits(plan.evaluator.site, {number: 1.0 + CHANGE})
     return {
         "kind": "burden cap" if check.burden else "limit", "parameter": check.label,
         "averaging": check.averaging, "value": check.limit, "unit": check.unit,
@@ -181,8 +181,8 @@ def _with_tariff(site: Site, factor: float) -> Site:
     return replace(site, disposal=replace(site.disposal, rules=rules))
 
 
-def _with_limit(site: Site, check: int, factor: float) -> Site:
-    """The site with the limit behind a check changed; checks stand in the order of limits."""
+def with_limits(site: Site, factors: Mapping[int, float]) -> Site:
+    """The site with the limits behind some checks multiplied; checks stand in their order."""
     position = 0
     limits = list(site.limits)
     for i, limit in enumerate(limits):
@@ -190,11 +190,12 @@ def _with_limit(site: Site, check: int, factor: float) -> Site:
             value = getattr(limit, name)
             if value is None:
                 continue
-            if position == check:
-                limits[i] = _replaced(limit, name, factor * value)
-                return replace(site, limits=tuple(limits))
+            if position in factors:
+                limits[i] = _replaced(limits[i], name, factors[position] * value)
             position += 1
-    raise ValueError(f"check {check} belongs to no limit")
+    if any(number >= position for number in factors):
+        raise ValueError(f"a check of {sorted(factors)} belongs to no limit")
+    return replace(site, limits=tuple(limits))
 
 
 def _replaced(limit: Limit, name: str, value: float) -> Limit:

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import copy
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -19,6 +20,8 @@ from optimiser.quality import Judge
 from optimiser.recipes import recipe_of, set_point_bounds
 from optimiser.site import Site
 from optimiser.solver import SolverPort
+
+Data = dict[str, Any]
 
 RADIUS = 0.05
 STEPS = 6
@@ -61,12 +64,12 @@ def stand(evaluator: Evaluator, solver: SolverPort, track: Track) -> Standing:
 
 
 def changed(evaluator: Evaluator, site: Site) -> Evaluator:
-    """Evaluator of a site that differs in limits, margin, disposal or offers, and in nothing else.
+    """Evaluator of a site that differs in limits, margin, separator, disposal or offers alone.
 
     Feed, species and reagents stay, so that states of one may start those of the other.
     """
     plant = copy.copy(evaluator.plant)
-    plant.site = site
+    plant.site, plant.treatment = site, site.treatment
     result = copy.copy(evaluator)
     result.site, result.plant = site, plant
     result.judge, result.pricing = Judge(plant), Pricing(plant)
@@ -95,3 +98,18 @@ def worst_ratios(evaluator: Evaluator, place: Place) -> tuple[np.ndarray, np.nda
             checks = np.maximum(checks, part.ratio[mine].max(axis=0))
     rules = np.array([float(rule.ratio[point]) for rule in seen.rules])
     return checks, rules
+
+
+def point_data(evaluator: Evaluator, place: Place) -> Data:
+    """Recipe, set point, doses and cost of a point, as plain data."""
+    seen, row, plant = place.seen, place.point, evaluator.plant
+    controller = int(seen.points.controller[row])
+    doses = {n: float(seen.priced.doses[row, i]) for i, n in enumerate(plant.names)}
+    trims = {f"{n}@trim": float(seen.priced.trim_doses[row, i]) for i, n in enumerate(plant.names)}
+    return {
+        "reagents": list(recipe_of(plant, seen.points, row)),
+        "controller": plant.names[controller] if controller >= 0 else None,
+        "ph_set_point": float(seen.points.ph[row]) if controller >= 0 else None,
+        "doses": {key: dose for key, dose in (doses | trims).items() if dose > 0.0},
+        "total": float(seen.total[row]),
+    }  # fmt: skip

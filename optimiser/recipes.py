@@ -12,6 +12,7 @@ from itertools import combinations, product
 import numpy as np
 from numpy.typing import NDArray
 
+from chemistry.state import equilibrate
 from optimiser.evaluation import Evaluator
 from optimiser.plant import Plant
 from optimiser.points import Points
@@ -123,6 +124,17 @@ def trim_choices(evaluator: Evaluator, way: str) -> list[int]:
             goods, freight = evaluator.pricing.purchase(i, kg)
             found.append((float(goods[0] + freight[0]), i))
     return [i for _, i in sorted(found)]
+
+
+def alkali_demand(evaluator: Evaluator) -> dict[float, float]:
+    """Alkali demand (eq/L) over the set points, by holding the pH with sodium hydroxide."""
+    plant = evaluator.plant
+    window = plant.treatment.ph_set_point
+    ph = np.arange(window.low, window.high + 0.26, 0.5)
+    state = equilibrate(plant.system, plant.totals, ph=ph, on_failure="flag")
+    proton = plant.system.index["H+"]
+    need = plant.totals[proton] - state.totals[:, proton]
+    return {float(p): abs(float(n)) + 1e-5 for p, n in zip(ph, need, strict=True)}
 
 
 def set_points(evaluator: Evaluator, recipe: Recipe, bounds: Bounds, gap: float) -> FloatArray:

@@ -14,13 +14,13 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from chemistry.state import equilibrate
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator, Place
 from optimiser.points import Points
 from optimiser.polish import Track, polish
 from optimiser.polish_step import PENALTY, Bounds
 from optimiser.recipes import (
     Recipe,
+    alkali_demand,
     basins,
     grid,
     ladder,
@@ -142,21 +142,11 @@ class Search:
 
     def _propose(self, sizes: Sequence[int]) -> list[Place]:
         plant = self.evaluator.plant
-        demand = self._demand()
+        demand = alkali_demand(self.evaluator)
         wanted = [r for size in sizes for r in recipes(plant, size)]
         grids = [(r, grid(self.evaluator, r, self.bounds, demand)) for r in wanted]
         self.progress(f"trying {len(grids)} recipes")
         return self._best_of([(r, g) for r, g in grids if g is not None])
-
-    def _demand(self) -> dict[float, float]:
-        """Alkali demand (eq/L) over the set points, by holding the pH with sodium hydroxide."""
-        plant = self.evaluator.plant
-        window = plant.treatment.ph_set_point
-        ph = np.arange(window.low, window.high + 0.26, 0.5)
-        state = equilibrate(plant.system, plant.totals, ph=ph, on_failure="flag")
-        proton = plant.system.index["H+"]
-        need = plant.totals[proton] - state.totals[:, proton]
-        return {float(p): abs(float(n)) + 1e-5 for p, n in zip(ph, need, strict=True)}
 
     def _best_of(self, grids: Sequence[tuple[Recipe, Points]]) -> list[Place]:
         """Evaluate grids at the nominal state and return each recipe's best starts."""
@@ -237,7 +227,7 @@ class Search:
             (item for item in self.findings.best.items() if len(item[0]) == size - 1),
             key=lambda item: item[1].merit,
         )
-        demand = self._demand()
+        demand = alkali_demand(self.evaluator)
         grids: list[tuple[Recipe, Points]] = []
         for recipe in recipes(plant, size):
             names = set(self._names(recipe))
