@@ -182,6 +182,22 @@ class Entry:
         node = self._table.nodes.get(key)
         return node is not None and node != Scalar("", node.line)
 
+    def has_column(self, key: str) -> bool:
+        """Tell whether a row's table has a column, be the cell empty or not."""
+        self._known.add(key)
+        return key in self._table.nodes
+
+    def finish_row(self, allowed: Collection[str]) -> None:
+        """Leave the cells of a row that carries nothing but those allowed."""
+        for key, line in self._table.lines.items():
+            if key not in allowed and self.has(key):
+                self.spot.at(key, line).problem(
+                    describe(self._table.nodes[key]), f"nothing but {', '.join(allowed)}",
+                    "Empty this cell; the offer's first row says it.",
+                )  # fmt: skip
+        self._known.update(self._table.nodes)
+        self.finish()
+
     def _take(self, key: str, expected: str) -> Node | None:
         if self.has(key):
             return self._table.nodes[key]

@@ -240,12 +240,14 @@ def describe(node: Node) -> str:
 
 
 def load_csv(
-    path: Path, header: Sequence[str], log: ProblemLog, *, name: str = ""
-) -> tuple[Table, ...]:
+    path: Path, header: Sequence[str], log: ProblemLog, *, name: str = "",
+    optional: Sequence[str] = (),
+) -> tuple[Table, ...]:  # fmt: skip
     """Read a comma-separated file, one row a line, as blocks of column and cell.
 
     Lines that start with ``#`` are comments and empty rows are skipped. The first other line must
-    name every column of ``header`` once and no others, in any order.
+    name every column of ``header`` once, those of ``optional`` at most once, and no others, in any
+    order.
 
     Returns
     -------
@@ -261,7 +263,7 @@ def load_csv(
     for number, cells in _csv_lines(text, spot):
         if columns is None:
             columns = cells
-            if not _is_header(columns, header, spot.at("header", number)):
+            if not _is_header(columns, header, optional, spot.at("header", number)):
                 return ()
         elif len(cells) != len(columns):
             _refuse_width(cells, columns, spot.at("row", number))
@@ -299,7 +301,9 @@ def _csv_lines(text: str, spot: Spot) -> Iterator[tuple[int, list[str]]]:
             yield number, cells
 
 
-def _is_header(columns: list[str], header: Sequence[str], spot: Spot) -> bool:
+def _is_header(
+    columns: list[str], header: Sequence[str], optional: Sequence[str], spot: Spot
+) -> bool:
     if len(columns) == 1 and any(mark in columns[0] for mark in ";\t|"):
         spot.problem(
             echo(columns[0]), "columns separated by commas", "Save the table as comma-separated."
@@ -311,8 +315,8 @@ def _is_header(columns: list[str], header: Sequence[str], spot: Spot) -> bool:
         if columns.count(column) > 1:
             spot.problem(f"the column {echo(column)} twice", "each column once", wanted)
             sound = False
-        elif column not in header:
-            near = closest(column, header)
+        elif column not in header and column not in optional:
+            near = closest(column, header) or closest(column, optional)
             hint = f"Did you mean `{near}`? {wanted}" if near else wanted
             spot.problem(f"the column {echo(column)}", "only known columns", hint)
             sound = False

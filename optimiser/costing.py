@@ -50,7 +50,6 @@ class Pricing:
         self.plant = plant
         site = plant.site
         self.book = PriceBook(site.offers)
-        self.by_reagent = [[o for o in site.offers if o.reagent == name] for name in plant.names]
         self.equipment = np.array(
             [site.treatment.equipment_cost_per_year.get(name, 0.0) for name in plant.names]
         )
@@ -71,7 +70,7 @@ class Pricing:
         freight = np.zeros(len(points))
         for i, name in enumerate(plant.names):
             kg = (doses[:, i] + trim[:, i]) * self.kg_per_mg_per_l
-            if not kg.any():
+            if not kg.any() and not self.book.sunk(name):
                 continue
             goods, carriage = self.purchase(i, kg)
             by_cause[name] = goods

@@ -10,15 +10,28 @@ from collections.abc import Iterable, Mapping
 from dataclasses import asdict, dataclass
 from typing import TYPE_CHECKING
 
-from optimiser.site import Offer
+from optimiser.offer import KG_PER_T, Offer
+from optimiser.offer_cost import (
+    CAUSES,
+    FEES,
+    FREIGHT,
+    GOODS,
+    REBATE,
+    SHORTFALL,
+    costs_at,
+    least_bought_t,
+    orders_in_a_year,
+    pieces_of,
+)
 
 if TYPE_CHECKING:
     import pandas as pd
 
-KG_PER_T = 1000.0
-GOODS, FREIGHT, TOTAL = "goods", "freight", "total"
-CAUSES = (GOODS, FREIGHT)
-"""Causes of purchasing cost, in the order they are printed."""
+__all__ = ["CAUSES", "FREIGHT", "GOODS", "KG_PER_T", "TOTAL", "Buy", "Deal", "buys_of", "deal_of"]
+
+TOTAL = "total"
+_AT_LEAST = 1.0 + 1e-6
+"""A purchase within this factor of the least order counts as that order."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -26,7 +39,9 @@ class Buy:
     """What is bought on one offer in a year.
 
     ``bought_t_per_year`` is product as delivered, the other amounts pure compound; bought is used
-    plus surplus. Costs are in the site's currency per year.
+    plus surplus. ``tier`` counts from 1; ``orders_per_year`` is None where the offer does not say
+    how it is ordered. Costs are in the site's currency per year: ``not_taken_per_year`` is what a
+    take-or-pay charges for goods that are not taken, ``rebate_per_year`` is 0 or less.
     """
 
     offer: str
@@ -40,11 +55,25 @@ class Buy:
     at_least_order: bool
     goods_per_year: float
     freight_per_year: float
+    not_taken_per_year: float = 0.0
+    fees_per_year: float = 0.0
+    rebate_per_year: float = 0.0
+    tier: int = 1
+    orders_per_year: float | None = None
 
     @property
     def cost_per_year(self) -> float:
-        """Goods and freight."""
-        return self.goods_per_year + self.freight_per_year
+        """All causes."""
+        return math.fsum(self.by_cause.values())
+
+    @property
+    def by_cause(self) -> dict[str, float]:
+        """Cost by cause."""
+        return {
+            GOODS: self.goods_per_year, FREIGHT: self.freight_per_year,
+            SHORTFALL: self.not_taken_per_year, FEES: self.fees_per_year,
+            REBATE: self.rebate_per_year,
+        }  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -54,9 +83,11 @@ class Deal:
     Attributes
     ----------
     cost
-        Currency per year by cause (`CAUSES`), with ``total``.
+        Currency per year by cause (`CAUSES`; those beyond goods and freight where they occur), with
+        ``total``.
     buys
-        One row per offer bought on, by reagent and falling amount used.
+        One row per offer bought on, by reagent and falling amount used; contracts signed already
+        are there too where they cost something.
     gap
         How far the cost may lie above the least one, as a fraction; None where a solver stopped
         before it could tell.
@@ -74,35 +105,62 @@ class Deal:
         import pandas as pd
 
         frame = pd.DataFrame([asdict(buy) for buy in self.buys], columns=list(Buy.__annotations__))
-        frame["cost_per_year"] = frame["goods_per_year"] + frame["freight_per_year"]
+        frame["cost_per_year"] = [buy.cost_per_year for buy in self.buys]
         return frame
 
 
 def deal_of(buys: Iterable[Buy], *, gap: float | None, solver: str) -> Deal:
     """Order and add up the rows of a deal."""
     rows = tuple(sorted(buys, key=lambda b: (b.reagent, -b.used_kg_pure_per_year, b.offer)))
-    goods = math.fsum(buy.goods_per_year for buy in rows)
-    freight = math.fsum(buy.freight_per_year for buy in rows)
-    cost = {GOODS: goods, FREIGHT: freight, TOTAL: goods + freight}
-    return Deal(cost=cost, buys=rows, gap=gap, solver=solver)
+    cost = {cause: math.fsum(buy.by_cause[cause] for buy in rows) for cause in CAUSES}
+    cost = {cause: value for cause, value in cost.items() if value or cause in {GOODS, FREIGHT}}
+    return Deal(cost={**cost, TOTAL: math.fsum(cost.values())}, buys=rows, gap=gap, solver=solver)
 
 
-def buy_of(
-    offer: Offer, *, bought_t: float, used_kg: float, costs: Mapping[str, float], at_least: bool
-) -> Buy:
-    """Row for one offer from what was bought of it and what that costs by cause."""
-    bought_kg = KG_PER_T * offer.strength_fraction * bought_t
-    used_kg = min(used_kg, bought_kg)
-    return Buy(
-        offer=offer.offer,
-        supplier=offer.supplier,
-        reagent=offer.reagent,
-        product=offer.product,
-        bought_t_per_year=bought_t,
-        bought_kg_pure_per_year=bought_kg,
-        used_kg_pure_per_year=used_kg,
-        surplus_kg_pure_per_year=bought_kg - used_kg,
-        at_least_order=at_least,
-        goods_per_year=costs[GOODS],
-        freight_per_year=costs[FREIGHT],
-    )
+def buys_of(amounts: Iterable[tuple[Offer, float]], demand_kg: float) -> list[Buy]:
+    """Rows for the tonnes bought of one reagent's offers.
+
+    Demand is drawn from the cheapest delivered compound first, so that a surplus shows on the
+    dearer offer.
+
+    Parameters
+    ----------
+    amounts
+        Offers that are used, with the tonnes bought of each.
+    demand_kg
+        What is used of all of them. [kg pure/year]
+    """
+    left, rows = demand_kg, []
+    for offer, tonnes in sorted(amounts, key=lambda pair: delivered_per_kg(*pair)):
+        costs, tier = costs_at(offer, tonnes)
+        bought_kg = offer.kg_pure_per_t * tonnes
+        used_kg = min(left, bought_kg)
+        left -= used_kg
+        rows.append(
+            Buy(
+                offer=offer.offer,
+                supplier=offer.supplier,
+                reagent=offer.reagent,
+                product=offer.product,
+                bought_t_per_year=tonnes,
+                bought_kg_pure_per_year=bought_kg,
+                used_kg_pure_per_year=used_kg,
+                surplus_kg_pure_per_year=bought_kg - used_kg,
+                at_least_order=0.0 < tonnes <= least_bought_t(offer) * _AT_LEAST,
+                goods_per_year=costs[GOODS],
+                freight_per_year=costs[FREIGHT],
+                not_taken_per_year=costs.get(SHORTFALL, 0.0),
+                fees_per_year=costs.get(FEES, 0.0),
+                rebate_per_year=costs.get(REBATE, 0.0),
+                tier=tier,
+                orders_per_year=orders_in_a_year(offer, tonnes),
+            )
+        )
+    return rows
+
+
+def delivered_per_kg(offer: Offer, tonnes: float) -> float:
+    """Cost of another kg pure around so many tonnes. [currency/kg]"""
+    holding = [p for p in pieces_of(offer) if p.low_t <= tonnes <= p.high_t]
+    slope = min((p.total.per_t for p in holding), default=offer.price_per_t)
+    return slope / offer.kg_pure_per_t

@@ -19,6 +19,7 @@ from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator
 from optimiser.gas_figures import gas_figures
 from optimiser.held_up import HeldUp, held_up_by
 from optimiser.points import END_TEXT
+from optimiser.purchasing import best_deal
 from optimiser.quality import LOAD
 from optimiser.quality_slopes import RULE
 from optimiser.site_salt import MODEL_TEXT
@@ -75,7 +76,7 @@ class Describer:
         """What is bought on each offer."""
         strengths = {o.offer: o.strength_fraction for o in self.site.offers}
         rows = []
-        for buy in self.evaluator.pricing.book.cheapest(self._demand()).buys:
+        for buy in best_deal(self._demand(), self.evaluator.pricing.book).buys:
             per_t = 1000.0 * strengths[buy.offer]
             rows.append(
                 {
@@ -91,7 +92,7 @@ class Describer:
 
     def feeding(self) -> list[Data]:
         """Every dose as it is fed: product, kg a day, litres an hour."""
-        chosen = {row["reagent"]: row["offer"] for row in self.purchases()}
+        chosen = {row["reagent"]: row["offer"] for row in reversed(self.purchases())}
         offers = {o.offer: o for o in self.site.offers}
         controller = int(self.seen.points.controller[self.point])
         tolerance = self.plant.treatment.dose_tolerance_fraction

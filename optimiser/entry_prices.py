@@ -10,11 +10,12 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
-from optimiser.deal import KG_PER_T
+from optimiser.errors import NoPurchase
 from optimiser.evaluation import Evaluator, Place
 from optimiser.nearby import Standing, changed, repolish
+from optimiser.offer import Offer
 from optimiser.polish import Track
-from optimiser.site import Offer
+from optimiser.price_book import cheapest_purchase
 
 Data = dict[str, Any]
 
@@ -103,9 +104,26 @@ def _bid(evaluator: Evaluator, offer: Offer, place: Place, plan_total: float) ->
     kg = dose * evaluator.pricing.kg_per_mg_per_l
     mine = evaluator.pricing.purchase(reagent, kg[None])
     now = float(mine[0][0] + mine[1][0])
-    tonnes = max(float(kg) / (KG_PER_T * offer.strength_fraction), offer.least_order_t)
+    tonnes, other = _alone(offer, float(kg))
+    if not tonnes:
+        return None
     rest = float(priced.total[row]) - now
-    return _Bid((plan_total - rest) / tonnes - offer.freight_per_t, tonnes, place)
+    return _Bid((plan_total - rest - other) / tonnes, tonnes, place)
+
+
+def _alone(offer: Offer, kg: float) -> tuple[float, float]:
+    """What a demand takes on an offer alone: goods over its price, and every other cost.
+
+    Where the price has tiers, goods over the first tier's price are the tonnes that would cost as
+    much at that price: all tiers move with it.
+    """
+    priced = offer if offer.price_per_t > 0.0 else offer.priced_at(LEAST_PRICE_PER_T)
+    try:
+        (buy, *_) = cheapest_purchase({offer.reagent: kg}, [priced]).buys
+    except NoPurchase:
+        return 0.0, 0.0
+    scaling = buy.goods_per_year + buy.not_taken_per_year + buy.rebate_per_year
+    return scaling / priced.price_per_t, buy.cost_per_year - scaling
 
 
 def _why(plan: Standing, offer: Offer) -> str:
@@ -171,7 +189,7 @@ def _polished(plan: Standing, offer: Offer, price_per_t: float, place: Place) ->
 def _forced(plan: Standing, offer: Offer, price_per_t: float) -> Evaluator:
     """The site where the offer, at a price, is the only one of its reagent."""
     site = plan.evaluator.site
-    priced = replace(offer, price=price_per_t, price_per="t")
+    priced = offer.priced_at(price_per_t)
     offers = (*(o for o in site.offers if o.reagent != offer.reagent), priced)
     return changed(plan.evaluator, replace(site, offers=offers))
 

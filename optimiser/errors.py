@@ -136,6 +136,14 @@ def bad_demand(reagent: str, demand: object) -> str:
     return f"{reagent}: a demand in kg pure per year is a number of 0 or more, found {demand!r}"
 
 
+def beyond_offers(reagent: str, demand_kg: float, most_kg: float) -> str:
+    """Say that the offers' caps do not reach a demand."""
+    return (
+        f"{reagent}: {demand_kg:,.0f} kg pure a year are needed, the offers sell at most "
+        f"{most_kg:,.0f}; raise a volume cap or add an offer"
+    )
+
+
 def unbounded_demand(reagent: str, offer: str) -> str:
     """Say that a least order needs an upper end of the demand."""
     return (

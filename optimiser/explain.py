@@ -21,6 +21,7 @@ from optimiser.marginal import binding_otherwise, marginal_costs
 from optimiser.nearby import NEAR_STEPS, RESOLUTION, Standing, repolish, stand, worst_ratios
 from optimiser.planning import find
 from optimiser.polish import Track
+from optimiser.purchasing import best_deal
 from optimiser.quality import UNREACHED_RATIO
 from optimiser.quality_slopes import RULE
 from optimiser.recipes import recipe_of
@@ -158,7 +159,7 @@ def _purchases(plan: Standing) -> list[Data]:
             "offer": buy.offer, "supplier": buy.supplier, "reagent": buy.reagent,
             "bought_t_per_year": buy.bought_t_per_year,
         }
-        for buy in pricing.book.cheapest(demand).buys
+        for buy in best_deal(demand, pricing.book).buys
     ]  # fmt: skip
 
 

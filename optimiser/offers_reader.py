@@ -1,39 +1,46 @@
 """The price book: reading ``offers.csv`` into offers, every row checked.
 
-Owns the columns and their meaning; what an order costs is `optimiser.purchasing`.
+Owns how rows make offers: one row each, further rows of the same offer for its further tiers. A row
+is read by `optimiser.offer_rows`, whatever kind of table it stands in.
 """
 
 from __future__ import annotations
 
 import datetime
 import math
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
-from catalogs.entries import NON_NEGATIVE, Entry, Range
-from catalogs.positions import load_csv
-from catalogs.problems import ProblemLog, echo, listed
+from catalogs.entries import Entry
+from catalogs.positions import Table, load_csv
+from catalogs.problems import ProblemLog, Spot, echo
 from catalogs.reagents import Reagent, load_reagents
-from optimiser.site import Offer
+from optimiser.offer import Offer, Tier
+from optimiser.offer_checks import check_shared, check_terms
+from optimiser.offer_rows import (
+    OFFER_COLUMNS,
+    TERM_COLUMNS,
+    TIER_CELLS,
+    read_offer,
+    refuse_formulas,
+    tier_cells,
+    tier_price,
+)
 
-OFFER_COLUMNS = (
-    "offer", "supplier", "reagent", "product", "form", "strength_percent", "density_kg_per_l",
-    "price", "price_per", "freight_per_t", "least_order_t", "valid_until", "note",
-)  # fmt: skip
-"""Header of a price book, in the order it is written."""
-
-PRICE_UNITS = ("t", "L")
-_STRENGTH_PERCENT = Range(low=1.0, high=100.0)
-_DENSITY_KG_PER_L = Range(low=0.2, high=5.0)
+__all__ = ["OFFER_COLUMNS", "TERM_COLUMNS", "expired_notes", "load_offers", "read_offers"]
 
 
-def load_offers(path: str | Path) -> tuple[Offer, ...]:
+def load_offers(path: str | Path, *, currency: str = "") -> tuple[Offer, ...]:
     """Read a price book.
 
     Parameters
     ----------
     path
-        A comma-separated file with the columns `OFFER_COLUMNS`.
+        A comma-separated file with the columns `OFFER_COLUMNS`, and of `TERM_COLUMNS` those that
+        some offer needs.
+    currency
+        The currency that costs are wanted in; offers in another one need a dated rate.
 
     Returns
     -------
@@ -45,13 +52,13 @@ def load_offers(path: str | Path) -> tuple[Offer, ...]:
         Everything that is wrong in the file, all at once.
     """
     log = ProblemLog()
-    offers, _ = read_offers(Path(path), load_reagents(), log)
+    offers, _ = read_offers(Path(path), load_reagents(), log, currency=currency)
     log.raise_if_any()
     return offers
 
 
 def read_offers(
-    path: Path, reagents: Mapping[str, Reagent], log: ProblemLog
+    path: Path, reagents: Mapping[str, Reagent], log: ProblemLog, *, currency: str = ""
 ) -> tuple[tuple[Offer, ...], frozenset[str]]:
     """Read a price book, recording problems in a log.
 
@@ -60,58 +67,95 @@ def read_offers(
     tuple
         The sound offers, and every reagent that some row offers, sound or not.
     """
+    rows = load_csv(path, OFFER_COLUMNS, log, optional=TERM_COLUMNS)
+    return offers_of_rows(rows, str(path), reagents, log, currency=currency)
+
+
+def offers_of_rows(
+    rows: Iterable[Table], file: str, reagents: Mapping[str, Reagent], log: ProblemLog,
+    *, currency: str = "",
+) -> tuple[tuple[Offer, ...], frozenset[str]]:  # fmt: skip
+    """Make offers of the rows of a table, recording problems in a log.
+
+    Returns
+    -------
+    tuple
+        The sound offers, and every reagent that some row offers, sound or not.
+    """
+    drafts: dict[str, _Draft] = {}
     sold: set[str] = set()
-    offers: dict[str, Offer] = {}
-    lines: dict[str, int] = {}
-    for row in load_csv(path, OFFER_COLUMNS, log):
+    for row in rows:
         before = len(log.problems)
-        entry = Entry.top(row, str(path), log)
-        offer = _offer(entry, reagents)
+        entry = Entry.top(row, file, log)
+        name = entry.text_or("offer")
+        if name in drafts and not entry.has("reagent") and entry.has("tier_from_t"):
+            _add_tier(drafts[name], entry)
+            drafts[name].sound &= len(log.problems) == before
+            continue
+        offer = read_offer(entry, reagents, currency)
+        draft = _Draft(offer, row.line, entry.spot, tier_cells(entry))
         entry.finish()
         sold.add(offer.reagent)
-        if offer.offer in lines:
+        if offer.offer in drafts:
             entry.at("offer").problem(
                 f"{echo(offer.offer)} twice",
                 "a name of its own for each offer",
-                f"It already stands in line {lines[offer.offer]}: rename one of them.",
+                f"It already stands in line {drafts[offer.offer].line}: rename one of them.",
             )
-        elif offer.offer:
-            lines[offer.offer] = row.line
-        if len(log.problems) == before:
-            offers[offer.offer] = offer
-    return tuple(offers.values()), frozenset(sold)
+        draft.sound = len(log.problems) == before
+        drafts.setdefault(offer.offer, draft)
+    offers = [(draft.finished(log), draft) for draft in drafts.values()]
+    sound = [(offer, draft.spot) for offer, draft in offers if draft.sound]
+    check_shared(sound)
+    return tuple(offer for offer, _ in sound), frozenset(sold)
 
 
-def _offer(entry: Entry, reagents: Mapping[str, Reagent]) -> Offer:
-    reagent = entry.choice("reagent", reagents, "reagents")
-    return Offer(
-        offer=entry.text("offer"),
-        supplier=entry.text("supplier"),
-        reagent=reagent,
-        product=entry.text("product"),
-        form=entry.text("form"),
-        strength_fraction=entry.number("strength_percent", _STRENGTH_PERCENT) / 100.0,
-        density_kg_per_l=_density(entry, reagents.get(reagent)),
-        price=entry.number("price", NON_NEGATIVE),
-        price_per=entry.choice("price_per", PRICE_UNITS, "units of price"),
-        freight_per_t=entry.number_or("freight_per_t", 0.0, NON_NEGATIVE),
-        least_order_t=entry.number_or("least_order_t", 0.0, NON_NEGATIVE),
-        valid_until=entry.day_or("valid_until"),
-        note=entry.text_or("note"),
-    )
+@dataclass(slots=True)
+class _Draft:
+    """An offer whose tiers are still being gathered."""
+
+    offer: Offer
+    line: int
+    spot: Spot
+    first: tuple[float, float, Spot]
+    further: list[tuple[float, float, Spot, float]] = field(default_factory=list)
+    sound: bool = True
+
+    def finished(self, log: ProblemLog) -> Offer:
+        """Put the tiers together and check the whole."""
+        before = len(log.problems)
+        start, end, spot = self.first
+        if not math.isnan(start) and start > 0.0:
+            spot.problem(
+                f"{start:g}", "0 for the first tier",
+                "Write 0 here and the least amount in least_order_t.",
+            )  # fmt: skip
+        for begin, stop, place, _ in self.further:
+            if math.isfinite(end) and begin != end:
+                what = "a gap" if begin > end else "an overlap"
+                place.problem(
+                    f"{what}: {begin:g} after a tier that ends at {end:g}",
+                    "tiers that join",
+                    f"Begin this tier at {end:g}, or end the one before at {begin:g}.",
+                )
+            end = stop
+        offer = replace(
+            self.offer,
+            tiers=tuple(Tier(from_t=begin, price=price) for begin, _, _, price in self.further),
+        )
+        if math.isfinite(end) and self.offer.tier_per != "order":
+            offer = replace(offer, most_t_per_year=min(offer.most_t_per_year, end))
+        if self.sound and len(log.problems) == before:
+            check_terms(offer, self.spot)
+        self.sound &= len(log.problems) == before
+        return offer
 
 
-def _density(entry: Entry, reagent: Reagent | None) -> float:
-    """Read the density; where the cell is empty, say what the catalog knows of the reagent."""
-    if reagent is None or entry.has("density_kg_per_l"):
-        return entry.number("density_kg_per_l", _DENSITY_KG_PER_L)
-    usual = listed(f"{form.density_kg_per_l:g} ({form.form})" for form in reagent.product_forms)
-    entry.at("density_kg_per_l").problem(
-        "nothing",
-        _DENSITY_KG_PER_L.describe(),
-        f"Take it from the data sheet (bulk density of a solid). Usual values: {usual}.",
-    )
-    return math.nan
+def _add_tier(draft: _Draft, entry: Entry) -> None:
+    refuse_formulas(entry)
+    start, end, spot = tier_cells(entry)
+    draft.further.append((start, end, spot, tier_price(entry)))
+    entry.finish_row(TIER_CELLS)
 
 
 def expired_notes(offers: tuple[Offer, ...], today: datetime.date) -> tuple[str, ...]:

@@ -6,7 +6,7 @@ Owns the rows and costs of the model; moving along its solutions is `optimiser.p
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,10 +15,9 @@ from chemistry.sludge import dry_masses_mg_per_l
 from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER
 from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.linear_model import Expression, Model, Sense
+from optimiser.local_purchase import add_local_purchase
 from optimiser.points import CLOSED_FORMED, VENTED_FORMED, Points
-from optimiser.purchasing import add_purchasing
 from optimiser.quality_slopes import burden_charge
-from optimiser.site import Offer
 
 FloatArray = NDArray[np.float64]
 
@@ -194,29 +193,15 @@ def _add_purchases(
     model: Model, evaluator: Evaluator, seen: Evaluation, row: int, radius: float,
     demand: Mapping[str, Expression],
 ) -> None:  # fmt: skip
-    """The purchasing block, with what cannot matter within a step of this radius left out.
-
-    Where one offer is cheapest at both ends of the demand, it stands alone: above its least order
-    throughout without that order, so that the step needs no binaries; below it throughout as the
-    constant cost of the least order.
-    """
+    """The least cost of every demand by the price book's curves, near where it is now."""
     pricing = evaluator.pricing
     fed = seen.priced.doses[row] + seen.priced.trim_doses[row]
-    offers: list[Offer] = []
-    wanted = dict(demand)
-    for name in demand:
-        i = evaluator.plant.index[name]
-        ends = [fed[i] * pricing.kg_per_mg_per_l * f for f in (1.0 / (1.0 + radius), 1.0 + radius)]
-        best, other = (pricing.book.offer_for(name, kg) for kg in ends)
-        least_kg = 1000.0 * best.least_order_t * best.strength_fraction
-        if best is not other or ends[0] < least_kg < ends[1]:
-            offers += pricing.by_reagent[i]
-        elif ends[0] >= least_kg:
-            offers.append(replace(best, least_order_t=0.0))
-        else:
-            del wanted[name]
-            model.add_cost("least order", Expression({}, pricing.book.cost(name, ends[0])))
-    add_purchasing(model, offers, wanted)
+    for name, needed in demand.items():
+        here = fed[evaluator.plant.index[name]] * pricing.kg_per_mg_per_l
+        add_local_purchase(
+            model, name, needed, pricing.book.curve(name),
+            here / (1.0 + radius), here * (1.0 + radius),
+        )  # fmt: skip
 
 
 def _amount_rows(seen: Evaluation, row: int, kind: str) -> list[tuple[float, FloatArray]]:

@@ -1,7 +1,8 @@
-"""The cheapest purchase in closed form, for offers with one price and a least order.
+"""The cheapest purchase without a solver, from the least-cost curve of each reagent.
 
-Owns the proof that one offer per reagent is enough under these terms, and the slope of the least
-cost. Terms beyond these need the mixed-integer block of `optimiser.purchasing`.
+Owns the pricing of many demands at once and the slope of the least cost; the curves are built in
+`optimiser.cost_curve`. Where terms tie offers together or come in whole packs the curve is a lower
+value, and `optimiser.purchasing.best_deal` asks a solver.
 """
 
 from __future__ import annotations
@@ -14,91 +15,75 @@ from typing import SupportsFloat
 import numpy as np
 from numpy.typing import NDArray
 
-from optimiser.deal import FREIGHT, GOODS, KG_PER_T, Buy, Deal, buy_of, deal_of
-from optimiser.errors import NoPurchase, bad_demand, no_offer
+from optimiser.cost_curve import CostCurve, curve_of
+from optimiser.deal import Buy, Deal, buys_of, deal_of
+from optimiser.errors import NoPurchase, bad_demand, beyond_offers, no_offer
+from optimiser.offer import Offer
 from optimiser.offer_checks import require_usable_offers
-from optimiser.site import Offer
 
 FloatArray = NDArray[np.float64]
 
 LEAST_DEMAND_KG = 1e-3
 """A demand above 0 counts as a gram a year at least: below that, solvers see nothing."""
 
-_TIE = 1e-12
-"""Offers whose costs differ by less than this fraction are equally cheap."""
-
 
 @dataclass(frozen=True, slots=True)
 class MarginalCost:
     """Change of the least yearly cost per kg pure more, and per kg pure less, of a reagent.
 
-    They differ where two offers cost the same and where a least order is just used up. Either is 0
-    while the demand stays below the least order of the cheapest offer.
+    They differ where two ways of buying cost the same and where an amount is just used up. Either
+    is 0 while what is bought anyway is not used up.
     """
 
     up_per_kg: float
     down_per_kg: float
 
 
-@dataclass(frozen=True, slots=True)
-class _Line:
-    """An offer as the closed form sees it: unit cost and least order of pure compound."""
-
-    offer: Offer
-    per_kg: float
-    least_kg: float
-
-    def cost(self, demand_kg: float) -> float:
-        return self.per_kg * max(demand_kg, self.least_kg)
-
-
 class PriceBook:
-    """Offers prepared for pricing many demands.
+    """Offers prepared for pricing many demands; reagents do not share offers here.
 
     Notes
     -----
-    With unit cost ``c_i`` and least order ``m_i`` per offer, both per kg pure, the least cost of
-    ``D`` kg of one reagent is ``min_i c_i max(D, m_i)``: splitting never helps. Take any purchase
-    ``q_i`` that covers ``D`` and let ``k`` be the offer with the least ``c`` among those used. All
-    of ``sum q`` bought from ``k`` costs ``c_k sum q <= sum c_i q_i``; it covers ``D``, and it
-    respects the least order because ``sum q >= q_k >= m_k``. Hence buying ``max(D, m_k) <= sum q``
-    from ``k`` alone costs no more. The argument needs prices of 0 or more and no ceiling on any
-    offer; tiers, packs or caps break it. Reagents do not share offers, so each stands alone.
+    Exact for every term of one offer and for splits between offers of one reagent. `inexact` names
+    the reagents with whole packs, suppliers' shares or bundles: their values are lower values.
     """
 
     def __init__(self, offers: Iterable[Offer]) -> None:
-        self._lines: dict[str, list[_Line]] = {}
-        for offer in require_usable_offers(offers):
-            pure_kg_per_t = KG_PER_T * offer.strength_fraction
-            per_kg = (offer.price_per_t + offer.freight_per_t) / pure_kg_per_t
-            line = _Line(offer, per_kg, offer.least_order_t * pure_kg_per_t)
-            self._lines.setdefault(offer.reagent, []).append(line)
+        self.offers = require_usable_offers(offers)
+        by_reagent: dict[str, list[Offer]] = {}
+        for offer in self.offers:
+            by_reagent.setdefault(offer.reagent, []).append(offer)
+        self._offers = {name: tuple(mine) for name, mine in by_reagent.items()}
+        curves = {name: curve_of(mine) for name, mine in self._offers.items()}
+        self._curves = {name: curve for name, curve in curves.items() if curve is not None}
+        self.inexact = frozenset(o.reagent for o in self.offers if _needs_a_solver(o))
 
     @property
     def reagents(self) -> tuple[str, ...]:
         """Reagents that some offer sells, sorted."""
-        return tuple(sorted(self._lines))
+        return tuple(sorted(self._offers))
 
     def cost(self, reagent: str, demand_kg_per_year: float) -> float:
-        """Least yearly cost of one reagent's demand, goods and freight.
+        """Least yearly cost of one reagent's demand, all causes.
 
         Raises
         ------
         NoPurchase
-            No offer sells it, or the demand is no amount.
+            No offer sells it, not that much, or the demand is no amount.
         """
         demand_kg = self._counted(reagent, demand_kg_per_year)
         if demand_kg == 0.0:
-            return 0.0
-        return min(line.cost(demand_kg) for line in self._sold(reagent))
+            return self.sunk(reagent)
+        goods, freight = self._covering(reagent, demand_kg).costs(np.array([demand_kg]))
+        return float(goods[0] + freight[0])
 
     def costs(self, reagent: str, demand_kg: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Goods and freight of the cheapest purchase of many demands of one reagent.
+        """Goods (with every cause but freight) and freight of many demands of one reagent.
 
         Parameters
         ----------
         reagent
-            Id of the reagent; nobody selling it costs infinitely much.
+            Id of the reagent; what nobody sells, or not that much, costs infinitely much.
         demand_kg : ndarray, shape (n,)
             Demands. [kg pure/year]
 
@@ -108,29 +93,39 @@ class PriceBook:
             [currency/year]
         """
         demand = np.asarray(demand_kg, dtype=float)
-        goods, freight = np.full(demand.shape, np.inf), np.zeros(demand.shape)
-        best = np.full(demand.shape, np.inf)
-        for line in self._lines.get(reagent, ()):
-            cost = line.per_kg * np.maximum(demand, line.least_kg)
-            better = cost < best
-            share = line.offer.freight_per_t / max(
-                line.offer.price_per_t + line.offer.freight_per_t, 1e-300
-            )
-            goods = np.where(better, (1.0 - share) * cost, goods)
-            freight = np.where(better, share * cost, freight)
-            best = np.where(better, cost, best)
         used = demand > 0.0
-        return np.where(used, goods, 0.0), np.where(used, freight, 0.0)
+        if reagent not in self._curves:
+            return np.where(used, np.inf, 0.0), np.zeros(demand.shape)
+        goods, freight = self._curves[reagent].costs(demand)
+        return np.where(used, goods, self.sunk(reagent)), np.where(used, freight, 0.0)
 
-    def offer_for(self, reagent: str, demand_kg_per_year: float) -> Offer:
-        """The offer that a demand is bought on, as in `cheapest`.
+    def sunk(self, reagent: str) -> float:
+        """What contracts signed already cost a year when nothing of the reagent is needed."""
+        curve = self._curves.get(reagent)
+        return 0.0 if curve is None else curve.at_zero
+
+    def curve(self, reagent: str) -> CostCurve:
+        """The least-cost curve of a reagent.
 
         Raises
         ------
         NoPurchase
-            No offer sells it, or the demand is no amount.
+            No offer sells it.
         """
-        return self._best_line(reagent, self._counted(reagent, demand_kg_per_year)).offer
+        if reagent not in self._curves:
+            raise NoPurchase([no_offer(reagent, self.reagents)])
+        return self._curves[reagent]
+
+    def offer_for(self, reagent: str, demand_kg_per_year: float) -> Offer:
+        """The offer that most of a demand is bought on, as in `cheapest`.
+
+        Raises
+        ------
+        NoPurchase
+            No offer sells it, not that much, or the demand is no amount.
+        """
+        bought = self._bought(reagent, self._counted(reagent, demand_kg_per_year))
+        return max(bought, key=lambda pair: pair[1] * pair[0].strength_fraction)[0]
 
     def entry_cost(self, reagent: str) -> float:
         """Least yearly cost of buying any of a reagent at all: the jump at a demand of 0.
@@ -140,29 +135,40 @@ class PriceBook:
         NoPurchase
             No offer sells it.
         """
-        return min(line.per_kg * line.least_kg for line in self._sold(reagent))
+        curve = self.curve(reagent)
+        return float(curve.fixed[curve.first]) - curve.at_zero
 
     def marginal_cost(self, reagent: str, demand_kg_per_year: float) -> MarginalCost:
         """Slope of the least cost on both sides of a demand.
 
         At a demand of 0 the upward slope is the one beyond the jump (see `entry_cost`), and the
-        downward slope is 0.
+        downward slope is 0; the upward slope is infinite where no more can be bought or the cost
+        jumps.
 
         Raises
         ------
         NoPurchase
-            No offer sells it, or the demand is no amount.
+            No offer sells it, not that much, or the demand is no amount.
         """
         demand_kg = self._counted(reagent, demand_kg_per_year)
-        cheapest = self._cheapest_lines(reagent, demand_kg)
-        up = min(line.per_kg if demand_kg >= line.least_kg else 0.0 for line in cheapest)
-        down = max(line.per_kg if demand_kg > line.least_kg else 0.0 for line in cheapest)
-        return MarginalCost(up, down)
+        if demand_kg == 0.0:
+            curve = self.curve(reagent)
+            return MarginalCost(float(curve.slope[curve.first]), 0.0)
+        curve = self._covering(reagent, demand_kg)
+        here = int(curve.piece(np.array([demand_kg]))[0])
+        near = demand_kg * (1.0 + 1e-12)
+        above = int(curve.piece(np.array([near]))[0])
+        if above == curve.high_kg.size:
+            return MarginalCost(math.inf, float(curve.slope[here]))
+        cost = curve.fixed[here] + curve.slope[here] * demand_kg
+        jump = curve.fixed[above] + curve.slope[above] * demand_kg - cost
+        up = math.inf if jump > 1e-9 * max(1.0, abs(cost)) else float(curve.slope[above])
+        return MarginalCost(up, float(curve.slope[here]))
 
     def cheapest(self, demand: Mapping[str, float]) -> Deal:
-        """Cheapest purchase of a demand per reagent.
+        """Cheapest purchase of a demand per reagent, by the curves.
 
-        Among offers equally cheap the one with the smaller surplus is taken, then the first.
+        Among purchases equally cheap the one with the smaller surplus is taken, then the first.
 
         Parameters
         ----------
@@ -174,41 +180,48 @@ class PriceBook:
         NoPurchase
             With every reagent that cannot be bought.
         """
-        needed = counted_demand(demand, self._lines.keys())
-        buys = [self._buy(reagent, kg) for reagent, kg in needed.items() if kg > 0.0]
+        needed = counted_demand(demand, self._offers.keys())
+        buys: list[Buy] = []
+        reasons: list[str] = []
+        for reagent in dict.fromkeys([*needed, *self.reagents]):
+            try:
+                buys += self._buys(reagent, needed.get(reagent, 0.0))
+            except NoPurchase as none:
+                reasons += none.reasons
+        if reasons:
+            raise NoPurchase(reasons)
         return deal_of(buys, gap=0.0, solver="closed form")
 
-    def _buy(self, reagent: str, demand_kg: float) -> Buy:
-        line = self._best_line(reagent, demand_kg)
-        offer = line.offer
-        at_least = demand_kg <= line.least_kg
-        tonnes = (
-            offer.least_order_t if at_least else demand_kg / (KG_PER_T * offer.strength_fraction)
-        )
-        costs = {GOODS: tonnes * offer.price_per_t, FREIGHT: tonnes * offer.freight_per_t}
-        return buy_of(offer, bought_t=tonnes, used_kg=demand_kg, costs=costs, at_least=at_least)
+    def _buys(self, reagent: str, demand_kg: float) -> list[Buy]:
+        if demand_kg == 0.0 and self.sunk(reagent) == 0.0:
+            return []
+        rows = buys_of(self._bought(reagent, demand_kg), demand_kg)
+        return [row for row in rows if row.bought_t_per_year > 0.0 or row.cost_per_year > 0.0]
+
+    def _bought(self, reagent: str, demand_kg: float) -> list[tuple[Offer, float]]:
+        curve = self._covering(reagent, demand_kg)
+        way = curve.ways[int(curve.piece(np.array([demand_kg]))[0])]
+        mine = self._offers[reagent]
+        return [(mine[k], kg / mine[k].kg_pure_per_t) for k, kg in way.at(demand_kg)]
+
+    def _covering(self, reagent: str, demand_kg: float) -> CostCurve:
+        if reagent not in self._offers:
+            raise NoPurchase([no_offer(reagent, self.reagents)])
+        curve = self._curves.get(reagent)
+        most = 0.0 if curve is None else float(curve.high_kg[-1])
+        if curve is None or demand_kg > most:
+            raise NoPurchase([beyond_offers(reagent, demand_kg, most)])
+        return curve
 
     def _counted(self, reagent: str, demand_kg: float) -> float:
         if not _is_amount(demand_kg):
             raise NoPurchase([bad_demand(reagent, demand_kg)])
         return _counted_kg(demand_kg)
 
-    def _sold(self, reagent: str) -> list[_Line]:
-        if reagent not in self._lines:
-            raise NoPurchase([no_offer(reagent, self.reagents)])
-        return self._lines[reagent]
 
-    def _best_line(self, reagent: str, demand_kg: float) -> _Line:
-        lines = self._cheapest_lines(reagent, demand_kg)
-        return min(lines, key=lambda one: max(demand_kg, one.least_kg))
-
-    def _cheapest_lines(self, reagent: str, demand_kg: float) -> list[_Line]:
-        lines = self._sold(reagent)
-        costs = [line.cost(demand_kg) for line in lines]
-        least = min(costs)
-        return [
-            line for line, cost in zip(lines, costs, strict=True) if cost <= least * (1.0 + _TIE)
-        ]
+def _needs_a_solver(offer: Offer) -> bool:
+    shared = offer.least_share_fraction > 0.0 or offer.most_share_fraction < 1.0
+    return offer.pack_t > 0.0 or shared or bool(offer.bundle)
 
 
 def cheapest_purchase(demand: Mapping[str, float], offers: Iterable[Offer]) -> Deal:
@@ -219,7 +232,8 @@ def cheapest_purchase(demand: Mapping[str, float], offers: Iterable[Offer]) -> D
     demand
         Demand per reagent; keys ``reagent@stage`` are added up by reagent. [kg pure/year]
     offers
-        Offers with one price and a least order each.
+        Offers; where whole packs, bundles or suppliers' shares are among their terms the cost is a
+        lower value, see `PriceBook`.
 
     Raises
     ------

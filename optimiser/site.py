@@ -12,6 +12,21 @@ from pathlib import Path
 from catalogs.reagents import Reagent
 from chemistry.feed import WaterAnalysis
 from chemistry.system import System
+from optimiser.offer import Offer
+
+__all__ = [
+    "Disposal",
+    "DisposalRule",
+    "Limit",
+    "Offer",
+    "OwnConstant",
+    "PhWindow",
+    "Separator",
+    "Site",
+    "SolidSwitch",
+    "SolverSettings",
+    "Treatment",
+]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -111,34 +126,6 @@ class Disposal:
     rules: tuple[DisposalRule, ...]
     cake_solids_fraction: float = 0.30
     bound_water_factor: float = 1.2
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Offer:
-    """One supplier's terms for one product of one reagent.
-
-    ``price`` is per tonne or per litre of product as delivered (``price_per`` says which);
-    ``strength_fraction`` is kg of pure compound per kg of product.
-    """
-
-    offer: str
-    supplier: str
-    reagent: str
-    product: str
-    form: str
-    strength_fraction: float
-    density_kg_per_l: float
-    price: float
-    price_per: str
-    freight_per_t: float = 0.0
-    least_order_t: float = 0.0
-    valid_until: str = ""
-    note: str = ""
-
-    @property
-    def price_per_t(self) -> float:
-        """Price per tonne of product, without freight."""
-        return self.price if self.price_per == "t" else self.price * 1000.0 / self.density_kg_per_l
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

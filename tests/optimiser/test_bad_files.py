@@ -354,7 +354,7 @@ def test_a_decimal_comma_inside_braces_is_explained() -> None:
          "found nothing, expected a number of 0 or more\n    Add `price` here."),
         (",300,t,", ",300,kg,", "2: price_per",
          "found 'kg', expected one of the units of price\n    The units of price known here: L,"
-         " t."),
+         " pack, short_ton, t."),
         (",50,1.525", ",0.5,1.525", "2: strength_percent",
          "found 0.5, expected a number from 1 to 100\n" + RANGE),
         (",50,1.525", ",50,1525", "2: density_kg_per_l",
