@@ -17,6 +17,7 @@ from catalogs.problems import Spot, closest, echo, listed
 from chemistry.feed import Analyte
 from chemistry.formula import elements_of
 from chemistry.units import (
+    L_PER_US_GALLON,
     meq_per_l_to_mg_per_l_as_caco3,
     mg_per_l_as_basis_to_mg_per_l,
     mol_per_l_to_mg_per_l,
@@ -27,6 +28,12 @@ MASS_UNITS_IN_MG_PER_L: Mapping[str, float] = {
 }  # fmt: skip
 AMOUNT_UNITS_IN_MOL_PER_L: Mapping[str, float] = {"mol/L": 1.0, "mmol/L": 1e-3, "umol/L": 1e-6}
 CHARGE_UNITS_IN_MEQ_PER_L: Mapping[str, float] = {"meq/L": 1.0, "eq/L": 1e3}
+FLOW_UNITS_IN_M3_PER_D: Mapping[str, float] = {
+    "m3/d": 1.0, "m3/h": 24.0, "m3/s": 86400.0, "L/s": 86.4, "L/min": 1.44, "L/h": 0.024,
+    "L/d": 1e-3, "ML/d": 1e3, "gpm": 1.44 * L_PER_US_GALLON, "gpd": 1e-3 * L_PER_US_GALLON,
+    "MGD": 1e3 * L_PER_US_GALLON,
+}  # fmt: skip
+"""Units of flow; gallons are US gallons. [m3/d]"""
 
 _UNITS = (*MASS_UNITS_IN_MG_PER_L, *AMOUNT_UNITS_IN_MOL_PER_L, *CHARGE_UNITS_IN_MEQ_PER_L)
 _QUANTITY = re.compile(

@@ -226,7 +226,7 @@ def feed_water(analysis: WaterAnalysis, system: System) -> FeedWater:
     and gives all other protons and hydroxide to the anions, so that bicarbonate and bisulfate
     count as single charges.
     """
-    measured = _totals_mol_per_l(analysis, system)
+    measured = measured_totals_mol_per_l(analysis, system)
     ion = component_of(analysis.close_charge_with)
     if ion not in system.index:
         raise WaterError(f"the closing ion {ion} is no component of the system")
@@ -256,7 +256,7 @@ def feed_water(analysis: WaterAnalysis, system: System) -> FeedWater:
     return feed_notes.with_notes(water)
 
 
-def _totals_mol_per_l(analysis: WaterAnalysis, system: System) -> FloatArray:
+def measured_totals_mol_per_l(analysis: WaterAnalysis, system: System) -> FloatArray:
     """Component totals as analysed, TOT-H left at 0."""
     totals = np.zeros(len(system.components))
     missing = []

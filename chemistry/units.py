@@ -161,6 +161,17 @@ def price_per_lb_to_price_per_t(price_per_lb: Amount) -> Amount:
     return price_per_lb / (KG_PER_POUND / KG_PER_TONNE)
 
 
+def degf_to_degc(temperature_degf: Amount) -> Amount:
+    """Convert degrees Fahrenheit to degrees Celsius.
+
+    Examples
+    --------
+    >>> degf_to_degc(68.0)
+    20.0
+    """
+    return (temperature_degf - 32.0) / 1.8
+
+
 def us_gallon_to_l(volume_us_gallon: Amount) -> Amount:
     """Convert US liquid gallons to litres."""
     return volume_us_gallon * L_PER_US_GALLON

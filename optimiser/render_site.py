@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from optimiser.render_samples import sample_lines
 from optimiser.site import Limit, Site
 from optimiser.tables import bullets, given, paragraph
 
@@ -20,7 +21,7 @@ def site_text(site: Site) -> str:
     lines = [f"{site.path}: no problem found"]
     lines += paragraph(
         f"{site.name}: {given(site.flow_m3_per_d)} m3/d on {given(site.operating_days_per_year)} "
-        f"days a year, the analysis stands for the {site.stands_for}; prices in {site.currency}."
+        f"days a year, {_stands_for(site)}; prices in {site.currency}."
     )
     facts = [
         f"Analysed: {', '.join(site.analysis.measurements)}.",
@@ -39,7 +40,14 @@ def site_text(site: Site) -> str:
     notes = dict.fromkeys([*site.notes, *feed.notes])
     if notes:
         lines += ["Worth knowing:", *bullets(list(notes))]
+    lines += sample_lines(site)
     return "\n".join(lines) + "\n"
+
+
+def _stands_for(site: Site) -> str:
+    if site.samples is None:
+        return f"the analysis stands for the {site.stands_for}"
+    return f"the mean of {len(site.samples.samples)} samples stands for the {site.stands_for}"
 
 
 def _limits(limits: tuple[Limit, ...]) -> str:

@@ -11,6 +11,8 @@ from pathlib import Path
 
 from catalogs.reagents import Reagent
 from chemistry.feed import WaterAnalysis
+from chemistry.sample_waters import SampleWaters
+from chemistry.samples import Samples
 from chemistry.system import System
 from optimiser.offer import Offer
 
@@ -209,6 +211,10 @@ class Site:
     """Doses of today's practice, mg/L pure fed, if the site file gives them."""
     own_constants: tuple[OwnConstant, ...] = ()
     solid_switches: tuple[SolidSwitch, ...] = ()
+    samples: Samples | None = None
+    """Dated samples of the feed where the site names a file; ``analysis`` is then their mean."""
+    sample_waters: SampleWaters | None = None
+    """The samples' closed waters in ``system``, in the order of ``samples``."""
 
     @property
     def flow_m3_per_year(self) -> float:

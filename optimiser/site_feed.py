@@ -5,9 +5,11 @@ Owns reading and checking that block; closing the charge is `chemistry.feed`.
 
 from __future__ import annotations
 
+import datetime
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
+from pathlib import Path
 
 from catalogs.entries import NON_NEGATIVE, PH, POSITIVE, Entry, Range, to_day, to_number
 from catalogs.positions import Items, Node, Table, describe
@@ -16,6 +18,9 @@ from catalogs.quantities import Concentration, read_alkalinity, read_concentrati
 from chemistry.analysis import ACIDITY_END_PH, CHELATES
 from chemistry.errors import WaterError
 from chemistry.feed import ANALYTES, METALS, Measurement, WaterAnalysis
+from chemistry.sample_waters import mean_analysis
+from chemistry.samples import SampleDefaults
+from optimiser.site_samples import SampleBlock, finish_samples, read_sample_source
 
 STATES_OF_ELEMENT: Mapping[str, tuple[str, ...]] = {
     "Fe": ("Fe(II)", "Fe(III)"),
@@ -54,40 +59,95 @@ class FeedBlock:
     pretreated: Mapping[str, str]
     analysis_spot: Spot
     notes: tuple[str, ...]
+    sampled: SampleBlock | None = None
+    samples_named: bool = False
+
+    @property
+    def is_complete(self) -> bool:
+        """Whether every analyte is known: a file of samples that is named could be read."""
+        return not self.samples_named or self.sampled is not None
 
 
-def read_feed(entry: Entry) -> FeedBlock:
+def read_feed(entry: Entry, folder: Path, on_day: datetime.date) -> FeedBlock:
     """Read the feed block of a site file.
 
     Parameters
     ----------
     entry
         The block; its log takes the problems.
+    folder
+        Where the site file lies, for a file of samples beside it.
+    on_day
+        Day after which no sample can have been taken.
+
+    Notes
+    -----
+    With a file of samples the keys of the block stand for what the file lacks, and a flow given
+    beside it stays the flow of the year. The analysis is then the mean of the samples.
     """
     before = len(entry.spot.log.problems)
+    has_samples = entry.has("samples")
     stands_for = entry.choice("stands_for", STANDS_FOR, "kinds of feed")
-    flow = entry.number("flow_m3_per_d", POSITIVE)
+    flow = _number(entry, "flow_m3_per_d", POSITIVE, required=not has_samples)
     days = entry.number("operating_days_per_year", _DAYS_PER_YEAR)
-    temperature = entry.number("temperature_degc", _TEMPERATURE_DEGC)
+    temperature = _number(entry, "temperature_degc", _TEMPERATURE_DEGC, required=not has_samples)
     aerated = entry.flag_or("aerated", default=False)
     closing = entry.choice("close_charge_with", CLOSING_IONS, "closing ions")
     analysed: dict[str, Spot] = {}
-    measurements = _read_measurements(entry, analysed)
-    pretreated, notes = _read_pretreated(entry, measurements, analysed)
-    acid = _read_acid(entry)
+    measurements = _read_measurements(entry, analysed, required=not has_samples)
+    acid = _read_acid(entry, required=not has_samples)
+    if has_samples and acid.titration:
+        entry.at("titration").problem(
+            "one titration beside a file of samples", "the acidity of each sample",
+            "Give an acidity column in the file, or leave the titration out.",
+        )  # fmt: skip
+    source = read_sample_source(entry, folder, on_day) if has_samples else None
+    sampled = None
+    if source is not None and len(entry.spot.log.problems) == before:
+        sampled = finish_samples(
+            source, entry,
+            SampleDefaults(
+                close_charge_with=closing, temperature_degc=temperature, flow_m3_per_d=flow,
+                ph=acid.ph, acidity_meq_per_l=acid.acidity_meq_per_l, aerated=aerated,
+                alkalinity_mg_per_l_as_caco3=acid.alkalinity_mg_per_l_as_caco3,
+                tss_mg_per_l=acid.tss_mg_per_l, measurements=measurements,
+            ),
+        )  # fmt: skip
+    highest = measurements if sampled is None else _highest(sampled)
+    if source is not None:
+        analysed |= dict.fromkeys(source.analytes, source.spot)
+    pretreated, notes = _read_pretreated(entry, highest, analysed)
     entry.finish()
     analysis = None
-    if len(entry.spot.log.problems) == before:
+    if len(entry.spot.log.problems) == before and sampled is not None:
+        analysis = mean_analysis(sampled.samples)
+        flow = sampled.samples.mean_flow_m3_per_d if flow is None else flow
+        temperature = analysis.temperature_degc if temperature is None else temperature
+    elif len(entry.spot.log.problems) == before:
         analysis = _water(
             acid, entry.at("analysis"), measurements=measurements, close_charge_with=closing,
-            temperature_degc=temperature, aerated=aerated,
+            temperature_degc=temperature or 0.0, aerated=aerated,
         )  # fmt: skip
     return FeedBlock(
-        stands_for=stands_for, flow_m3_per_d=flow, operating_days_per_year=days,
-        temperature_degc=temperature, analysis=analysis, analysed=analysed, aerated=aerated,
+        stands_for=stands_for, flow_m3_per_d=math.nan if flow is None else flow,
+        operating_days_per_year=days, analysis=analysis, analysed=analysed, aerated=aerated,
+        temperature_degc=math.nan if temperature is None else temperature,
         closing_analyte=closing, pretreated=pretreated, analysis_spot=entry.at("analysis"),
-        notes=notes,
+        notes=notes, sampled=sampled, samples_named=has_samples,
     )  # fmt: skip
+
+
+def _number(entry: Entry, key: str, allowed: Range, *, required: bool) -> float | None:
+    return entry.number(key, allowed) if required else entry.number_or(key, None, allowed)
+
+
+def _highest(sampled: SampleBlock) -> dict[str, Measurement]:
+    """The measurement with most of each analyte in solution."""
+    analyses = [sample.analysis for sample in sampled.samples.samples]
+    return {
+        name: max((a.measurements[name] for a in analyses), key=lambda m: m.dissolved_mg_per_l)
+        for name in sampled.samples.analytes
+    }
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -102,7 +162,7 @@ class _Acid:
     tss_mg_per_l: float
 
 
-def _read_acid(entry: Entry) -> _Acid:
+def _read_acid(entry: Entry, *, required: bool) -> _Acid:
     alkalinity = None
     for node, spot in entry.value("alkalinity"):
         alkalinity = read_alkalinity(node, spot)
@@ -114,7 +174,8 @@ def _read_acid(entry: Entry) -> _Acid:
         alkalinity_mg_per_l_as_caco3=alkalinity,
         tss_mg_per_l=entry.number_or("tss_mg_per_l", 0.0, NON_NEGATIVE),
     )
-    if not any(entry.has(key) for key in ("ph", "acidity_meq_per_l", "titration")):
+    given = any(entry.has(key) for key in ("ph", "acidity_meq_per_l", "titration"))
+    if required and not given:
         entry.at("ph").problem(
             "no acid", "ph, acidity_meq_per_l or titration", "Add the measured `ph` here."
         )
@@ -160,9 +221,11 @@ def _read_titration(entry: Entry) -> tuple[tuple[float, float], ...]:
     return tuple(points)
 
 
-def _read_measurements(entry: Entry, analysed: dict[str, Spot]) -> dict[str, Measurement]:
+def _read_measurements(
+    entry: Entry, analysed: dict[str, Spot], *, required: bool
+) -> dict[str, Measurement]:
     before = len(entry.spot.log.problems)
-    block = entry.block("analysis")
+    block = entry.block("analysis") if required else entry.block_or_none("analysis")
     found: dict[str, Measurement] = {}
     for name, node, spot in block.pairs() if block else ():
         if not _is_analyte(name, spot):
@@ -172,7 +235,7 @@ def _read_measurements(entry: Entry, analysed: dict[str, Spot]) -> dict[str, Mea
         if measurement is not None:
             found[name] = measurement
     sound = len(entry.spot.log.problems) == before
-    if block is not None and sound and not any(name in METALS for name in analysed):
+    if block is not None and required and sound and not any(name in METALS for name in analysed):
         block.spot.problem(
             "no metal", "at least one metal", f"Add what was measured: {listed(METALS)}."
         )

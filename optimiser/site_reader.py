@@ -15,11 +15,12 @@ from pathlib import Path
 from catalogs.constants import load_system
 from catalogs.entries import NON_NEGATIVE, Entry
 from catalogs.positions import load_yaml
-from catalogs.problems import InputFileError, ProblemLog, echo
+from catalogs.problems import InputFileError, ProblemLog, Spot, echo
 from catalogs.reagents import Reagent, load_reagents
 from chemistry.activity import choose_activity
 from chemistry.errors import WaterError
-from chemistry.feed import ANALYTES, BURDENS, FeedWater, feed_water
+from chemistry.feed import ANALYTES, BURDENS, FeedWater, WaterAnalysis, feed_water
+from chemistry.sample_waters import SampleWaters, close_samples, mean_analysis
 from chemistry.system import System
 from optimiser.offers_reader import OFFER_COLUMNS, expired_notes, read_offers
 from optimiser.site import Disposal, Offer, Site, SolverSettings, Uncertainty
@@ -27,6 +28,7 @@ from optimiser.site_constants import OwnBlock, read_own
 from optimiser.site_feed import FeedBlock, read_feed
 from optimiser.site_limits import Foreseen, LimitsBlock, read_limits
 from optimiser.site_salt import ACTIVITY_CHOICES, AUTO, activity_notes, saltiest_mol_per_l
+from optimiser.site_samples import SampleBlock
 from optimiser.site_treatment import (
     TreatmentBlock,
     read_disposal,
@@ -63,7 +65,9 @@ class _Chemistry:
     """The system of a site, and what is said about its choice."""
 
     system: System
+    analysis: WaterAnalysis
     notes: tuple[str, ...] = ()
+    sample_waters: SampleWaters | None = None
 
 
 def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
@@ -93,16 +97,19 @@ def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
         raise InputFileError(log.problems)
     reagents = load_reagents()
     entry = Entry.top(table, str(path), log)
-    blocks = _read_blocks(entry, file, reagents)
+    day = on_day or datetime.date.today()
+    blocks = _read_blocks(entry, file, reagents, day)
     chemistry = _checked_chemistry(blocks, reagents)
     log.raise_if_any()
-    return _site(blocks, file, reagents, chemistry, on_day or datetime.date.today())
+    return _site(blocks, file, reagents, chemistry, day)
 
 
-def _read_blocks(entry: Entry, file: Path, reagents: Mapping[str, Reagent]) -> _Blocks:
+def _read_blocks(
+    entry: Entry, file: Path, reagents: Mapping[str, Reagent], day: datetime.date
+) -> _Blocks:
     name, currency = entry.text("site"), entry.text("currency")
     feed_entry = entry.block("feed")
-    feed = None if feed_entry is None else read_feed(feed_entry)
+    feed = None if feed_entry is None else read_feed(feed_entry, file.parent, day)
     treatment_entry = entry.block("treatment")
     treatment = None if treatment_entry is None else read_treatment(treatment_entry, reagents)
     limits_entry = entry.block("limits")
@@ -128,7 +135,7 @@ def _read_blocks(entry: Entry, file: Path, reagents: Mapping[str, Reagent]) -> _
 def _foreseen(
     feed: FeedBlock | None, treatment: TreatmentBlock | None, reagents: Mapping[str, Reagent]
 ) -> Foreseen | None:
-    if feed is None or treatment is None:
+    if feed is None or treatment is None or not feed.is_complete:
         return None
     brought = {c for name in treatment.allowed_at for c in reagents[name].components}
     if feed.closing_analyte:
@@ -177,16 +184,21 @@ def _checked_chemistry(blocks: _Blocks, reagents: Mapping[str, Reagent]) -> _Che
     if feed is None or feed.analysis is None:
         return None
     first = "sit" if blocks.activity == "sit" else "davies"
-    water = _feed_in(blocks, feed, _system(blocks, feed, reagents, first))
-    if water is None or blocks.treatment is None:
+    found = _feed_in(blocks, feed, _system(blocks, feed, reagents, first))
+    if found is None or blocks.treatment is None:
         return None
-    saltiest = saltiest_mol_per_l(water, blocks.treatment.treatment, reagents)
+    treatment = blocks.treatment.treatment
+    saltiest = max(saltiest_mol_per_l(w, treatment, reagents) for w in found.extremes)
     if blocks.activity == AUTO and choose_activity(saltiest) != first:
         chosen = choose_activity(saltiest)
-        water = _feed_in(blocks, feed, _system(blocks, feed, reagents, chosen))
-    if water is None:
+        found = _feed_in(blocks, feed, _system(blocks, feed, reagents, chosen))
+    if found is None:
         return None
-    return _Chemistry(water.system, tuple(activity_notes(water, blocks.activity, saltiest)))
+    water = found.water
+    return _Chemistry(
+        water.system, water.analysis,
+        tuple(activity_notes(water, blocks.activity, saltiest)), found.sample_waters,
+    )  # fmt: skip
 
 
 def _system(
@@ -200,18 +212,52 @@ def _system(
     return blocks.own.applied_to(catalogued)
 
 
-def _feed_in(blocks: _Blocks, feed: FeedBlock, system: System) -> FeedWater | None:
-    """The feed in a system; None, and a problem, where it cannot be."""
+@dataclass(frozen=True, eq=False, slots=True)
+class _Feed:
+    """The feed in a system; of samples their mean, and the one that holds most salt."""
+
+    water: FeedWater
+    saltiest: FeedWater | None = None
+    sample_waters: SampleWaters | None = None
+
+    @property
+    def extremes(self) -> tuple[FeedWater, ...]:
+        return (self.water,) if self.saltiest is None else (self.water, self.saltiest)
+
+
+def _feed_in(blocks: _Blocks, feed: FeedBlock, system: System) -> _Feed | None:
+    """The feed in a system; None, and problems, where it cannot be."""
     assert feed.analysis is not None
     try:
-        return feed_water(feed.analysis, system)
+        if feed.sampled is None:
+            return _Feed(feed_water(feed.analysis, system))
+        return _samples_in(feed, feed.sampled, system)
     except WaterError as error:
-        feed.analysis_spot.problem(
-            f"an analysis that does not hold ({error})",
-            f"a water that can exist, its charge closed with {feed.closing_analyte}",
-            "Check its units and look for missing ions; then correct what is named above.",
-        )
+        _refuse_water(feed, feed.analysis_spot, str(error))
         return None
+
+
+def _samples_in(feed: FeedBlock, sampled: SampleBlock, system: System) -> _Feed | None:
+    """Every sample closed, and their mixture; None, and problems, where one cannot be."""
+    samples = sampled.samples
+    waters = close_samples(samples, system)
+    for number, reason in waters.failures.items():
+        sample = samples.samples[number]
+        _refuse_water(feed, sampled.spots[(sample.day, sample.time, sample.label)], reason)
+    if waters.failures:
+        return None
+    charged = abs(waters.totals_mol_per_l) @ abs(system.component_charges)
+    saltiest = samples.samples[int(charged.argmax())]
+    mean = feed_water(mean_analysis(samples, waters), system)
+    return _Feed(mean, feed_water(saltiest.analysis, system), waters)
+
+
+def _refuse_water(feed: FeedBlock, spot: Spot, reason: str) -> None:
+    spot.problem(
+        f"an analysis that does not hold ({reason})",
+        f"a water that can exist, its charge closed with {feed.closing_analyte}",
+        "Check its units and look for missing ions; then correct what is named above.",
+    )
 
 
 def site_components(
@@ -244,7 +290,7 @@ def _site(
     return Site(
         name=blocks.name, path=file, currency=blocks.currency,
         flow_m3_per_d=feed.flow_m3_per_d, operating_days_per_year=feed.operating_days_per_year,
-        stands_for=feed.stands_for, analysis=feed.analysis, system=system,
+        stands_for=feed.stands_for, analysis=chemistry.analysis, system=system,
         reagents={name: reagents[name] for name in treatment.allowed_at},
         limits=limits.limits, ph_window=limits.ph_window, design_margin=limits.design_margin,
         variability=limits.variability, floors_mg_per_l=limits.floors_mg_per_l,
@@ -253,9 +299,12 @@ def _site(
         uncertainty=blocks.uncertainty,
         pretreated=feed.pretreated, today=blocks.doses_today,
         own_constants=blocks.own.constants, solid_switches=blocks.own.switches,
+        samples=feed.sampled.samples if feed.sampled else None,
+        sample_waters=chemistry.sample_waters,
         notes=(
             *blocks.own.notes(system), *chemistry.notes, *feed.notes, *limits.notes,
             *_closing_notes(feed, limits), *expired_notes(blocks.offers, day),
+            *_sample_notes(feed),
         ),
     )  # fmt: skip
 
@@ -267,4 +316,14 @@ def _closing_notes(feed: FeedBlock, limits: LimitsBlock) -> list[str]:
     return [
         f"the charge is closed with {ion}, which has a limit: whether it is met leans on the"
         " charge balance of the analysis"
+    ]
+
+
+def _sample_notes(feed: FeedBlock) -> list[str]:
+    if feed.sampled is None:
+        return []
+    count = len(feed.sampled.samples.samples)
+    return [
+        f"planned on the flow-weighted mean of {count} samples in {feed.sampled.samples.source}:"
+        " the doses are not yet verified on each of them"
     ]
