@@ -15,6 +15,7 @@ from catalogs.reagents import CAUTIONS_DEFER_TO
 from chemistry.burden import BURDENS, water_burden
 from chemistry.state import CO2_SPECIES, H2S_SPECIES, EquilibriumState
 from optimiser.assumptions import assumptions, versions
+from optimiser.capacities import capacities
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator
 from optimiser.gas_figures import gas_figures
 from optimiser.held_up import HeldUp, held_up_by
@@ -384,7 +385,8 @@ def describe(
         },
         "compliant": bool(seen.feasible[point]) and one.ph()["meets"],
         "set_points": one.set_points(), "doses": one.dose_map(), "feeding": one.feeding(),
-        "purchases": one.purchases(), "cost": cost, "limits": one.limits(), "ph": one.ph(),
+        "purchases": one.purchases(), "capacities": capacities(site, one.feeding()),
+        "cost": cost, "limits": one.limits(), "ph": one.ph(),
         "rules_missed": one.missed_rules(), "water": one.water(), "gas": one.gas(),
         "burden": one.burden(),
         "sludge": sludge_data(evaluator, seen, point), "cautions": one.cautions(),

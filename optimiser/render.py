@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any
 
+from optimiser.render_capacities import capacity_lines
 from optimiser.render_gas import gas_lines
 from optimiser.tables import INDENT, PLAIN, Ink, bullets, given, money, number, paragraph, table
 
@@ -50,6 +51,7 @@ def _document(title: str, data: Data, ink: Ink) -> str:
     sections = (
         ("What the operator sets", _set_points(data)),
         ("Doses and feed rates", _feeding(data)),
+        ("Pumps, feeders and stores", capacity_lines(data, ink)),
         ("What is bought", _purchases(data)),
         (f"Cost, {data['site']['currency']} a year", _cost(data)),
         ("Limits", _limits(data, ink)),

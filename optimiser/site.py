@@ -104,6 +104,31 @@ class Treatment:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class FeedRange:
+    """Least and greatest rate that a pump or a feeder holds (its turndown)."""
+
+    low: float
+    high: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Dosing:
+    """What is installed for one reagent; None and 0 where the site says nothing.
+
+    ``pump_l_per_h`` for liquids, ``feeder_kg_per_h`` and ``dissolver_kg_per_h`` for solids,
+    ``store_m3`` the tank or ``store_t`` the silo, ``lowest_degc`` the coldest that an unheated
+    store gets.
+    """
+
+    pump_l_per_h: FeedRange | None = None
+    feeder_kg_per_h: FeedRange | None = None
+    dissolver_kg_per_h: float | None = None
+    store_m3: float | None = None
+    store_t: float | None = None
+    lowest_degc: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class DisposalRule:
     """A sludge class and when it applies; the first rule whose condition holds decides.
 
@@ -205,6 +230,8 @@ class Site:
     offers: tuple[Offer, ...]
     solver: SolverSettings = SolverSettings()
     uncertainty: Uncertainty = Uncertainty()
+    peak_flow_m3_per_d: float | None = None
+    dosing: Mapping[str, Dosing] = field(default_factory=dict)
     pretreated: Mapping[str, str] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
     today: Mapping[str, float] = field(default_factory=dict)

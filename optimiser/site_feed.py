@@ -50,6 +50,7 @@ class FeedBlock:
 
     stands_for: str
     flow_m3_per_d: float
+    peak_flow_m3_per_d: float | None
     operating_days_per_year: float
     temperature_degc: float
     analysis: WaterAnalysis | None
@@ -89,6 +90,7 @@ def read_feed(entry: Entry, folder: Path, on_day: datetime.date) -> FeedBlock:
     has_samples = entry.has("samples")
     stands_for = entry.choice("stands_for", STANDS_FOR, "kinds of feed")
     flow = _number(entry, "flow_m3_per_d", POSITIVE, required=not has_samples)
+    peak_flow = _peak_flow(entry, flow)
     days = entry.number("operating_days_per_year", _DAYS_PER_YEAR)
     temperature = _number(entry, "temperature_degc", _TEMPERATURE_DEGC, required=not has_samples)
     aerated = entry.flag_or("aerated", default=False)
@@ -130,7 +132,7 @@ def read_feed(entry: Entry, folder: Path, on_day: datetime.date) -> FeedBlock:
         )  # fmt: skip
     return FeedBlock(
         stands_for=stands_for, flow_m3_per_d=math.nan if flow is None else flow,
-        operating_days_per_year=days, analysis=analysis, analysed=analysed, aerated=aerated,
+        peak_flow_m3_per_d=peak_flow, operating_days_per_year=days, analysis=analysis, analysed=analysed, aerated=aerated,
         temperature_degc=math.nan if temperature is None else temperature,
         closing_analyte=closing, pretreated=pretreated, analysis_spot=entry.at("analysis"),
         notes=notes, sampled=sampled, samples_named=has_samples,
@@ -148,6 +150,17 @@ def _highest(sampled: SampleBlock) -> dict[str, Measurement]:
         name: max((a.measurements[name] for a in analyses), key=lambda m: m.dissolved_mg_per_l)
         for name in sampled.samples.analytes
     }
+
+
+def _peak_flow(entry: Entry, flow: float | None) -> float | None:
+    peak = entry.number_or("peak_flow_m3_per_d", None, POSITIVE)
+    if peak is not None and flow is not None and peak < flow:
+        entry.at("peak_flow_m3_per_d").problem(
+            f"a peak of {peak:g} m3/d below the flow of {flow:g} m3/d",
+            "the highest flow of a day",
+            "Correct one of the two.",
+        )
+    return peak
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -23,8 +23,9 @@ from chemistry.feed import ANALYTES, BURDENS, FeedWater, WaterAnalysis, feed_wat
 from chemistry.sample_waters import SampleWaters, close_samples, mean_analysis
 from chemistry.system import System
 from optimiser.offers_reader import OFFER_COLUMNS, expired_notes, read_offers
-from optimiser.site import Disposal, Offer, Site, SolverSettings, Uncertainty
+from optimiser.site import Disposal, Dosing, Offer, Site, SolverSettings, Uncertainty
 from optimiser.site_constants import OwnBlock, read_own
+from optimiser.site_dosing import read_dosing
 from optimiser.site_feed import FeedBlock, read_feed
 from optimiser.site_limits import Foreseen, LimitsBlock, read_limits
 from optimiser.site_salt import ACTIVITY_CHOICES, AUTO, activity_notes, saltiest_mol_per_l
@@ -54,6 +55,7 @@ class _Blocks:
     charges: Mapping[str, float]
     offers: tuple[Offer, ...]
     solver: SolverSettings
+    dosing: Mapping[str, Dosing]
     uncertainty: Uncertainty
     doses_today: Mapping[str, float]
     own: OwnBlock
@@ -123,6 +125,7 @@ def _read_blocks(
         disposal=disposal, charges=entry.numbers("burden_charges_per_kg", BURDENS, "burdens"),
         offers=_read_price_book(entry, file, reagents, treatment),
         solver=read_solver(entry.block_or_none("solver")),
+        dosing=read_dosing(entry.block_or_none("dosing"), known),
         uncertainty=read_uncertainty(entry.block_or_none("uncertainty")),
         doses_today=entry.numbers("today", known, "reagents allowed in treatment", NON_NEGATIVE),
         own=read_own(entry),
@@ -296,7 +299,8 @@ def _site(
         variability=limits.variability, floors_mg_per_l=limits.floors_mg_per_l,
         treatment=treatment.treatment, disposal=disposal,
         burden_charges_per_kg=blocks.charges, offers=blocks.offers, solver=blocks.solver,
-        uncertainty=blocks.uncertainty,
+        uncertainty=blocks.uncertainty, dosing=blocks.dosing,
+        peak_flow_m3_per_d=feed.peak_flow_m3_per_d,
         pretreated=feed.pretreated, today=blocks.doses_today,
         own_constants=blocks.own.constants, solid_switches=blocks.own.switches,
         samples=feed.sampled.samples if feed.sampled else None,

@@ -324,6 +324,15 @@ def test_an_analysis_that_cannot_be_electroneutral_is_refused_at_its_line() -> N
         ("offers: offers.csv", "offers: offers.csv\nsolver: {name: highest}", "27: solver.name",
          "found 'highest', expected one of the solvers\n    Did you mean `highs`? The solvers known"
          " here: cbc, highs."),
+        ("flow_m3_per_d: 60\n", "flow_m3_per_d: 60\n  peak_flow_m3_per_d: 50\n",
+         "6: feed.peak_flow_m3_per_d",
+         "found a peak of 50 m3/d below the flow of 60 m3/d, expected the highest flow of a day\n"
+         "    Correct one of the two."),
+        ("offers: offers.csv",
+         "offers: offers.csv\ndosing: {caustic_soda: {pump_l_per_h: {low: 5, high: 2}}}",
+         "27: dosing.caustic_soda.pump_l_per_h.low",
+         "found low 5 is not below high 2, expected the least and the greatest rate\n"
+         "    Exchange or correct them."),
     ],
 )  # fmt: skip
 def test_one_slip_gives_one_message(old: str, new: str, place: str, text: str) -> None:

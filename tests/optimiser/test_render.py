@@ -83,6 +83,7 @@ PLAN: dict[str, Any] = {
         _feed("soda_ash", "soda ash", "flow", 150.0),
         _feed("sulfuric_acid@trim", "sulfuric acid", "pH controller", 30.1),
     ],
+    "capacities": [],
     "purchases": [
         {
             "offer": "CAU-2",
@@ -322,6 +323,8 @@ def test_no_plan_says_how_low_each_limit_can_go_and_why() -> None:
     data = {
         "site": {"name": "Alder Street"},
         "message": "no doses meet every limit:",
+        "relaxations": [],
+        "openers": [],
         "reasons": ["Ni (monthly) is stopped by carry-over"],
         "clashes": [
             {
