@@ -321,7 +321,7 @@ def test_colour_changes_no_word(data: dict[str, Any]) -> None:
 
 def test_no_plan_says_how_low_each_limit_can_go_and_why() -> None:
     data = {
-        "site": {"name": "Alder Street"},
+        "site": {"name": "Alder Street", "currency": "EUR"},
         "message": "no doses meet every limit:",
         "relaxations": [],
         "openers": [],
