@@ -132,7 +132,8 @@ def read_feed(entry: Entry, folder: Path, on_day: datetime.date) -> FeedBlock:
         )  # fmt: skip
     return FeedBlock(
         stands_for=stands_for, flow_m3_per_d=math.nan if flow is None else flow,
-        peak_flow_m3_per_d=peak_flow, operating_days_per_year=days, analysis=analysis, analysed=analysed, aerated=aerated,
+        peak_flow_m3_per_d=peak_flow, operating_days_per_year=days, analysis=analysis,
+        analysed=analysed, aerated=aerated,
         temperature_degc=math.nan if temperature is None else temperature,
         closing_analyte=closing, pretreated=pretreated, analysis_spot=entry.at("analysis"),
         notes=notes, sampled=sampled, samples_named=has_samples,
