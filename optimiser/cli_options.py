@@ -11,6 +11,7 @@ from typing import Any, NoReturn
 
 BAD_USAGE = 2
 PROGRAM = "dosewright"
+DEFAULT_PROVE_S = 60.0
 
 _DESCRIPTION = """\
 Pick precipitation reagents, doses and supplier offers that bring the dissolved metals
@@ -159,6 +160,11 @@ def _add_plan(commands: _Commands) -> None:
     parser.add_argument(
         "--time-limit", metavar="S", type=_positive, help="seconds to search (default: the site's)"
     )
+    parser.add_argument(
+        "--prove", metavar="S", type=_positive, nargs="?", const=DEFAULT_PROVE_S,
+        help="then bound from below what any plan costs, for at most S seconds "
+        f"(default: {DEFAULT_PROVE_S:g})",
+    )  # fmt: skip
 
 
 def _add_assess(commands: _Commands) -> None:

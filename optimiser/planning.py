@@ -6,6 +6,8 @@ import time
 from collections.abc import Callable
 from typing import Any
 
+from optimiser.bound import Bound
+from optimiser.bound_tree import prove
 from optimiser.describe import describe
 from optimiser.diagnosis import explain_no_plan
 from optimiser.errors import FeedRefused, Interrupted
@@ -23,7 +25,9 @@ RUNNERS_UP = 5
 LARGEST_IONIC_STRENGTH = {"davies": 1.0, "sit": 3.0, "ideal": 1.0}
 
 
-def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
+def plan(
+    site: Site, progress: Callable[[str], None] | None = None, *, prove_s: float | None = None
+) -> Plan:
     """Find the cheapest plan that the full equilibrium confirms.
 
     Parameters
@@ -32,6 +36,9 @@ def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
         A problem from `optimiser.load_site`.
     progress
         Called with a line of text now and then.
+    prove_s
+        Seconds to spend on a lower bound of what any plan of the site costs; without it the proof
+        is a search. [s]
 
     Raises
     ------
@@ -44,11 +51,19 @@ def plan(site: Site, progress: Callable[[str], None] | None = None) -> Plan:
     """
     begun = time.perf_counter()
     evaluator, findings = find(site, progress)
-    return plan_of(evaluator, findings, begun)
+    bound = None
+    if prove_s is not None:
+        least = findings.feasible[0][1].total
+        bound = prove(evaluator, least, seconds=prove_s, progress=progress)
+    return plan_of(evaluator, findings, begun, bound)
 
 
-def plan_of(evaluator: Evaluator, findings: Findings, begun: float) -> Plan:
+def plan_of(
+    evaluator: Evaluator, findings: Findings, begun: float, bound: Bound | None = None
+) -> Plan:
     """Describe the best of a search's findings as a plan; ``begun`` is `time.perf_counter`'s.
+
+    ``bound`` is what is proven of plans that cost less.
 
     Raises
     ------
@@ -60,7 +75,11 @@ def plan_of(evaluator: Evaluator, findings: Findings, begun: float) -> Plan:
     seen = evaluator.evaluate(best.point, slopes=False)
     strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)
     refuse_salty(evaluator.site, strength, "the plan's water")
-    data = describe(evaluator, seen, 0, proof=_proof(evaluator, findings))
+    proof = _proof(evaluator, findings)
+    if bound is not None:
+        proof |= bound.to_dict()
+        findings.seconds["bound"] = bound.seconds
+    data = describe(evaluator, seen, 0, proof=proof)
     data["runners_up"] = _runners_up(evaluator, findings, best)
     data["proof"]["seconds"] = {
         **findings.seconds, "total": time.perf_counter() - begun,

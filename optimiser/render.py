@@ -10,6 +10,7 @@ from typing import Any
 
 from optimiser.render_capacities import capacity_lines
 from optimiser.render_gas import gas_lines
+from optimiser.render_proof import proof_lines
 from optimiser.tables import INDENT, PLAIN, Ink, bullets, given, money, number, paragraph, table
 
 Data = Mapping[str, Any]
@@ -61,7 +62,7 @@ def _document(title: str, data: Data, ink: Ink) -> str:
         ("Sludge", _sludge(data)),
         ("Cautions", bullets(data["cautions"])),
         ("Assumptions", bullets(data["assumptions"])),
-        ("Proof", _proof(data)),
+        ("Proof", proof_lines(data)),
         ("Runners-up", _runners_up(data)),
         ("Made with", _versions(data)),
     )
@@ -305,39 +306,6 @@ def _sludge(data: Data) -> list[str]:
     )
     text += f"; rule: {sludge['rule'].rstrip('.')}." if sludge["rule"] else "."
     return [*(table(["solid", "kg/d dry"], rows) if rows else []), *paragraph(text)]
-
-
-def _proof(data: Data) -> list[str]:
-    proof = data["proof"]
-    lines = []
-    if proof["kind"] == "searched":
-        lines += paragraph(
-            f"Searched: no cheaper plan turned up in {_count(proof, 'recipes_examined', 'recipe')},"
-            f" {_count(proof, 'cells_examined', 'cell')} of doses and pH and "
-            f"{_count(proof, 'states_examined', 'equilibrium state')}; the smallest step tried was "
-            f"{number(proof['smallest_step_percent'], 2)} % of a dose. A search, not a bound: a "
-            "cheaper plan between the points tried is not excluded."
-        )
-    elif proof["kind"] == "proven":
-        lines += paragraph("Proven: no cheaper plan exists within the gap stated.")
-    else:
-        count = proof.get("states_examined")
-        states = f" in {_count(proof, 'states_examined', 'equilibrium state')}" if count else ""
-        lines += paragraph(f"Verified{states}; nothing was searched for.")
-    if proof.get("stopped_early"):
-        lines += paragraph("The time limit ended the search before it was through.")
-    found = {name: f"{value:.0e}" if value else "0" for name, value in proof["certificate"].items()}
-    lines += paragraph(
-        f"Certificate, worst over the states of this result: mass balance {found['mass_balance']}, "
-        f"supersaturation {found['supersaturation']} and distance of present solids from "
-        f"saturation {found['presence']} (log10 units), charge {found['charge']}."
-    )
-    seconds = ", ".join(f"{name} {value:.1f} s" for name, value in proof["seconds"].items())
-    return lines + (paragraph(f"Time: {seconds}.") if seconds else [])
-
-
-def _count(proof: Data, key: str, noun: str) -> str:
-    return f"{proof[key]:,} {noun}{'' if proof[key] == 1 else 's'}"
 
 
 def _runners_up(data: Data) -> list[str]:

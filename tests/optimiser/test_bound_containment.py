@@ -1,0 +1,125 @@
+"""The relaxation of a cell holds every plan of the cell: what makes the word proven true."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from numpy.typing import NDArray
+
+from optimiser.bound_cells import Corner
+from optimiser.bound_model import Relaxation
+from optimiser.bound_shrink import shrink
+from optimiser.evaluation import Evaluation, Evaluator
+from optimiser.points import Points
+from optimiser.recipes import recipes, set_point_bounds, trim_for
+from optimiser.site import Site
+from optimiser.solver import open_solver
+from tests.optimiser.bound_points import broken, cell_around, least_cost_at, point_values
+from tests.optimiser.small_sites import (
+    ALKALINE,
+    CARBONATE,
+    SILVER,
+    SULFATE,
+    SULFIDE,
+    small_site,
+)
+
+FloatArray = NDArray[np.float64]
+
+ROWS_HELD_TO = 2e-7
+"""Rows are loosened by 1e-6; a point of the exact equilibrium needs none of that."""
+
+
+TURNS = 2
+"""Once in the cell as drawn, once after it was shrunk to what costs no more than the point."""
+
+
+def without_limits(site: Site) -> Site:
+    """The site with every limit a thousand times wider, so that random points are plans."""
+    wide = [
+        replace(
+            limit,
+            daily_mg_per_l=limit.daily_mg_per_l and 1e3 * limit.daily_mg_per_l,
+            monthly_mg_per_l=limit.monthly_mg_per_l and 1e3 * limit.monthly_mg_per_l,
+            daily_load_kg_per_d=limit.daily_load_kg_per_d and 1e3 * limit.daily_load_kg_per_d,
+        )
+        for limit in site.limits
+    ]
+    return replace(site, limits=tuple(wide))
+
+
+def random_points(evaluator: Evaluator, count: int, seed: int) -> Evaluation:
+    """Points of random recipes, doses and set points with all their corners and ends."""
+    rng = np.random.default_rng(seed)
+    plant, bounds = evaluator.plant, set_point_bounds(evaluator)
+    known = [r for size in (1, 2, 3) for r in recipes(plant, size)]
+    parts = []
+    for _ in range(count):
+        recipe = known[rng.integers(len(known))]
+        doses = np.zeros((1, len(plant.names)))
+        for r in recipe.paced:
+            doses[0, r] = evaluator.least[r] * 10.0 ** rng.uniform(0.0, 1.8)
+        own = -1 if recipe.controller is None else recipe.controller
+        low, high = bounds.ph_low(own, doses[0]), bounds.ph_high(own, doses[0])
+        ph = rng.uniform(low, max(low, high)) if own >= 0 else plant.feed.ph
+        trim = np.array([trim_for(evaluator, ph)])
+        parts.append(Points(doses, np.array([own]), np.array([ph]), trim))
+    return evaluator.evaluate(Points.join(parts))
+
+
+def random_corners(paced: int, rng: np.random.Generator, *, held_ph: bool) -> tuple[Corner, ...]:
+    found = {}
+    for _ in range(2):
+        shift = int(rng.choice([-1, 1])) if held_ph else 0
+        signs = tuple(int(s) for s in rng.choice([-1, 1], size=paced))
+        corner = Corner(shift, signs, bool(rng.integers(2)))
+        if shift or paced:
+            found[corner.tag] = corner
+    return tuple(found.values())
+
+
+def contained(site: Site, count: int, seed: int) -> int:
+    """Check that feasible random points lie in random cells around them; return how many."""
+    evaluator = Evaluator(without_limits(site))
+    relaxation, rng = Relaxation(evaluator), np.random.default_rng(seed)
+    solver = open_solver("highs", relative_gap=1e-9)
+    seen, checked = random_points(evaluator, count, seed), 0
+    for point in np.flatnonzero(seen.feasible):
+        paced = int((seen.points.doses[point] > 0.0).sum())
+        corners = random_corners(paced, rng, held_ph=seen.points.controller[point] >= 0)
+        cell = cell_around(
+            evaluator, seen, int(point), corners,
+            ph_width=10.0 ** rng.uniform(-2.0, 0.3), dose_ratio=10.0 ** rng.uniform(0.02, 0.5),
+        )  # fmt: skip
+        cost = float(seen.total[point])
+        for turn in range(TURNS):
+            made = relaxation.build(cell)
+            assert made is not None, f"point {point}: its cell is called empty"
+            values = point_values(relaxation, made, seen, int(point))
+            assert broken(made.model, values, ROWS_HELD_TO) == [], f"point {point}, turn {turn}"
+            assert least_cost_at(made.model, values, solver) <= cost * (1.0 + 1e-6)
+            smaller = shrink(relaxation, made, cost * (1.0 + 1e-6))
+            assert smaller is not None, f"point {point}: its cell shrinks to nothing"
+            cell = smaller
+        checked += 1
+    return checked
+
+
+@pytest.mark.parametrize(
+    ("changes", "least"),
+    [
+        ((), 5),
+        ((SULFATE,), 5),
+        ((SULFIDE,), 3),
+        ((CARBONATE,), 5),
+        ((ALKALINE,), 5),
+        ((SILVER,), 3),
+    ],
+    ids=["copper and zinc", "sulfate", "sulfide", "carbonate", "alkaline", "silver"],
+)
+def test_random_points_of_small_sites_lie_in_their_cells(
+    changes: tuple[dict[str, object], ...], least: int
+) -> None:
+    assert contained(small_site(*changes), 8, 7) >= least
