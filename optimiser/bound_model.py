@@ -196,7 +196,8 @@ class Relaxation(Waters):
             plant.names[r]: self.dose(cell, r).times(self.money.kg_per_mg_per_l)
             for r in cell.recipe.reagents
         }
-        add_purchasing(model, self.site.offers, demands)
+        offers = [o for o in self.site.offers if o.reagent in plant.index]
+        add_purchasing(model, offers, demands)
         separator = self.treatment.separator.cost_per_year
         model.add_cost(SEPARATOR, Expression({}, separator))
         fixed = self.fixed_cost(cell.recipe) - separator + self._trim_cost(cell)

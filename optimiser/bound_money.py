@@ -88,10 +88,15 @@ class Money:
         )
         return float(goods[0] + freight[0])
 
+    def sunk(self, reagent: int) -> float:
+        """What signed contracts cost where nothing of a reagent is needed."""
+        return self.evaluator.pricing.book.sunk(self.plant.names[reagent])
+
     def highest_dose(self, reagent: int, most: float, money: float) -> float:
         """Largest dose up to ``most`` whose purchase costs no more than ``money``.
 
-        The cost never falls as the dose rises, so bisection keeps it on the safe side.
+        The least cost of covering a demand never falls as the demand rises, since the same
+        purchase covers less, so bisection keeps it on the safe side.
         """
         if self.least(reagent, most) <= money:
             return most

@@ -29,10 +29,11 @@ def all_recipes(relaxation: Relaxation) -> Iterator[Recipe]:
 
 
 def least_cost(relaxation: Relaxation, recipe: Recipe) -> float:
-    """Separator, equipment and least doses of a recipe."""
-    low = relaxation.evaluator.least
-    bought = sum(relaxation.money.least(r, float(low[r])) for r in recipe.reagents)
-    return relaxation.fixed_cost(recipe) + bought * (1.0 - RULE_SLACK)
+    """Separator, equipment and least doses of a recipe, and what is signed for in any case."""
+    low, money = relaxation.evaluator.least * (1.0 - RULE_SLACK), relaxation.money
+    bought = sum(money.least(r, float(low[r])) for r in recipe.reagents)
+    others = (r for r in range(len(relaxation.plant.names)) if r not in recipe.reagents)
+    return relaxation.fixed_cost(recipe) + bought + sum(money.sunk(r) for r in others)
 
 
 def roots(relaxation: Relaxation, recipe: Recipe, most_cost: float) -> list[Cell]:

@@ -35,11 +35,11 @@ class Ends:
         self.high = np.array([v.high for v in model.variables.values()])
         rows = [(row.terms, row.sense, row.rhs) for row in model.rows.values()]
         total = model.objective
-        # costs are at least 0, so each variable that costs something is bounded by the total
+        # what a variable may cost is what the others leave at their least
         room = max(most_cost - self._least_cost(total.terms) - total.constant, 0.0)
         for key, price in total.terms.items():
             j = self.index[key]
-            if price > 0.0 and math.isinf(self.high[j]):
+            if price > 0.0 and math.isinf(self.high[j]) and math.isfinite(room):
                 self.high[j] = self.low[j] + room / price
         size = max(abs(most_cost), 1.0)
         rows.append(
@@ -55,7 +55,7 @@ class Ends:
         for key, price in terms.items():
             j = self.index[key]
             total += price * (self.low[j] if price > 0.0 else self.high[j])
-        return float(total) if math.isfinite(total) else 0.0
+        return float(total) if math.isfinite(total) else -math.inf
 
     def _matrix(self, rows: Sequence[tuple[Any, Sense, float]]) -> None:
         count = [len(terms) for terms, _, _ in rows]
