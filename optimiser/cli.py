@@ -183,7 +183,9 @@ def _plan(options: argparse.Namespace) -> int:
         solver = replace(solver, time_limit_s=options.time_limit)
     site = replace(site, treatment=treatment, solver=solver)
     try:
-        found = optimiser.plan(site, progress=_progress(), prove_s=options.prove)
+        found = optimiser.plan(
+            site, progress=_progress(), prove_s=options.prove, runners_up=options.runners_up
+        )
     except optimiser.NoPlan as none:
         data = no_plan_data(site.name, none, site.currency)
         _clear_progress()

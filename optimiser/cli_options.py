@@ -59,6 +59,12 @@ def _chance(text: str) -> float:
     return value
 
 
+def _whole(text: str) -> int:
+    if not text.isdecimal():
+        raise argparse.ArgumentTypeError(f"expected a whole number from 0, found {text!r}")
+    return int(text)
+
+
 def _ph(text: str) -> float:
     value = _finite(text)
     if not 0.0 <= value <= 14.0:
@@ -154,6 +160,10 @@ def _add_plan(commands: _Commands) -> None:
     parser.add_argument(
         "--most-reagents", metavar="N", type=_count, help="at most N reagents (default: the site's)"
     )
+    parser.add_argument(
+        "--runners-up", metavar="N", type=_whole, default=5,
+        help="tell of the N next cheapest recipes, and why they cost more (default: 5)",
+    )  # fmt: skip
     parser.add_argument(
         "--solver", choices=("highs", "cbc"), help="mixed-integer solver (default: the site's)"
     )

@@ -392,5 +392,6 @@ def describe(
         "sludge": sludge_data(evaluator, seen, point), "cautions": one.cautions(),
         "assumptions": [*assumptions(evaluator), *extra],
         "proof": {**proof, "certificate": one.certificate()},
-        "runners_up": [], "versions": versions(site.solver.name),
+        "runners_up": [], "runners_up_left_out": [],
+        "versions": versions(site.solver.name),
     }  # fmt: skip

@@ -13,8 +13,8 @@ from optimiser.diagnosis import explain_no_plan
 from optimiser.errors import FeedRefused, Interrupted
 from optimiser.evaluation import Evaluator
 from optimiser.outcome import Plan
-from optimiser.polish import Track
-from optimiser.recipes import recipe_of
+from optimiser.runners_up import finish
+from optimiser.runners_up import runners_up as others_of
 from optimiser.search import SETTLE_STEP, Findings, Search
 from optimiser.site import Site
 from optimiser.site_salt import MODEL_TEXT
@@ -26,7 +26,11 @@ LARGEST_IONIC_STRENGTH = {"davies": 1.0, "sit": 3.0, "ideal": 1.0}
 
 
 def plan(
-    site: Site, progress: Callable[[str], None] | None = None, *, prove_s: float | None = None
+    site: Site,
+    progress: Callable[[str], None] | None = None,
+    *,
+    prove_s: float | None = None,
+    runners_up: int = RUNNERS_UP,
 ) -> Plan:
     """Find the cheapest plan that the full equilibrium confirms.
 
@@ -39,6 +43,8 @@ def plan(
     prove_s
         Seconds to spend on a lower bound of what any plan of the site costs; without it the proof
         is a search. [s]
+    runners_up
+        How many other recipes to tell of at most.
 
     Raises
     ------
@@ -51,15 +57,22 @@ def plan(
     """
     begun = time.perf_counter()
     evaluator, findings = find(site, progress)
+    with findings.timed("runners-up"):
+        finish(evaluator, findings, solver_from(site.solver), runners_up)
     bound = None
     if prove_s is not None:
         least = findings.feasible[0][1].total
         bound = prove(evaluator, least, seconds=prove_s, progress=progress)
-    return plan_of(evaluator, findings, begun, bound)
+    return plan_of(evaluator, findings, begun, bound, runners_up=runners_up)
 
 
 def plan_of(
-    evaluator: Evaluator, findings: Findings, begun: float, bound: Bound | None = None
+    evaluator: Evaluator,
+    findings: Findings,
+    begun: float,
+    bound: Bound | None = None,
+    *,
+    runners_up: int = RUNNERS_UP,
 ) -> Plan:
     """Describe the best of a search's findings as a plan; ``begun`` is `time.perf_counter`'s.
 
@@ -70,8 +83,7 @@ def plan_of(
     FeedRefused
         The plan's water is too salty for the activity model.
     """
-    ranked = findings.feasible
-    _, best = ranked[0]
+    _, best = findings.feasible[0]
     seen = evaluator.evaluate(best.point, slopes=False)
     strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)
     refuse_salty(evaluator.site, strength, "the plan's water")
@@ -80,7 +92,9 @@ def plan_of(
         proof |= bound.to_dict()
         findings.seconds["bound"] = bound.seconds
     data = describe(evaluator, seen, 0, proof=proof)
-    data["runners_up"] = _runners_up(evaluator, findings, best)
+    data["runners_up"], data["runners_up_left_out"] = others_of(
+        evaluator, findings, solver_from(evaluator.site.solver), runners_up
+    )
     data["proof"]["seconds"] = {
         **findings.seconds, "total": time.perf_counter() - begun,
     }  # fmt: skip
@@ -142,24 +156,3 @@ def _proof(evaluator: Evaluator, findings: Findings) -> dict[str, Any]:
         "smallest_step_percent": 100.0 * SETTLE_STEP,
         "stopped_early": findings.stopped_early,
     }
-
-
-def _runners_up(evaluator: Evaluator, findings: Findings, best: Track) -> list[dict[str, Any]]:
-    rows = []
-    for recipe, track in findings.feasible[1 : 1 + RUNNERS_UP]:
-        seen = track.place.seen
-        doses = seen.priced.doses[track.place.point]
-        controlled = int(track.point.controller[0]) >= 0
-        rows.append(
-            {
-                "reagents": list(recipe),
-                "doses": {
-                    name: float(doses[evaluator.plant.index[name]])
-                    for name in recipe_of(evaluator.plant, track.point, 0)
-                },
-                "ph_set_point": float(track.point.ph[0]) if controlled else None,
-                "total": track.total,
-                "difference_percent": 100.0 * (track.total / best.total - 1.0),
-            }
-        )
-    return rows

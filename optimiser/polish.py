@@ -150,6 +150,11 @@ def _inward(
     return step(evaluator, track, solver, bounds, inward=aim)
 
 
+def at_rest(track: Track) -> bool:
+    """Whether steps no longer gain anything, so that the track was not left on its way."""
+    return track.radius < LAST_RADIUS or track.stalls >= 2
+
+
 def _accept(track: Track, place: Place) -> None:
     fresh = Track(place, penalty=track.penalty)
     track.steps += 1
@@ -162,7 +167,7 @@ def _accept(track: Track, place: Place) -> None:
     else:
         track.radius *= 0.3
         track.stalls = 0
-    if track.radius < LAST_RADIUS or track.stalls >= 2:
+    if at_rest(track):
         track.alive = False
     if track.violation > HOPELESS_RATIO and not track.patient:
         # a candidate whose worst miss hardly shrinks will not become feasible

@@ -11,6 +11,7 @@ from typing import Any
 from optimiser.render_capacities import capacity_lines
 from optimiser.render_gas import gas_lines
 from optimiser.render_proof import proof_lines
+from optimiser.render_runners_up import runners_up_lines
 from optimiser.tables import INDENT, PLAIN, Ink, bullets, given, money, number, paragraph, table
 
 Data = Mapping[str, Any]
@@ -63,7 +64,7 @@ def _document(title: str, data: Data, ink: Ink) -> str:
         ("Cautions", bullets(data["cautions"])),
         ("Assumptions", bullets(data["assumptions"])),
         ("Proof", proof_lines(data)),
-        ("Runners-up", _runners_up(data)),
+        ("Runners-up", runners_up_lines(data)),
         ("Made with", _versions(data)),
     )
     for heading, body in sections:
@@ -306,27 +307,6 @@ def _sludge(data: Data) -> list[str]:
     )
     text += f"; rule: {sludge['rule'].rstrip('.')}." if sludge["rule"] else "."
     return [*(table(["solid", "kg/d dry"], rows) if rows else []), *paragraph(text)]
-
-
-def _runners_up(data: Data) -> list[str]:
-    names = _names(data)
-    rows = [
-        [
-            ", ".join(
-                f"{names.get(key, _plain_key(key))} {number(dose, _DOSE_DIGITS)}"
-                for key, dose in other["doses"].items()
-            ),
-            f"{other['ph_set_point']:.2f}" if other["ph_set_point"] is not None else "-",
-            money(other["total"]),
-            f"{other['difference_percent']:+.1f} %",
-        ]
-        for other in data["runners_up"]
-    ]
-    if not rows:
-        return []
-    headers = ["doses, mg/L pure", "pH set\npoint", f"{data['site']['currency']}\na year",
-               "against\nthe plan"]  # fmt: skip
-    return table(headers, rows)
 
 
 def _versions(data: Data) -> list[str]:

@@ -98,9 +98,10 @@ def _plain(key: str) -> str:
 
 def _openers(data: Data, ink: Ink) -> list[str]:
     """What else would open a plan, and what was tried in vain."""
-    rows, currency = data["openers"], data["site"]["currency"]
+    rows = data["openers"]
     if not rows:
         return []
+    currency = data["site"]["currency"]
     lines = ["", ink.heading("What else would open a plan")]
     texts = []
     for row in rows:

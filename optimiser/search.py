@@ -87,6 +87,10 @@ class Findings:
                 self.lowest[check] = worst[row, check]
                 self.lowest_point[check] = seen.points.take([row])
 
+    def timed(self, name: str) -> _Clock:
+        """Add the time spent inside a with block to a name."""
+        return _Clock(self.seconds, name)
+
     @property
     def feasible(self) -> list[tuple[tuple[str, ...], Track]]:
         """Feasible recipes, cheapest first."""
@@ -115,23 +119,20 @@ class Search:
             len(self.evaluator.plant.treatment.reagents),
         )
         least = max(1, len(self.evaluator.plant.treatment.required))
-        with self._timed("propose"):
+        with self.findings.timed("propose"):
             starts = self._propose([s for s in (1, 2) if least <= s <= most])
-        with self._timed("polish"):
+        with self.findings.timed("polish"):
             self._polish(starts)
         for size in range(max(3, least), most + 1):
             if self._late():
                 break
-            with self._timed("propose"):
+            with self.findings.timed("propose"):
                 starts = self._extend(size)
-            with self._timed("polish"):
+            with self.findings.timed("polish"):
                 self._polish(starts)
-        with self._timed("settle"):
+        with self.findings.timed("settle"):
             self._settle()
         return self.findings
-
-    def _timed(self, name: str) -> _Clock:
-        return _Clock(self.findings.seconds, name)
 
     def _late(self) -> bool:
         late = time.perf_counter() > self.deadline

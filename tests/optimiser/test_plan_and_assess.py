@@ -110,7 +110,7 @@ def test_runners_up_comply_at_the_cost_that_is_shown_and_none_is_cheaper(kind: s
     made = plan_of(kind)
     for row in made.runners_up:
         assert row["total"] >= made.cost["total"] * (1.0 - 1e-9)
-        assert set(row["reagents"]) == set(row["doses"])
+        assert set(row["reagents"]) == {key for key in row["doses"] if "@" not in key}
         again = assess(site_of(kind), row["doses"])
         assert again.cost["total"] == pytest.approx(row["total"], rel=2e-3)
 
