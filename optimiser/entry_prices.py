@@ -132,7 +132,7 @@ def _why(plan: Standing, offer: Offer) -> str:
     assert bid is not None, "the plan uses the reagent"
     more = bid.tonnes * (offer.price_per_t - bid.price_per_t)
     least = " (its least order exceeds the demand)" if bid.tonnes <= offer.least_order_t else ""
-    return f"{more:,.0f} {plan.evaluator.site.currency} a year dearer at this demand{least}"
+    return f"{plan.evaluator.site.currency} {more:,.0f} a year dearer at this demand{least}"
 
 
 def _rise(plan: Standing, offer: Offer, bids: Sequence[_Bid]) -> Data:

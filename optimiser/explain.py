@@ -17,7 +17,7 @@ from optimiser.costing import BURDEN, DISPOSAL, EQUIPMENT, FEES, FREIGHT, POLYME
 from optimiser.entry_prices import entry_prices
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluator, Place
 from optimiser.ledger import dose_ledger
-from optimiser.marginal import binding_otherwise, marginal_costs
+from optimiser.marginal import binding_otherwise, marginal_costs, slack_limits
 from optimiser.nearby import NEAR_STEPS, RESOLUTION, Standing, repolish, stand, worst_ratios
 from optimiser.planning import find
 from optimiser.polish import Track
@@ -25,6 +25,7 @@ from optimiser.purchasing import best_deal
 from optimiser.quality import UNREACHED_RATIO
 from optimiser.quality_slopes import RULE
 from optimiser.recipes import recipe_of
+from optimiser.runners_up import token_of
 from optimiser.search import Findings
 from optimiser.site import Site
 from optimiser.solver import solver_from
@@ -135,6 +136,7 @@ def explain_plan(site: Site, progress: Callable[[str], None] | None = None) -> E
         },
         "scope": LOCAL, "resolution_per_year": RESOLUTION * plan.total,
         "marginal_costs": marginal, "also_at_its_end": binding_otherwise(plan),
+        "not_binding": slack_limits(plan),
         "ledger": [
             one.to_dict() for one in dose_ledger(evaluator, plan.place.seen, plan.place.point)
         ],
@@ -179,7 +181,7 @@ def _reagents(plan: Standing, findings: Findings) -> tuple[list[Data], list[Trac
             rows.append({**row, **_NEVER})
         elif track.feasible:
             polished.append(track)
-            rows.append({**row, **_dearer(plan, track)})
+            rows.append({**row, **_dearer(plan, findings, name, track)})
         else:
             rows.append({**row, **_missing(plan, track)})
     return rows, polished
@@ -219,12 +221,16 @@ def _best_with(plan: Standing, findings: Findings, name: str) -> Track | None:
     return again if again.feasible or again.violation < nearest.violation else nearest
 
 
-def _dearer(plan: Standing, track: Track) -> Data:
+def _dearer(plan: Standing, findings: Findings, name: str, track: Track) -> Data:
     difference = track.total - plan.total
     by_cause = _by_cause(plan.evaluator, plan.place, track.place)
     leading = max(by_cause, key=lambda cause: by_cause[cause], default="")
-    recipe = list(recipe_of(plan.evaluator.plant, track.point, 0))
-    if difference < 0.0:
+    names = recipe_of(plan.evaluator.plant, track.point, 0)
+    recipe, part = list(names), token_of(plan.evaluator, findings, names, track)
+    if part is not None and name not in part:
+        leading = "no use"
+        why = f"gains nothing: {' + '.join(part)} complies for less without it".replace("_", " ")
+    elif difference < 0.0:
         why = "cheaper than the plan once polished on its own: plan again with this recipe"
     else:
         why = f"complies but is dearer, most of all by {leading}"

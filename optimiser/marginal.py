@@ -61,6 +61,23 @@ def marginal_costs(plan: Standing) -> list[Data]:
     return [*rows, *_margin_row(plan, prices), *_tariff_row(plan)]
 
 
+def slack_limits(plan: Standing) -> list[Data]:
+    """Limits that do not bind, the tightest first, with how far the plan stays below its target.
+
+    A little more or less of them changes nothing near the plan: their marginal cost is 0.
+    """
+    checks, _ = worst_ratios(plan.evaluator, plan.place)
+    rows = [
+        {
+            "parameter": check.label, "averaging": check.averaging,
+            "below_target_percent": -100.0 * float(np.expm1(ratio)),
+        }
+        for check, ratio in zip(plan.evaluator.judge.checks, checks, strict=True)
+        if check.averaging != RULE and ratio < -BINDING_RATIO
+    ]  # fmt: skip
+    return sorted(rows, key=lambda row: float(row["below_target_percent"]))
+
+
 def binding_otherwise(plan: Standing) -> list[str]:
     """Rules, and ends of the set point and of doses, that the plan stands at."""
     evaluator, point = plan.evaluator, plan.track.point

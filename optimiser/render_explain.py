@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 from optimiser.tables import PLAIN, Ink, bullets, given, money, number, paragraph, table
@@ -10,6 +10,7 @@ from optimiser.tables import PLAIN, Ink, bullets, given, money, number, paragrap
 Data = Mapping[str, Any]
 
 _SMALLEST_SHARE_PERCENT = 0.05
+_MOST_SLACK = 5
 
 
 def explain_text(data: Data, ink: Ink = PLAIN) -> str:
@@ -25,8 +26,8 @@ def explain_text(data: Data, ink: Ink = PLAIN) -> str:
     plan, currency = data["plan"], data["site"]["currency"]
     lines = [ink.heading(f"{data['site']['name']}: why this plan")]
     lines += paragraph(
-        f"The plan doses {_names(plan['reagents'])} and costs {currency} {money(plan['total'])} a "
-        "year."
+        f"The plan doses {_doses(plan['doses'])} mg/L and costs {currency} {money(plan['total'])} "
+        "a year."
     )
     for section in (_limits, _ledger, _reagents, _offers):
         lines += ["", *section(data, ink)]
@@ -49,6 +50,7 @@ def _limits(data: Data, ink: Ink) -> list[str]:
         lines += table(headers, rows, text_columns=(0, 1, 2))
     if not any(row["kind"] in ("limit", "burden cap") for row in data["marginal_costs"]):
         lines += paragraph("No limit binds: 1 % off any of them changes nothing near the plan.")
+    lines += _slack(data["not_binding"])
     if data["also_at_its_end"]:
         lines += paragraph(f"Also at its end: {'; '.join(data['also_at_its_end'])}.")
     least = money(max(data["resolution_per_year"], 0.01))
@@ -56,6 +58,19 @@ def _limits(data: Data, ink: Ink) -> list[str]:
         f"All of it is {data['scope']}. Differences below {currency} {least} a year are finer than "
         "polishing goes."
     )
+
+
+def _slack(rows: Sequence[Data]) -> list[str]:
+    """The tightest limits that do not bind."""
+    if not rows:
+        return []
+    named = ", ".join(
+        f"{_limit_name(row)} ({number(row['below_target_percent'], 2)} % below its target)"
+        for row in rows[:_MOST_SLACK]
+    )
+    rest = len(rows) - _MOST_SLACK
+    more = f", and {rest} further below" if rest > 0 else ""
+    return paragraph(f"At no cost, because they do not bind: {named}{more}.")
 
 
 def _limit_name(row: Data) -> str:
@@ -120,7 +135,9 @@ def _reagent(row: Data, currency: str) -> str:
             for cause, value in row["difference_by_cause"].items()
             if abs(value) >= 0.5
         )
-        text += f". {_signed(row['difference_per_year'])} {currency} a year: {parts}"
+        more = float(row["difference_per_year"])
+        word = "more" if more >= 0.0 else "less"
+        text += f". {currency} {money(abs(more))} a year {word}: {parts}"
     return f"{text}." if row["verified"] else f"{text}. Not verified further."
 
 
@@ -165,7 +182,7 @@ def _bracket(row: Data) -> str:
 def _why(row: Data) -> str:
     free = row["at_price_0_dearer_by"]
     if row["entry_price_per_t"] is None and free is not None:
-        return f"{row['why']}; not even for free: still {money(free)} a year dearer"
+        return f"{row['why']}; not even for free: still {money(free)} a year too dear"
     if row["recipe"] and not row["in_plan"]:
         return f"{row['why']}; enters with {_names(row['recipe'])}"
     return str(row["why"])
@@ -173,3 +190,11 @@ def _why(row: Data) -> str:
 
 def _names(reagents: list[str]) -> str:
     return " + ".join(name.replace("_", " ") for name in reagents)
+
+
+def _doses(doses: Mapping[str, float]) -> str:
+    texts = []
+    for key, dose in doses.items():
+        reagent, _, stage = key.replace("_", " ").partition("@")
+        texts.append(f"{reagent}{f' ({stage})' if stage else ''} {number(dose, 4)}")
+    return " + ".join(texts)

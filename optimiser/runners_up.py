@@ -80,7 +80,7 @@ def runners_up(
     for recipe, track in others:
         if len(rows) == count:
             break
-        token = _token_of(evaluator, findings, recipe, track)
+        token = token_of(evaluator, findings, recipe, track)
         if token is None:
             rows.append(_row(evaluator, solver, plan, track))
         else:
@@ -89,7 +89,7 @@ def runners_up(
     return rows, left if count else []
 
 
-def _token_of(
+def token_of(
     evaluator: Evaluator, findings: Findings, recipe: Recipe, track: Track
 ) -> Recipe | None:
     """The cheaper recipe of which this one is a copy with token doses, if there is one."""

@@ -154,6 +154,20 @@ def test_the_tariff_costs_its_share_of_the_wet_sludge() -> None:
     assert row["first_order_per_year"] == pytest.approx(0.1 * 130.0 * wet_t, rel=1e-3)
 
 
+def test_every_limit_either_has_a_cost_or_does_not_bind() -> None:
+    site, found = pair()
+    slack = {row["parameter"]: row["below_target_percent"] for row in found.data["not_binding"]}
+    bound = {row["parameter"] for row in found.data["marginal_costs"] if row["kind"] == "limit"}
+    assert bound | set(slack) == {limit.label for limit in site.limits}
+    assert not bound & set(slack)
+    rows = optimiser.assess(site, found.data["plan"]["doses"])
+    for parameter, below in slack.items():
+        row = row_of(rows, parameter)
+        expected = 100.0 * (1.0 - row["predicted"] / row["target"])
+        assert below == pytest.approx(expected, rel=1e-3)
+        assert f"{parameter}, daily (" in " ".join(explain_text(found.data).split())
+
+
 # -- reagents -------------------------------------------------------------------------------------
 
 
