@@ -14,20 +14,25 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from optimiser.cli_options import PROGRAM, build_parser
+from optimiser.cli_process import (
+    BAD_INPUT,
+    DONE,
+    NO_PLAN,
+    OUR_FAULT,
+    PLEASE_REPORT,
+    STOPPED,
+    drop_output,
+    drop_unwritable_output,
+    own_the_process,
+    say,
+    write_csv,
+)
 from optimiser.tables import Ink
 
 if TYPE_CHECKING:
     import argparse
-    from types import TracebackType
 
     from optimiser.site import Site
-
-DONE, OUR_FAULT, BAD_INPUT, NO_PLAN, STOPPED = 0, 1, 2, 3, 4
-
-_PLEASE_REPORT = (
-    "Please run the command again with --debug and send the output with the site file to the "
-    "maintainers."
-)
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -46,8 +51,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
     if options.command is None:
         sys.stderr.write(parser.format_help())
         return BAD_INPUT
-    if arguments is None and not options.debug:
-        sys.excepthook = _report_fault
+    if arguments is None:
+        own_the_process(debug=options.debug)
     # numpy is not loaded yet: matrices here are far too small for threads to help, and those that
     # wait for work burn a second core
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
@@ -55,13 +60,15 @@ def main(arguments: Sequence[str] | None = None) -> int:
         code = _COMMANDS[options.command](options)
         sys.stdout.flush()
     except KeyboardInterrupt:
-        _say("stopped before there was a result")
+        _clear_progress()
+        say("stopped before there was a result")
         return STOPPED
     except BrokenPipeError:
-        # The reader has what it wanted; keep the interpreter from flushing into a closed pipe.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        # The reader has what it wanted.
+        drop_output()
         return DONE
     except _known_errors() as error:
+        _clear_progress()
         return _refuse(error, debug=options.debug)
     return code
 
@@ -84,40 +91,19 @@ def _refuse(error: Exception, *, debug: bool) -> int:
     if isinstance(error, InputFileError):
         count = len(error.problems)
         sys.stderr.write(f"{error}\n")
-        _say(f"{count} problem{'' if count == 1 else 's'} found, nothing was computed")
+        say(f"{count} problem{'' if count == 1 else 's'} found, nothing was computed")
         return BAD_INPUT
     if isinstance(error, OSError):
-        _say(f"{error.filename or 'input or output'}: {error.strerror or error}")
+        drop_unwritable_output()
+        say(f"{error.filename or 'input or output'}: {error.strerror or error}")
         return BAD_INPUT
     code = BAD_INPUT if isinstance(error, WaterError) else OUR_FAULT
     if isinstance(error, OptimiserError):
         code = error.exit_code
     if code == OUR_FAULT and debug:
         traceback.print_exception(error)
-    _say(f"{error}\n    {_PLEASE_REPORT}" if code == OUR_FAULT else str(error))
+    say(f"{error}\n    {PLEASE_REPORT}" if code == OUR_FAULT else str(error))
     return code
-
-
-def _report_fault(
-    kind: type[BaseException], value: BaseException, trace: TracebackType | None
-) -> None:
-    """Say in one line that the program failed, and what to send to whom."""
-    place = trace
-    while place is not None and place.tb_next is not None:
-        place = place.tb_next
-    where = ""
-    if place is not None:
-        code = place.tb_frame.f_code
-        where = f" in {Path(code.co_filename).name}:{place.tb_lineno}"
-    text = " ".join(str(value).split()) or "no message"
-    _say(
-        f"a fault of the program, not of your input: {kind.__name__}{where}: {text}. "
-        f"{_PLEASE_REPORT}"
-    )
-
-
-def _say(message: str) -> None:
-    sys.stderr.write(f"{PROGRAM}: {message}\n")
 
 
 def _print_version() -> int:
@@ -203,11 +189,11 @@ def _assess(options: argparse.Namespace) -> int:
     site = _load(options)
     doses = _given_doses(options.dose) or dict(site.today)
     if not doses:
-        _say("no doses: give --dose REAGENT=MG_PER_L, or write them under `today` in the site file")
+        say("no doses: give --dose REAGENT=MG_PER_L, or write them under `today` in the site file")
         return BAD_INPUT
     problem = _dose_problem(doses, site)
     if problem:
-        _say(problem)
+        say(problem)
         return BAD_INPUT
     found = optimiser.assess(site, doses, trim=options.trim)
     _print(found.to_dict(), options.json, assessment_text)
@@ -253,7 +239,7 @@ def _curves(options: argparse.Namespace) -> int:
 
     curves = build_curves(_load(options), options.ph)
     if options.csv is not None:
-        curves.to_frame().to_csv(options.csv, index=False, lineterminator="\n")
+        write_csv(curves.to_frame(), options.csv)
     _print(curves.to_dict(), options.json, curves_text)
     return DONE
 
@@ -264,7 +250,7 @@ def _floors(options: argparse.Namespace) -> int:
 
     floors = explain_floors(_load(options))
     if options.csv is not None:
-        floors.to_frame().to_csv(options.csv, index=False, lineterminator="\n")
+        write_csv(floors.to_frame(), options.csv)
     _print(floors.to_dict(), options.json, floors_text)
     return DONE
 

@@ -5,6 +5,7 @@ OptimiserError
 ├── NoPurchase          the offers cannot cover the demand                       (exit code 3)
 ├── FeedRefused         a feed that must not be planned on as it stands          (exit code 2)
 ├── Interrupted         stopped by the user or a time limit before a result      (exit code 4)
+├── VerificationFault   no plan found holds when it is verified afresh            (exit code 1)
 ├── ModelError          a model that was put together wrongly                    (exit code 1)
 └── SolverError
     ├── SolverUnavailable   the solver asked for is not installed                (exit code 2)
@@ -84,6 +85,14 @@ class Interrupted(OptimiserError):  # noqa: N818 - named after what happened, li
     """Stopped by the user or a time limit before a verified result was found."""
 
     exit_code: ClassVar[int] = 4
+
+
+class VerificationFault(OptimiserError):  # noqa: N818 - named after what happened
+    """Plans were found, and none holds when its states are solved afresh."""
+
+    def __init__(self, count: int) -> None:
+        plans = "1 plan was found and does" if count == 1 else f"{count} plans were found and do"
+        super().__init__(f"{plans} not hold when verified afresh, so none is shown")
 
 
 class ModelError(OptimiserError):

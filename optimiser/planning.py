@@ -3,15 +3,15 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from typing import Any
 
 from optimiser.bound import Bound
 from optimiser.bound_tree import prove
 from optimiser.describe import describe
 from optimiser.diagnosis import explain_no_plan
-from optimiser.errors import FeedRefused, Interrupted
-from optimiser.evaluation import Evaluator
+from optimiser.errors import FeedRefused, Interrupted, VerificationFault
+from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.outcome import Plan
 from optimiser.runners_up import finish
 from optimiser.runners_up import runners_up as others_of
@@ -54,16 +54,19 @@ def plan(
         The water is too salty for the activity model and the site does not say to go on.
     Interrupted
         The time limit came before a verified plan was found.
+    VerificationFault
+        No find holds when its states are solved afresh.
     """
     begun = time.perf_counter()
     evaluator, findings = find(site, progress)
     with findings.timed("runners-up"):
         finish(evaluator, findings, solver_from(site.solver), runners_up)
-    bound = None
+    bound, refuted = None, []
     if prove_s is not None:
+        _, refuted = _verified(evaluator, findings)
         least = findings.feasible[0][1].total
         bound = prove(evaluator, least, seconds=prove_s, progress=progress)
-    return plan_of(evaluator, findings, begun, bound, runners_up=runners_up)
+    return plan_of(evaluator, findings, begun, bound, runners_up=runners_up, refuted=refuted)
 
 
 def plan_of(
@@ -73,25 +76,28 @@ def plan_of(
     bound: Bound | None = None,
     *,
     runners_up: int = RUNNERS_UP,
+    refuted: Sequence[str] = (),
 ) -> Plan:
     """Describe the best of a search's findings as a plan; ``begun`` is `time.perf_counter`'s.
 
-    ``bound`` is what is proven of plans that cost less.
+    ``bound`` is what is proven of plans that cost less, ``refuted`` what did not hold when it was
+    verified afresh.
 
     Raises
     ------
     FeedRefused
         The plan's water is too salty for the activity model.
+    VerificationFault
+        No find holds when its states are solved afresh.
     """
-    _, best = findings.feasible[0]
-    seen = evaluator.evaluate(best.point, slopes=False)
+    seen, more = _verified(evaluator, findings)
     strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)
     refuse_salty(evaluator.site, strength, "the plan's water")
     proof = _proof(evaluator, findings)
     if bound is not None:
         proof |= bound.to_dict()
         findings.seconds["bound"] = bound.seconds
-    data = describe(evaluator, seen, 0, proof=proof)
+    data = describe(evaluator, seen, 0, proof=proof, extra=[*refuted, *more])
     data["runners_up"], data["runners_up_left_out"] = others_of(
         evaluator, findings, solver_from(evaluator.site.solver), runners_up
     )
@@ -99,6 +105,27 @@ def plan_of(
         **findings.seconds, "total": time.perf_counter() - begun,
     }  # fmt: skip
     return Plan(doses=data["doses"], cost=data["cost"], compliant=data["compliant"], data=data)
+
+
+def _verified(evaluator: Evaluator, findings: Findings) -> tuple[Evaluation, list[str]]:
+    """Solve the cheapest find afresh; what does not hold leaves the findings, with a word on it.
+
+    Raises
+    ------
+    VerificationFault
+        None of them holds.
+    """
+    refuted: list[str] = []
+    for recipe, track in findings.feasible:
+        seen = evaluator.evaluate(track.point, slopes=False)
+        if seen.feasible[0]:
+            return seen, refuted
+        del findings.best[recipe]
+        refuted.append(
+            f"{' + '.join(recipe)} at {track.total:,.0f} {evaluator.site.currency} a year was "
+            "found and left out: it did not hold when its states were solved afresh"
+        )
+    raise VerificationFault(len(refuted))
 
 
 def find(site: Site, progress: Callable[[str], None] | None = None) -> tuple[Evaluator, Findings]:

@@ -13,6 +13,8 @@ import ctypes
 import math
 import os
 import re
+import signal
+import subprocess
 import tempfile
 import threading
 import time
@@ -32,6 +34,12 @@ _THREADS = 1
 _CBC_DUAL_TOLERANCE = 1e-9
 """At its default of 1e-7 CBC 2.10.3 called 12 of 2000 random linear models optimal that were not,
 by up to 65 %, where costs spread over six decades; at this value none."""
+
+_CBC_GRACE_S = 5.0
+"""How long CBC may go on after its time limit, which it checks between steps only, before it is
+ended. Common practice, no source."""
+
+_LOG = "log.txt"
 
 _DESCRIPTOR_LOCK = threading.RLock()
 
@@ -115,31 +123,26 @@ class CbcBackend:
         pulp = _load_pulp(self.name)
         path = self.path or str(pulp.PULP_CBC_CMD.pulp_cbc_path)
         translated = _Translation(pulp, model)
-        with tempfile.TemporaryDirectory(prefix="dosewright-") as folder:
-            log = Path(folder) / "log.txt"
-            program = pulp.COIN_CMD(
-                path=path,
-                msg=False,
-                timeLimit=request.time_limit_s,
-                gapRel=request.relative_gap,
-                options=[
-                    f"randomSeed {request.seed}",
-                    f"randomCbcSeed {request.seed}",
-                    f"dualT {_CBC_DUAL_TOLERANCE:g}",
-                ],
-                logPath=str(log),
-            )
+        with tempfile.TemporaryDirectory(prefix="dosewright-") as name:
+            folder = Path(name)
+            program = pulp.COIN_CMD(path=path, msg=False)
             if not program.available():
                 raise SolverUnavailable("cbc", f"no program at {path}", _INSTALL)
-            program.tmpDir = folder
+            program.solve_CBC = lambda problem: _run_cbc(program, problem, folder, request)
             started = time.perf_counter()
             try:
-                with native_output_on_stderr():
-                    translated.problem.solve(program)
+                translated.problem.solve(program)
+            except subprocess.TimeoutExpired as error:
+                said = f"was ended because it ran on {error.timeout - request.time_limit_s:g} s "
+                said += f"after its time limit of {request.time_limit_s:g} s"
+                raise SolverFault(self.name, model.name, said) from error
             except (pulp.PulpError, pulp.PulpSolverError, OSError) as error:
-                raise SolverFault(self.name, model.name, self._why(folder, error)) from error
+                raise SolverFault(self.name, model.name, f"failed: {error}") from error
+            except (ValueError, LookupError) as error:
+                said = "wrote a solution that cannot be read"
+                raise SolverFault(self.name, model.name, said) from error
             spent_s = time.perf_counter() - started
-            text = log.read_text(errors="replace")
+            text = (folder / _LOG).read_text(errors="replace")
         return self._outcome(translated, text, request, spent_s)
 
     def _outcome(
@@ -195,14 +198,66 @@ class CbcBackend:
         found = re.search(r"^Lower bound:\s*([-+.\deE]+)", log, re.MULTILINE)
         return translated.cost_of(float(found.group(1)) - 1e-3) if found else None
 
-    @staticmethod
-    def _why(folder: str, error: Exception) -> str:
-        if re.search(r"\s", folder):
-            return (
-                f"failed: its folder for temporary files has a blank in its name ({folder}); "
-                "set TMPDIR to a folder without one"
-            )
-        return f"failed: {error}"
+
+def _run_cbc(program: Any, problem: Any, folder: Path, request: SolveRequest) -> int:
+    """Run CBC on a PuLP problem in a folder and read its solution back.
+
+    The program is a child of this process that must not outlive it: however this ends, by a time
+    limit that CBC ignores or by an interruption, the child is ended first.
+    """
+    model, solution = folder / "model.mps", folder / "model.sol"
+    columns, column_names, row_names, _ = problem.writeMPS(str(model), rename=1)
+    options = {
+        "sec": request.time_limit_s, "randomSeed": request.seed, "randomCbcSeed": request.seed,
+        "dualT": f"{_CBC_DUAL_TOLERANCE:g}", "ratio": request.relative_gap,
+    }  # fmt: skip
+    words = [f"{word}" for key, value in options.items() for word in (f"-{key}", value)]
+    command = [program.path, str(model), *words, "-solve", "-printingOptions", "all"]
+    command += ["-solution", str(solution)]
+    running = None
+    with (folder / _LOG).open("wb") as log:
+        try:
+            with _signals_kept_back():
+                running = subprocess.Popen(
+                    command, stdin=subprocess.DEVNULL, stdout=log, stderr=subprocess.STDOUT
+                )
+            code = running.wait(timeout=request.time_limit_s + _CBC_GRACE_S)
+        finally:
+            if running is not None:
+                running.kill()
+                running.wait()
+    if code:
+        raise OSError(f"the program ended with code {code}")
+    if not solution.exists():
+        raise OSError("the program wrote no solution")
+    status, values, reduced, prices, slacks, sol_status = program.readsol_MPS(
+        str(solution), problem, columns, column_names, row_names
+    )
+    problem.assignVarsVals(values)
+    problem.assignVarsDj(reduced)
+    problem.assignConsPi(prices)
+    problem.assignConsSlack(slacks, activity=True)
+    problem.assignStatus(status, sol_status)
+    return int(status)
+
+
+@contextlib.contextmanager
+def _signals_kept_back() -> Iterator[None]:
+    """Let a request to stop wait until a child that is being started is known by name."""
+    arrived: list[int] = []
+    kept: dict[int, Any] = {}
+    if threading.current_thread() is threading.main_thread():
+        for name in ("SIGINT", "SIGTERM", "SIGHUP"):
+            number = getattr(signal, name, None)
+            if number is not None and callable(signal.getsignal(number)):
+                kept[number] = signal.signal(number, lambda number, _frame: arrived.append(number))
+    try:
+        yield
+    finally:
+        for number, handler in kept.items():
+            signal.signal(number, handler)
+    for number in arrived:
+        signal.raise_signal(number)
 
 
 class _Translation:

@@ -102,7 +102,9 @@ def test_a_program_that_breaks_down_is_a_fault(tmp_path: Path) -> None:
     broken = tmp_path / "cbc"
     broken.write_text("#!/bin/sh\nexit 3\n")
     broken.chmod(0o755)
-    with pytest.raises(SolverFault, match="cbc on model 'blend': failed: Pulp: Error"):
+    with pytest.raises(
+        SolverFault, match="cbc on model 'blend': failed: the program ended with code 3"
+    ):
         Solver(CbcBackend(path=str(broken))).solve(blend())
 
 
@@ -183,14 +185,13 @@ def test_cbc_leaves_no_file_behind(monkeypatch: pytest.MonkeyPatch, tmp_path: Pa
     assert list(tmp_path.iterdir()) == []
 
 
-def test_cbc_says_what_stops_it_in_a_folder_with_a_blank(
+def test_cbc_works_in_a_folder_with_a_blank(
     monkeypatch: pytest.MonkeyPatch, tmp_path: Path
 ) -> None:
     folder = tmp_path / "with blank"
     folder.mkdir()
     monkeypatch.setattr(tempfile, "tempdir", str(folder))
-    with pytest.raises(SolverFault, match="set TMPDIR to a folder without one"):
-        open_solver("cbc").solve(random_mixed_model(2))
+    assert open_solver("cbc").solve(blend()).objective == pytest.approx(145.0)
     assert list(folder.iterdir()) == []
 
 
