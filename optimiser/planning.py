@@ -61,7 +61,8 @@ def plan(
     evaluator, findings = find(site, progress)
     with findings.timed("runners-up"):
         finish(evaluator, findings, solver_from(site.solver), runners_up)
-    bound, refuted = None, []
+    bound: Bound | None = None
+    refuted: list[str] = []
     if prove_s is not None:
         _, refuted = _verified(evaluator, findings)
         least = findings.feasible[0][1].total
