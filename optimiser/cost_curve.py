@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optimiser.offer import Offer
-from optimiser.offer_cost import FREIGHT, Amount, Piece, pieces_of
+from optimiser.offer_cost import FREIGHT, GOODS, REBATE, Amount, Piece, pieces_of
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -141,9 +141,13 @@ def _joined(first: CostCurve, second: CostCurve) -> CostCurve:
     )  # fmt: skip
 
 
-def _straight(piece: Piece, position: int, kg_per_t: float) -> CostCurve:
+def _straight(piece: Piece, position: int, offer: Offer) -> CostCurve:
     """The curve of one piece of one offer, level below its least amount."""
     total, freight = piece.total, piece.costs.get(FREIGHT, Amount())
+    if offer.framework is not None:  # a lower value: as if its rebate were reached
+        goods = piece.costs[GOODS].plus(piece.costs.get(REBATE, Amount()))
+        total = total.plus(goods.times(-offer.framework.rebate_fraction))
+    kg_per_t = offer.kg_pure_per_t
     low, high = piece.low_t * kg_per_t, piece.high_t * kg_per_t
     line = CostCurve(
         np.array([high]), np.array([total.fixed]), np.array([total.per_t / kg_per_t]),
@@ -223,7 +227,7 @@ def _alone(offer: Offer, position: int) -> CostCurve | None:
     pieces = pieces_of(offer)
     if not pieces:
         return None
-    return _least_of([_straight(piece, position, offer.kg_pure_per_t) for piece in pieces])
+    return _least_of([_straight(piece, position, offer) for piece in pieces])
 
 
 @lru_cache(maxsize=4096)

@@ -8,6 +8,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable, Mapping
 from dataclasses import asdict, dataclass
+from types import MappingProxyType
 from typing import TYPE_CHECKING
 
 from optimiser.offer import KG_PER_T, Offer
@@ -84,7 +85,7 @@ class Deal:
     ----------
     cost
         Currency per year by cause (`CAUSES`; those beyond goods and freight where they occur), with
-        ``total``.
+        ``total``. Fees and rebates of framework agreements are here and on no row of ``buys``.
     buys
         One row per offer bought on, by reagent and falling amount used; contracts signed already
         are there too where they cost something.
@@ -109,10 +110,16 @@ class Deal:
         return frame
 
 
-def deal_of(buys: Iterable[Buy], *, gap: float | None, solver: str) -> Deal:
-    """Order and add up the rows of a deal."""
+def deal_of(
+    buys: Iterable[Buy], *, gap: float | None, solver: str,
+    shared: Mapping[str, float] = MappingProxyType({}),
+) -> Deal:  # fmt: skip
+    """Order and add up the rows of a deal; ``shared`` are costs that belong to no single offer."""
     rows = tuple(sorted(buys, key=lambda b: (b.reagent, -b.used_kg_pure_per_year, b.offer)))
-    cost = {cause: math.fsum(buy.by_cause[cause] for buy in rows) for cause in CAUSES}
+    cost = {
+        cause: math.fsum([shared.get(cause, 0.0), *(buy.by_cause[cause] for buy in rows)])
+        for cause in CAUSES
+    }
     cost = {cause: value for cause, value in cost.items() if value or cause in {GOODS, FREIGHT}}
     return Deal(cost={**cost, TOTAL: math.fsum(cost.values())}, buys=rows, gap=gap, solver=solver)
 

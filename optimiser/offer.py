@@ -31,6 +31,9 @@ The terms and how each is costed, for ``Q`` tonnes of product bought in a year:
   mobilisation is past.
 - **bundle**: offers of one bundle are signed together or not at all; where they are, each of their
   reagents is bought on the bundle and on contracts signed already, and nowhere else.
+- **framework agreement**: offers of one framework share a yearly fee where any of them is used, a
+  cap on their tonnes together, and a rebate on the goods taken on all of them once their tonnes
+  together reach a threshold.
 - **supplier's share**: of the amount of the reagent bought in a year, at most so much from one
   supplier; at least so much where anything is bought there. A greatest share below 100 % on every
   supplier is dual sourcing.
@@ -92,6 +95,17 @@ class Rebate:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Framework:
+    """What the offers of one framework agreement share; tonnes are of all of them in a year."""
+
+    name: str
+    fee_per_year: float = 0.0
+    most_t: float = math.inf
+    rebate_fraction: float = 0.0
+    rebate_above_t: float = 0.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Offer:
     """One supplier's terms for one product of one reagent; what they mean stands above.
 
@@ -137,6 +151,7 @@ class Offer:
     currency_rate: float = 1.0
     currency_rate_date: str = ""
     bundle: str = ""
+    framework: Framework | None = None
     least_share_fraction: float = 0.0
     most_share_fraction: float = 1.0
     signed: bool = False

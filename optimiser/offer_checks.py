@@ -280,6 +280,7 @@ def _volume_contradictions(offer: Offer) -> Iterator[_Contradiction]:
 def check_shared(offers: Iterable[tuple[Offer, Spot]]) -> None:
     """Record where offers of one supplier or bundle contradict each other."""
     most: dict[tuple[str, str], tuple[str, float]] = {}
+    frameworks: dict[str, Offer] = {}
     for offer, spot in offers:
         key = (offer.supplier, offer.reagent)
         first = most.setdefault(key, (offer.offer, offer.most_share_fraction))
@@ -288,4 +289,13 @@ def check_shared(offers: Iterable[tuple[Offer, Spot]]) -> None:
                 f"{100.0 * offer.most_share_fraction:g}",
                 f"{100.0 * first[1]:g}, as in offer {first[0]}",
                 "The greatest share is the supplier's: state the same on each of its offers.",
+            )
+        if offer.framework is None:
+            continue
+        other = frameworks.setdefault(offer.framework.name, offer)
+        if other.framework != offer.framework:
+            spot.at("framework").problem(
+                f"other terms of framework {offer.framework.name!r}",
+                f"those of offer {other.offer}",
+                "State fee, cap and rebate of a framework alike on each of its offers.",
             )

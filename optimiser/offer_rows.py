@@ -20,6 +20,7 @@ from optimiser.offer import (
     REBATE_KINDS,
     TIER_KINDS,
     TIER_PERIODS,
+    Framework,
     IndexClause,
     Offer,
     Rebate,
@@ -35,13 +36,14 @@ OFFER_COLUMNS = (
 TERM_COLUMNS = (
     "strength_as", "strength_g_per_l", "tested_strength_percent", "penalty_percent_per_point",
     "price_for", "pack_kg", "pack_l", "least_order_per", "orders_per_year", "order_size_t",
-    "freight_per_drop", "freight_free_from_t", "tier_kind", "tier_per", "tier_from_t", "tier_to_t",
-    "take_or_pay_t", "most_t_per_year", "rebate_percent", "rebate_above_t", "rebate_on",
-    "mobilisation_fee", "term_years", "index_name", "index_base", "index_now",
+    "freight_per_drop", "freight_free_from_t", "tier_kind", "tier_per", "tier_from_t",
+    "tier_to_t", "take_or_pay_t", "most_t_per_year", "rebate_percent", "rebate_above_t",
+    "rebate_on", "mobilisation_fee", "term_years", "index_name", "index_base", "index_now",
     "index_pass_through_percent", "index_most_fall_percent", "index_most_rise_percent",
-    "currency", "currency_rate", "currency_rate_date", "bundle", "least_share_percent",
-    "most_share_percent", "signed", "left_t", "ends_on", "valid_from", "lead_time_d",
-    "shelf_life_d", "deposit", "payment",
+    "currency", "currency_rate", "currency_rate_date", "bundle", "framework",
+    "framework_fee_per_year", "framework_most_t", "framework_rebate_percent",
+    "framework_rebate_above_t", "least_share_percent", "most_share_percent", "signed", "left_t",
+    "ends_on", "valid_from", "lead_time_d", "shelf_life_d", "deposit", "payment",
 )  # fmt: skip
 """Columns that a price book may have; a column that is missing is a term that no offer has."""
 
@@ -50,7 +52,7 @@ TIER_CELLS = ("offer", "tier_from_t", "tier_to_t", "price", "note")
 
 _TEXTS = (
     "offer", "supplier", "reagent", "product", "form", "note", "index_name", "bundle", "deposit",
-    "payment", "currency",
+    "payment", "currency", "framework",
 )  # fmt: skip
 _STRENGTH_PERCENT = Range(low=1.0, high=100.0)
 _DENSITY_KG_PER_L = Range(low=0.2, high=5.0)
@@ -120,6 +122,7 @@ def read_offer(entry: Entry, reagents: Mapping[str, Reagent], currency: str) -> 
         currency_rate=money[1],
         currency_rate_date=money[2],
         bundle=entry.text_or("bundle"),
+        framework=_framework(entry),
         least_share_fraction=entry.number_or("least_share_percent", 0.0, _PERCENT) / 100.0,
         most_share_fraction=entry.number_or("most_share_percent", 100.0, _PERCENT_ABOVE_0) / 100.0,
         signed=entry.choice_or("signed", "no", ("yes", "no"), "answers") == "yes",
@@ -235,6 +238,19 @@ def _rebate(entry: Entry) -> Rebate | None:
         fraction=entry.number("rebate_percent", _PERCENT) / 100.0,
         above_t=entry.number("rebate_above_t", NON_NEGATIVE),
         on=entry.choice("rebate_on", REBATE_KINDS, "kinds of rebate"),
+    )
+
+
+def _framework(entry: Entry) -> Framework | None:
+    columns = TERM_COLUMNS[TERM_COLUMNS.index("framework") :][:5]
+    if not {entry.has(column) for column in columns} & {True}:
+        return None
+    return Framework(
+        name=entry.text("framework"),
+        fee_per_year=entry.number_or("framework_fee_per_year", 0.0, NON_NEGATIVE),
+        most_t=entry.number_or("framework_most_t", math.inf, POSITIVE),
+        rebate_fraction=entry.number_or("framework_rebate_percent", 0.0, _PERCENT) / 100.0,
+        rebate_above_t=entry.number_or("framework_rebate_above_t", 0.0, NON_NEGATIVE),
     )
 
 

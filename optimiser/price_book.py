@@ -20,6 +20,7 @@ from optimiser.deal import Buy, Deal, buys_of, deal_of
 from optimiser.errors import NoPurchase, bad_demand, beyond_offers, no_offer
 from optimiser.offer import Offer
 from optimiser.offer_checks import require_usable_offers
+from optimiser.shared_terms import is_shared
 
 FloatArray = NDArray[np.float64]
 
@@ -45,7 +46,8 @@ class PriceBook:
     Notes
     -----
     Exact for every term of one offer and for splits between offers of one reagent. `inexact` names
-    the reagents with whole packs, suppliers' shares or bundles: their values are lower values.
+    the reagents with whole packs, bundles, frameworks or suppliers' shares: their values are lower
+    values.
     """
 
     def __init__(self, offers: Iterable[Offer]) -> None:
@@ -220,8 +222,7 @@ class PriceBook:
 
 
 def _needs_a_solver(offer: Offer) -> bool:
-    shared = offer.least_share_fraction > 0.0 or offer.most_share_fraction < 1.0
-    return offer.pack_t > 0.0 or shared or bool(offer.bundle)
+    return offer.pack_t > 0.0 or is_shared(offer)
 
 
 def cheapest_purchase(demand: Mapping[str, float], offers: Iterable[Offer]) -> Deal:

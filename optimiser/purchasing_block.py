@@ -16,7 +16,7 @@ from optimiser.linear_model import Expression, Model, Sense
 from optimiser.offer import Offer
 from optimiser.offer_cost import Piece, pieces_of, whole_packs_t
 from optimiser.price_book import cheapest_purchase
-from optimiser.shared_terms import add_shared_terms, tied_together
+from optimiser.shared_terms import Part, add_shared_terms, tied_together
 
 _LEAST_BUY_T = 1e-7
 """Less than a tenth of a gram of product is a solver's rounding, not a purchase."""
@@ -46,6 +46,7 @@ class PurchasingBlock:
     columns: Mapping[str, OfferColumns]
     costs: Mapping[str, Mapping[str, Expression]]
     demands: Mapping[str, Expression]
+    shared: Mapping[str, Expression]
 
     def deal(self, values: Mapping[str, float], *, gap: float | None, solver: str) -> Deal:
         """Read the deal out of a solution.
@@ -63,7 +64,8 @@ class PurchasingBlock:
                 demand_kg = self._covering(bought, room, demand_kg)
                 buys += buys_of([(self.offers[k], t) for k, t in bought.items()], demand_kg)
         kept = [row for row in buys if row.bought_t_per_year > 0.0 or row.cost_per_year > 0.0]
-        return deal_of(kept, gap=gap, solver=solver)
+        shared = {cause: amount.value(values) for cause, amount in self.shared.items()}
+        return deal_of(kept, gap=gap, solver=solver, shared=shared)
 
     def _bought(
         self, reagent: str, values: Mapping[str, float]
@@ -170,11 +172,10 @@ def add_purchasing(
     highest = {name: model.highest(demand) for name, demand in demanded.items()}
     columns, costs = {}, {}
     stretched = tied_together(tuple(chosen.values()))
-    tied = {*stretched, *(o.reagent for o in chosen.values() if o.bundle)}
     for key, offer in chosen.items():
         need_kg = highest[offer.reagent] + stretched.get(offer.reagent, 0.0)
         need_t = need_kg / offer.kg_pure_per_t
-        columns[key] = _add_columns(model, offer, need_t, tied=offer.reagent in tied)
+        columns[key] = _add_columns(model, offer, need_t, tied=offer.reagent in stretched)
         costs[key] = _add_costs(model, columns[key])
     for name, demand in wanted.items():
         cover = {
@@ -187,8 +188,12 @@ def add_purchasing(
         _add_somebody(
             model, name, demand, [columns[k] for k, o in chosen.items() if o.reagent == name]
         )
-    add_shared_terms(model, chosen, {k: (c.bought, c.used, c.most_t) for k, c in columns.items()})
-    return PurchasingBlock(chosen, columns, costs, demanded)
+    parts = {
+        key: Part(bought=one.bought, used=one.used, most_t=one.most_t, costs=costs[key])
+        for key, one in columns.items()
+    }
+    shared = add_shared_terms(model, chosen, parts)
+    return PurchasingBlock(chosen, columns, costs, demanded, shared)
 
 
 def _as_expression(demand: Expression | float) -> Expression:

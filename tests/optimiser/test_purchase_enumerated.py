@@ -6,12 +6,13 @@ import itertools
 import math
 import random
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import Any
 
 import pytest
 
 from optimiser.errors import NoPurchase
-from optimiser.offer import IndexClause, Offer, Rebate, Tier
+from optimiser.offer import Framework, IndexClause, Offer, Rebate, Tier
 from optimiser.price_book import PriceBook
 from optimiser.purchasing import purchase
 
@@ -211,7 +212,7 @@ def cheapest_of_all(offers: Sequence[Offer], demand: dict[str, float]) -> float:
             for name, need in demand.items()
         )
         if held and shares_hold(offers, kg):
-            best = min(best, least_signed_cost(offers, tonnes))
+            best = min(best, least_signed_cost(offers, tonnes) + under_framework(offers, tonnes))
     return best
 
 
@@ -225,6 +226,19 @@ def shares_hold(offers: Sequence[Offer], kg: Sequence[float]) -> bool:
         if mine > 0.0 and supplier < one.least_share_fraction * total * (1.0 - 1e-9):
             return False
     return True
+
+
+def under_framework(offers: Sequence[Offer], tonnes: Sequence[float]) -> float:
+    """Fee, cap and rebate of the one framework in a case."""
+    mine = [(o, t) for o, t in zip(offers, tonnes, strict=True) if o.framework and t > 0.0]
+    if not mine or mine[0][0].framework is None:
+        return 0.0
+    terms, volume = mine[0][0].framework, math.fsum(t for _, t in mine)
+    if volume > terms.most_t * (1.0 + 1e-9):
+        return math.inf
+    goods = math.fsum(tiered(o, t) for o, t in mine)
+    rebate = terms.rebate_fraction * goods if reached(volume, terms.rebate_above_t) else 0.0
+    return terms.fee_per_year - rebate
 
 
 def least_signed_cost(offers: Sequence[Offer], tonnes: Sequence[float]) -> float:
@@ -251,6 +265,11 @@ def least_signed_cost(offers: Sequence[Offer], tonnes: Sequence[float]) -> float
     return best
 
 
+FRAMEWORK = Framework(
+    name="two years", fee_per_year=180.0, most_t=7.5, rebate_fraction=0.15, rebate_above_t=4.0
+)
+
+
 def mixed_case(seed: int) -> tuple[list[Offer], dict[str, float]]:
     rng = random.Random(1000 + seed)
     offers = []
@@ -264,8 +283,9 @@ def mixed_case(seed: int) -> tuple[list[Offer], dict[str, float]]:
                 terms["least_share_fraction"] = 0.4
             if k == 0 and seed % 2:
                 terms["bundle"] = "pair"
-            offer = random_offer(rng, f"{reagent} {k}", reagent, **terms)
-            offers.append(offer)
+            if k == 1 and seed % 3 == 0:
+                terms |= {"framework": FRAMEWORK, "take_or_pay_t": 0.0, "rebate": None}
+            offers.append(random_offer(rng, f"{reagent} {k}", reagent, **terms))
     return offers, {REAGENT: rng.uniform(200.0, 2400.0), OTHER: rng.uniform(0.0, 2000.0)}
 
 
@@ -289,8 +309,6 @@ def test_packs_shares_and_bundles_agree_with_enumeration(seed: int) -> None:
 
 def capped(offer: Offer) -> Offer:
     """At most 9 t, so that all packs can be counted."""
-    from dataclasses import replace
-
     return replace(
         offer, most_t_per_year=9.0, take_or_pay_t=min(offer.take_or_pay_t, 8.0),
         least_order_t=0.5 if offer.least_order_per == "order" else offer.least_order_t,
