@@ -117,11 +117,12 @@ def _print_version() -> int:
     return DONE
 
 
-def _load(options: argparse.Namespace) -> Site:
+def _load(options: argparse.Namespace, *, use_expired: bool = False) -> Site:
     import optimiser
 
     path: Path = options.site
-    return optimiser.load_site(path / "site.yaml" if path.is_dir() else path)
+    file = path / "site.yaml" if path.is_dir() else path
+    return optimiser.load_site(file, use_expired=True) if use_expired else optimiser.load_site(file)
 
 
 def _ink() -> Ink:
@@ -300,6 +301,23 @@ def _explain(options: argparse.Namespace) -> int:
     return DONE
 
 
+def _offers(options: argparse.Namespace) -> int:
+    from optimiser.render_offers import offers_text
+    from optimiser.site_comparison import compare_site_offers
+
+    site = _load(options, use_expired=options.expired)
+    demand = _given_doses(options.demand)
+    for key in demand:
+        if key.partition("@")[0] not in site.reagents:
+            say(f"--demand {key}: {_unknown_reagent(key.partition('@')[0], site)}")
+            return BAD_INPUT
+    found = compare_site_offers(site, demand, of_plan=options.plan)
+    if options.csv is not None:
+        found.to_frame().to_csv(options.csv, index=False, lineterminator="\n")
+    _print(found.to_dict(), options.json, offers_text)
+    return DONE
+
+
 def _print(
     data: Mapping[str, Any], as_json: bool, text: Callable[[Mapping[str, Any], Ink], str]
 ) -> None:
@@ -330,6 +348,7 @@ _COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
     "explain": _explain,
     "curves": _curves,
     "floors": _floors,
+    "offers": _offers,
     "chances": _chances,
     "check": _check,
     "new": _new,

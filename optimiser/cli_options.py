@@ -82,6 +82,15 @@ def _finite(text: str) -> float:
     return value
 
 
+def _demand(text: str) -> tuple[str, float]:
+    key, equals, amount = text.partition("=")
+    if not key or not equals:
+        raise argparse.ArgumentTypeError(
+            f"expected REAGENT=KG_PER_YEAR such as caustic_soda=18000, found {text!r}"
+        )
+    return key.strip(), _positive(amount.strip())
+
+
 def _dose(text: str) -> tuple[str, float]:
     key, equals, amount = text.partition("=")
     if not key or not equals:
@@ -109,6 +118,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_explain(commands)
     _add_curves(commands)
     _add_floors(commands)
+    _add_offers(commands)
     _add_chances(commands)
     _add_command(commands, "check", "read a site and report every problem found", "check site.yaml")
     new = _add_command(
@@ -245,4 +255,26 @@ def _add_chances(commands: _Commands) -> None:
         "--confidence", metavar="CHANCE", type=_chance,
         help="tighten targets until all limits hold together with this chance, and tell its cost",
     )  # fmt: skip
+    _add_json(parser)
+
+
+def _add_offers(commands: _Commands) -> None:
+    parser = _add_command(
+        commands, "offers", "compare contracts at given volumes, without chemistry",
+        "offers site.yaml --demand caustic_soda=18000 --demand soda_ash=2500",
+    )  # fmt: skip
+    parser.add_argument(
+        "--demand", metavar="REAGENT=KG_PER_YEAR", type=_demand, action="extend", nargs="+",
+        default=[], help="kg of the pure compound needed in a year; repeat it for more (default: "
+        "the doses under `today` in the site file, or the plan's where there are none)",
+    )  # fmt: skip
+    parser.add_argument(
+        "--plan", action="store_true", help="take the plan's demand, also where `today` is given"
+    )
+    parser.add_argument(
+        "--expired", action="store_true", help="compare offers that do not hold today as well"
+    )
+    parser.add_argument(
+        "--csv", metavar="FILE", type=Path, help="write the ranking to FILE as well"
+    )
     _add_json(parser)

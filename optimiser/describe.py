@@ -6,6 +6,7 @@ Owns the content of `Outcome.data`; the arrays come from `optimiser.evaluation`.
 from __future__ import annotations
 
 from collections.abc import Iterable
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -16,11 +17,12 @@ from chemistry.burden import BURDENS, water_burden
 from chemistry.state import CO2_SPECIES, H2S_SPECIES, EquilibriumState
 from optimiser.assumptions import assumptions, versions
 from optimiser.capacities import capacities
+from optimiser.deal import Deal
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator
 from optimiser.gas_figures import gas_figures
 from optimiser.held_up import HeldUp, held_up_by
+from optimiser.plan_purchases import deal_of_point, exact_costs, purchase_rows
 from optimiser.points import END_TEXT
-from optimiser.purchasing import best_deal
 from optimiser.quality import LOAD
 from optimiser.quality_slopes import RULE
 from optimiser.site_salt import MODEL_TEXT
@@ -62,34 +64,18 @@ class Describer:
             found[f"{names[i]}@trim"] = float(self.trim_doses[i])
         return found
 
+    @cached_property
+    def deal(self) -> Deal:
+        """The cheapest purchase of the doses."""
+        return deal_of_point(self.evaluator, self.seen.priced, self.point)
+
     def cost_map(self) -> dict[str, float]:
         """Cost by cause, with the total last."""
-        priced = self.seen.priced
-        found = {k: float(v[self.point]) for k, v in priced.by_cause.items() if v[self.point] != 0}
-        found["total"] = float(priced.total[self.point])
-        return found
-
-    def _demand(self) -> dict[str, float]:
-        per = self.evaluator.pricing.kg_per_mg_per_l
-        return {key: dose * per for key, dose in self.dose_map().items()}
+        return exact_costs(self.evaluator, self.seen.priced, self.point, self.deal)
 
     def purchases(self) -> list[Data]:
         """What is bought on each offer."""
-        strengths = {o.offer: o.strength_fraction for o in self.site.offers}
-        rows = []
-        for buy in best_deal(self._demand(), self.evaluator.pricing.book).buys:
-            per_t = 1000.0 * strengths[buy.offer]
-            rows.append(
-                {
-                    "offer": buy.offer, "supplier": buy.supplier, "reagent": buy.reagent,
-                    "product": buy.product, "used_t_per_year": buy.used_kg_pure_per_year / per_t,
-                    "bought_t_per_year": buy.bought_t_per_year,
-                    "surplus_t_per_year": buy.surplus_kg_pure_per_year / per_t,
-                    "goods_per_year": buy.goods_per_year,
-                    "freight_per_year": buy.freight_per_year,
-                }
-            )  # fmt: skip
-        return rows
+        return purchase_rows(self.evaluator, self.deal)
 
     def feeding(self) -> list[Data]:
         """Every dose as it is fed: product, kg a day, litres an hour."""

@@ -88,7 +88,7 @@ def read_offer(entry: Entry, reagents: Mapping[str, Reagent], currency: str) -> 
     density = _density(entry, reagent)
     strength = _strength(entry, reagent, density)
     money = _currency(entry, currency)
-    price_for = _word_once_the_column_is_there(entry, "price_for", "product", PRICE_BASES)
+    price_for = _price_for(entry)
     return Offer(
         offer=entry.text("offer"),
         supplier=entry.text("supplier"),
@@ -213,13 +213,11 @@ def _pack_t(entry: Entry, density_kg_per_l: float) -> float:
     return (kg or litres * density_kg_per_l) / 1000.0 if kg or litres else 0.0
 
 
-def _word_once_the_column_is_there(
-    entry: Entry, column: str, default: str, words: tuple[str, ...]
-) -> str:
-    """Read a word that is required as soon as the table has its column."""
-    if not entry.has_column(column):
-        return default
-    return entry.choice(column, words, f"words for {column}")
+def _price_for(entry: Entry) -> str:
+    """What the price is for; required as soon as the table has the column."""
+    if not entry.has_column("price_for"):
+        return "product"
+    return entry.choice("price_for", PRICE_BASES, "bases of a price")
 
 
 def _least_order_per(entry: Entry) -> str:

@@ -6,7 +6,6 @@ is read by `optimiser.offer_rows`, whatever kind of table it stands in.
 
 from __future__ import annotations
 
-import datetime
 import math
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field, replace
@@ -28,7 +27,7 @@ from optimiser.offer_rows import (
     tier_price,
 )
 
-__all__ = ["OFFER_COLUMNS", "TERM_COLUMNS", "expired_notes", "load_offers", "read_offers"]
+__all__ = ["OFFER_COLUMNS", "TERM_COLUMNS", "load_offers", "read_offers"]
 
 
 def load_offers(path: str | Path, *, currency: str = "") -> tuple[Offer, ...]:
@@ -156,13 +155,3 @@ def _add_tier(draft: _Draft, entry: Entry) -> None:
     start, end, spot = tier_cells(entry)
     draft.further.append((start, end, spot, tier_price(entry)))
     entry.finish_row(TIER_CELLS)
-
-
-def expired_notes(offers: tuple[Offer, ...], today: datetime.date) -> tuple[str, ...]:
-    """Say which offers are past their last day."""
-    return tuple(
-        f"offer {offer.offer} ({offer.supplier}) was valid until {offer.valid_until}: ask whether"
-        " it still holds"
-        for offer in offers
-        if offer.valid_until and datetime.date.fromisoformat(offer.valid_until) < today
-    )

@@ -13,6 +13,7 @@ from optimiser.diagnosis import explain_no_plan
 from optimiser.errors import FeedRefused, Interrupted, VerificationFault
 from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.outcome import Plan
+from optimiser.plan_purchases import price_exactly
 from optimiser.runners_up import finish
 from optimiser.runners_up import runners_up as others_of
 from optimiser.search import SETTLE_STEP, Findings, Search
@@ -61,6 +62,7 @@ def plan(
     evaluator, findings = find(site, progress)
     with findings.timed("runners-up"):
         finish(evaluator, findings, solver_from(site.solver), runners_up)
+    price_exactly(evaluator, findings)
     bound: Bound | None = None
     refuted: list[str] = []
     if prove_s is not None:

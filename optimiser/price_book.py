@@ -246,8 +246,12 @@ def cheapest_purchase(demand: Mapping[str, float], offers: Iterable[Offer]) -> D
     return PriceBook(offers).cheapest(demand)
 
 
-def counted_demand(demand: Mapping[str, float], sold: Collection[str]) -> dict[str, float]:
+def counted_demand(
+    demand: Mapping[str, float], sold: Collection[str], notes: Iterable[str] = ()
+) -> dict[str, float]:
     """Demand per reagent over its stages; a trace counts as `LEAST_DEMAND_KG`.
+
+    ``notes`` are said where somebody is missing: which offers were left out, and why.
 
     Raises
     ------
@@ -260,11 +264,12 @@ def counted_demand(demand: Mapping[str, float], sold: Collection[str]) -> dict[s
         if _is_amount(kg):
             reagent = key.partition("@")[0]
             summed[reagent] = summed.get(reagent, 0.0) + float(kg)
-    reasons += [
+    missing = [
         no_offer(reagent, sorted(sold))
         for reagent, kg in summed.items()
         if kg > 0.0 and reagent not in sold
     ]
+    reasons += [*missing, *(notes if missing else ())]
     if reasons:
         raise NoPurchase(reasons)
     return {reagent: _counted_kg(kg) for reagent, kg in summed.items()}

@@ -6,6 +6,7 @@ Owns how a demand is covered from offers at the least cost. The block inside mod
 
 from __future__ import annotations
 
+import datetime
 import math
 from collections.abc import Mapping, Sequence
 from os import PathLike
@@ -16,6 +17,7 @@ from optimiser.deal import Deal
 from optimiser.errors import Interrupted, ModelError, NoPurchase, beyond_offers
 from optimiser.linear_model import Model
 from optimiser.offer_cost import pieces_of
+from optimiser.offer_dates import date_notes, holding
 from optimiser.price_book import PriceBook, cheapest_purchase, counted_demand
 from optimiser.purchasing_block import PurchasingBlock, add_purchasing
 from optimiser.shared_terms import no_common_ground
@@ -43,6 +45,7 @@ def purchase(
     offers: str | PathLike[str] | pd.DataFrame | Sequence[Offer],
     *,
     solver: SolverPort | str = "highs",
+    use_expired: bool = False,
 ) -> Deal:
     """Cover a demand from offers at the least cost.
 
@@ -54,6 +57,8 @@ def purchase(
         A price book file, a frame with its columns, or offers.
     solver
         ``highs``, ``cbc``, or a solver of your own.
+    use_expired
+        Buy from offers that do not hold today as well.
 
     Returns
     -------
@@ -81,8 +86,12 @@ def purchase(
     >>> round(deal.buys[0].surplus_kg_pure_per_year, 6)
     1980.0
     """
-    given = read_offers(offers)
-    needed = counted_demand(demand, {offer.reagent for offer in given})
+    every = read_offers(offers)
+    today = datetime.date.today()
+    given = every if use_expired else holding(every, today)
+    needed = counted_demand(
+        demand, {offer.reagent for offer in given}, date_notes(every, today, used=use_expired)
+    )
     port = open_solver(solver, relative_gap=_COMPARISON_GAP) if isinstance(solver, str) else solver
     model = Model("purchase")
     block = add_purchasing(model, given, needed)
@@ -117,7 +126,7 @@ def best_deal(
     """
     if not book.inexact & {key.partition("@")[0] for key, kg in demand.items() if kg > 0.0}:
         return book.cheapest(demand)
-    return purchase(demand, book.offers, solver=solver)
+    return purchase(demand, book.offers, solver=solver, use_expired=True)
 
 
 def _why_nothing_covers(offers: Sequence[Offer], demand: Mapping[str, float]) -> list[str]:

@@ -138,6 +138,7 @@ def _feeding(data: Data) -> list[str]:
 
 
 def _purchases(data: Data) -> list[str]:
+    other = any(buy.get("other_per_year") for buy in data["purchases"])
     rows = [
         [
             str(buy["offer"]),
@@ -148,6 +149,7 @@ def _purchases(data: Data) -> list[str]:
             number(buy["surplus_t_per_year"]),
             money(buy["goods_per_year"]),
             money(buy["freight_per_year"]),
+            *([money(buy.get("other_per_year", 0.0))] if other else []),
         ]
         for buy in data["purchases"]
     ]
@@ -155,7 +157,8 @@ def _purchases(data: Data) -> list[str]:
         return []
     currency = data["site"]["currency"]
     headers = ["offer", "supplier", "product", "used\nt/year", "bought\nt/year", "surplus\nt/year",
-               f"goods\n{currency}/year", f"freight\n{currency}/year"]  # fmt: skip
+               f"goods\n{currency}/year", f"freight\n{currency}/year",
+               *([f"other\n{currency}/year"] if other else [])]  # fmt: skip
     return table(headers, rows, text_columns=(0, 1, 2))
 
 

@@ -15,19 +15,19 @@ from pathlib import Path
 from catalogs.constants import load_system
 from catalogs.entries import NON_NEGATIVE, Entry
 from catalogs.positions import load_yaml
-from catalogs.problems import InputFileError, ProblemLog, Spot, echo
+from catalogs.problems import InputFileError, ProblemLog, Spot
 from catalogs.reagents import Reagent, load_reagents
 from chemistry.activity import choose_activity
 from chemistry.errors import WaterError
 from chemistry.feed import ANALYTES, BURDENS, FeedWater, WaterAnalysis, feed_water
 from chemistry.sample_waters import SampleWaters, close_samples, mean_analysis
 from chemistry.system import System
-from optimiser.offers_reader import OFFER_COLUMNS, expired_notes, read_offers
-from optimiser.site import Disposal, Dosing, Offer, Site, SolverSettings, Uncertainty
+from optimiser.site import Disposal, Dosing, Site, SolverSettings, Uncertainty
 from optimiser.site_constants import OwnBlock, read_own
 from optimiser.site_dosing import read_dosing
 from optimiser.site_feed import FeedBlock, read_feed
 from optimiser.site_limits import Foreseen, LimitsBlock, read_limits
+from optimiser.site_offers import SiteOffers, read_site_offers
 from optimiser.site_salt import ACTIVITY_CHOICES, AUTO, activity_notes, saltiest_mol_per_l
 from optimiser.site_samples import SampleBlock
 from optimiser.site_treatment import (
@@ -53,7 +53,7 @@ class _Blocks:
     limits: LimitsBlock | None
     disposal: Disposal | None
     charges: Mapping[str, float]
-    offers: tuple[Offer, ...]
+    offers: SiteOffers
     solver: SolverSettings
     dosing: Mapping[str, Dosing]
     uncertainty: Uncertainty
@@ -72,7 +72,9 @@ class _Chemistry:
     sample_waters: SampleWaters | None = None
 
 
-def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
+def load_site(
+    path: str | Path, *, on_day: datetime.date | None = None, use_expired: bool = False
+) -> Site:
     """Read and validate a site file and its price book.
 
     Parameters
@@ -81,6 +83,8 @@ def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
         The site file; its price book is looked up beside it.
     on_day
         Day that the validity of offers is held against; today when left out.
+    use_expired
+        Buy from offers that do not hold on that day as well, whatever the site file says.
 
     Returns
     -------
@@ -100,15 +104,16 @@ def load_site(path: str | Path, *, on_day: datetime.date | None = None) -> Site:
     reagents = load_reagents()
     entry = Entry.top(table, str(path), log)
     day = on_day or datetime.date.today()
-    blocks = _read_blocks(entry, file, reagents, day)
+    blocks = _read_blocks(entry, file, reagents, day, use_expired=use_expired)
     chemistry = _checked_chemistry(blocks, reagents)
     log.raise_if_any()
-    return _site(blocks, file, reagents, chemistry, day)
+    return _site(blocks, file, reagents, chemistry)
 
 
 def _read_blocks(
-    entry: Entry, file: Path, reagents: Mapping[str, Reagent], day: datetime.date
-) -> _Blocks:
+    entry: Entry, file: Path, reagents: Mapping[str, Reagent], day: datetime.date,
+    *, use_expired: bool,
+) -> _Blocks:  # fmt: skip
     name, currency = entry.text("site"), entry.text("currency")
     feed_entry = entry.block("feed")
     feed = None if feed_entry is None else read_feed(feed_entry, file.parent, day)
@@ -123,7 +128,9 @@ def _read_blocks(
     blocks = _Blocks(
         name=name, currency=currency, feed=feed, treatment=treatment, limits=limits,
         disposal=disposal, charges=entry.numbers("burden_charges_per_kg", BURDENS, "burdens"),
-        offers=_read_price_book(entry, file, reagents, treatment),
+        offers=read_site_offers(
+            entry, file, reagents, known, currency=currency, day=None if use_expired else day
+        ),
         solver=read_solver(entry.block_or_none("solver")),
         dosing=read_dosing(entry.block_or_none("dosing"), known),
         uncertainty=read_uncertainty(entry.block_or_none("uncertainty")),
@@ -149,36 +156,6 @@ def _foreseen(
         brought_components=brought,
         cyanide_mg_per_l=cyanide.total_mg_per_l if cyanide else 0.0,
     )
-
-
-def _read_price_book(
-    entry: Entry, file: Path, reagents: Mapping[str, Reagent], treatment: TreatmentBlock | None
-) -> tuple[Offer, ...]:
-    """Read the price book beside the site file; every allowed reagent must be in it."""
-    name = entry.text("offers")
-    if not name:
-        return ()
-    book = file.parent / name
-    if not book.exists():
-        entry.at("offers").problem(
-            f"no file {echo(name)} beside the site file",
-            "a price book",
-            f"Write one with the columns {','.join(OFFER_COLUMNS)}, or correct the name.",
-        )
-        return ()
-    log = entry.spot.log
-    before = len(log.problems)
-    offers, sold = read_offers(book, reagents, log)
-    if not sold and len(log.problems) > before:
-        return offers  # the table itself could not be read: that was said
-    for reagent, spot in (treatment.allowed_at if treatment else {}).items():
-        if reagent not in sold:
-            spot.problem(
-                f"{reagent}, which no offer sells",
-                f"at least one offer of it in {name}",
-                "Add an offer, or take the reagent out of the list.",
-            )
-    return offers
 
 
 def _checked_chemistry(blocks: _Blocks, reagents: Mapping[str, Reagent]) -> _Chemistry | None:
@@ -281,9 +258,8 @@ def site_components(
 
 
 def _site(
-    blocks: _Blocks, file: Path, reagents: Mapping[str, Reagent], chemistry: _Chemistry | None,
-    day: datetime.date,
-) -> Site:  # fmt: skip
+    blocks: _Blocks, file: Path, reagents: Mapping[str, Reagent], chemistry: _Chemistry | None
+) -> Site:
     feed, treatment, limits, disposal = (
         blocks.feed, blocks.treatment, blocks.limits, blocks.disposal,
     )  # fmt: skip
@@ -298,7 +274,7 @@ def _site(
         limits=limits.limits, ph_window=limits.ph_window, design_margin=limits.design_margin,
         variability=limits.variability, floors_mg_per_l=limits.floors_mg_per_l,
         treatment=treatment.treatment, disposal=disposal,
-        burden_charges_per_kg=blocks.charges, offers=blocks.offers, solver=blocks.solver,
+        burden_charges_per_kg=blocks.charges, offers=blocks.offers.offers, solver=blocks.solver,
         uncertainty=blocks.uncertainty, dosing=blocks.dosing,
         peak_flow_m3_per_d=feed.peak_flow_m3_per_d,
         pretreated=feed.pretreated, today=blocks.doses_today,
@@ -307,8 +283,7 @@ def _site(
         sample_waters=chemistry.sample_waters,
         notes=(
             *blocks.own.notes(system), *chemistry.notes, *feed.notes, *limits.notes,
-            *_closing_notes(feed, limits), *expired_notes(blocks.offers, day),
-            *_sample_notes(feed),
+            *_closing_notes(feed, limits), *blocks.offers.notes, *_sample_notes(feed),
         ),
     )  # fmt: skip
 

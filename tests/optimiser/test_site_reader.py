@@ -95,6 +95,7 @@ disposal:
     - {sludge_class: other, tariff_per_wet_t: 120}
 burden_charges_per_kg: {Cl: 0.05, TDS: 1e-2}
 offers: prices.csv
+expired_offers: use
 solver: {name: cbc, time_limit_s: 5, relative_gap: 1e-4, seed: 3}
 today: {caustic_soda: 420}
 """
@@ -250,7 +251,8 @@ def test_notes_say_what_was_assumed(site: Site) -> None:
         " doses bring is counted",
         "the charge is closed with Na, which has a limit: whether it is met leans on the charge"
         " balance of the analysis",
-        "offer A (Quoin Alkali) was valid until 2026-11-30: ask whether it still holds",
+        "offer A (Quoin Alkali) was valid until 2026-11-30: used all the same, ask whether it"
+        " holds",
     )
 
 
