@@ -31,10 +31,11 @@ feasible:
 
 **What every plan of a cell satisfies.** `Plant.blocks` solves the nominal state and every corner
 with gas kept and scale formed, and the same with scale held back wherever scale forms; where none
-forms, the one state is also the other. Each is an equilibrium on ``T = feed + sum dose x reacting +
+forms, the one state is also the other. Where paced reagents bring carbonate, the same holds with
+carbon dioxide vented, on totals that `bound_vent` brackets. Each is an equilibrium on ``T = feed + sum dose x reacting +
 control x reacting`` with ``control >= 0`` and meets every check of `Judge`. The relaxation takes
 the nominal state and a few of these corners, with the conditions derived in `bound_rows`; leaving
-other corners, ends, vented gas, floors and some rules out only adds plans. The states share the
+other corners and ends, floors and some rules out only adds plans. The states share the
 paced doses (times 1 -+ tolerance), and their pH differ by the tolerance exactly where both are
 held; a corner whose controller may rest is split into the two cases. In each state:
 

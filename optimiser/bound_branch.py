@@ -9,7 +9,8 @@ from numpy.typing import NDArray
 
 from optimiser.bound_cells import HELD, Cell, CellModel, Corner
 from optimiser.bound_model import Relaxation
-from optimiser.points import CLOSED_FORMED, CLOSED_HELD, Points
+from optimiser.bound_vent import can_vent
+from optimiser.points import CLOSED_HELD, VENTED_FORMED, VENTED_HELD, Points
 from optimiser.quality import LN10
 from optimiser.recipes import trim_for
 from optimiser.solver import SolveReport
@@ -63,18 +64,21 @@ class Branching:
             return None
         seen = self.relaxation.evaluator.evaluate(self.point(cell, made, report))
         worst, found = TELLING_RATIO, None
-        known = {(c.shift, c.signs, c.held_back) for c in cell.corners}
+        known = {(c.shift, c.signs, c.held_back, c.vented) for c in cell.corners}
+        vents = can_vent(self.relaxation.plant, cell.recipe)
         for part in seen.judged:
             block = part.block
-            if block.end not in (CLOSED_FORMED, CLOSED_HELD) or not part.ratio.shape[1]:
+            vented = block.end in (VENTED_FORMED, VENTED_HELD)
+            held_back = block.end in (CLOSED_HELD, VENTED_HELD)
+            if (vented and not vents) or not part.ratio.shape[1]:
                 continue
             for k, row in enumerate(block.rows):
                 factor = seen.rows.factor[row, list(cell.recipe.paced)]
                 signs = tuple(int(s) for s in np.sign(factor - 1.0))
-                key = int(np.sign(seen.rows.shift[row])), signs, block.end == CLOSED_HELD
+                key = int(np.sign(seen.rows.shift[row])), signs, held_back, vented
                 ratio = float(part.ratio[k].max()) if block.reached[k] else -np.inf
                 if key not in known and ratio > worst:
-                    worst, found = ratio, Corner(*key)
+                    worst, found = ratio, Corner(key[0], key[1], held_back, vented=vented)
         return found
 
     def point(self, cell: Cell, made: CellModel, report: SolveReport) -> Points:

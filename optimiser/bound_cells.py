@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from optimiser.bound_intervals import Ranges, Water, propagate
 from optimiser.bound_rows import StateRows
+from optimiser.bound_vent import Vent, vent_range
 from optimiser.evaluation import Evaluator
 from optimiser.linear_model import Model
 from optimiser.quality import LN10
@@ -33,19 +34,22 @@ class Corner:
     """A state that a plan of the cell has: steps of set point and paced doses, and the end.
 
     ``shift`` is -1, 0 or 1 tolerances of the set point, ``signs`` the same for each paced reagent;
-    ``held_back`` takes scale formers held back; ``rests`` says that the controller rests there.
+    ``held_back`` takes scale formers held back, ``vented`` carbon dioxide gone; ``rests`` says that
+    the controller rests there.
     """
 
     shift: int = 0
     signs: tuple[int, ...] = ()
     held_back: bool = False
     rests: bool = False
+    vented: bool = False
 
     @property
     def tag(self) -> str:
         """Short name, for variables."""
         marks = {-1: "-", 0: "0", 1: "+"}
         text = marks[self.shift] + "".join(marks[s] for s in self.signs)
+        text += "v" if self.vented else ""
         return text + ("h" if self.held_back else "") + ("r" if self.rests else "")
 
 
@@ -113,6 +117,7 @@ class Waters:
         self.evaluator = evaluator
         self.plant, self.judge = evaluator.plant, evaluator.judge
         self.site, self.treatment = evaluator.site, evaluator.plant.treatment
+        self._vents: dict[tuple[bytes, bytes], Vent] = {}
         reacting = self.plant.reacting
         self.most_control = LARGEST_CONTROL_MOL_PER_L / np.abs(reacting).max(axis=1)
 
@@ -173,11 +178,31 @@ class Waters:
             vector = plant.reacting[reagent]
             ends = np.stack([least * vector, most * vector])
             low, high = low + ends.min(axis=0), high + ends.max(axis=0)
+        if corner.vented:
+            self._vent(cell, factor, low, high)
         system = plant.system
         if corner.held_back and plant.held_system is not None:
             system = plant.held_system
         proton = self._proton(cell, corner)
         return Water(system, low, high, *proton, self.ceilings())
+
+    def vent(self, cell: Cell, factor: FloatArray) -> Vent:
+        """What a vented state keeps of its carbonate."""
+        paced = np.zeros(len(self.plant.names))
+        paced[list(cell.recipe.paced)] = 1.0
+        low, high = factor * cell.dose_low * paced, factor * cell.dose_high * paced
+        key = (low.tobytes(), high.tobytes())
+        if key not in self._vents:
+            self._vents[key] = vent_range(self.plant, low, high)
+        return self._vents[key]
+
+    def _vent(self, cell: Cell, factor: FloatArray, low: FloatArray, high: FloatArray) -> None:
+        """Take what leaves out of the ranges of totals."""
+        found = self.vent(cell, factor)
+        index = self.plant.system.index
+        low[index["CO3-2"]], high[index["CO3-2"]] = found.kept_low, found.kept_high
+        low[index["H+"]] -= 2.0 * (found.mixed_high - found.kept_low)
+        high[index["H+"]] -= 2.0 * max(found.mixed_low - found.kept_high, 0.0)
 
     def ceilings(self) -> FloatArray:
         """Ceilings of dissolved totals from every limit, mol/L."""

@@ -111,12 +111,33 @@ class Relaxation(Waters):
             for reagent, dose in doses.items():
                 total = total.plus(dose.times(float(plant.reacting[reagent, c])))
             totals[c] = total
+        if corner.vented:
+            self._vent_totals(made, corner, totals)
         rows = StateRows(made.model, corner.tag, water, ranges, totals)
         made.rows[corner.tag], made.waters[corner.tag] = rows, water
         made.control[corner.tag] = narrow.control
         surplus = [(dose, plant.surplus[r]) for r, dose in doses.items()]
         self._add_limits(made, rows, surplus)
         self._add_gas(made, rows)
+
+    def _vent_totals(self, made: CellModel, corner: Corner, totals: dict[int, Expression]) -> None:
+        """Replace the totals of carbonate and protons by those of the vented water."""
+        cell, plant, index = made.cell, self.plant, self.plant.system.index
+        factor, carbonate, proton = self._signs(cell, corner), index["CO3-2"], index["H+"]
+        found = self.vent(cell, factor)
+        mixed = Expression({}, float(plant.totals[carbonate]))
+        for r in cell.recipe.paced:
+            moles = float(factor[r] * plant.reacting[r, carbonate])
+            mixed = mixed.plus(self.dose(cell, r).times(moles))
+        size = max(found.kept_high, 1e-9)
+        low = found.kept_low / size * (1.0 - 1e-9)
+        key = made.model.add_variable(f"kept @{corner.tag}", low=low, high=1.0 + 1e-9)
+        kept = Expression({key: size})
+        row = kept.plus(mixed.times(-1.0)).times(1.0 / size)
+        rhs = LOOSENED - row.constant
+        made.model.add_row(f"kept is dosed @{corner.tag}", row.terms, Sense.AT_MOST, rhs)
+        totals[carbonate] = kept
+        totals[proton] = totals[proton].plus(mixed.plus(kept.times(-1.0)).times(-2.0))
 
     def _add_limits(
         self, made: CellModel, rows: StateRows, surplus: list[tuple[Expression, FloatArray]]

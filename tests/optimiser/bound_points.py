@@ -12,7 +12,7 @@ from optimiser.bound_model import Relaxation
 from optimiser.bound_rows import StateRows
 from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.linear_model import Expression, Model
-from optimiser.points import CLOSED_FORMED, CLOSED_HELD, Block
+from optimiser.points import CLOSED_FORMED, CLOSED_HELD, VENTED_FORMED, VENTED_HELD, Block
 from optimiser.recipes import make_recipe
 from optimiser.solver import SolverPort
 
@@ -22,21 +22,25 @@ FloatArray = NDArray[np.float64]
 def place_of(
     seen: Evaluation, point: int, corner: Corner, paced: tuple[int, ...]
 ) -> tuple[Block, int]:
-    """Block and position of the state of a corner; what holds nothing back stands for the held."""
-    rows = seen.rows
-    wanted = None
+    """Block and position of the state of a corner.
+
+    An end is solved only where it differs: without scale the formed state stands for the held one,
+    and without venting the closed one for the vented.
+    """
+    allowed = [CLOSED_FORMED]
+    allowed += [CLOSED_HELD] if corner.held_back else []
+    allowed += [VENTED_FORMED] if corner.vented else []
+    allowed += [VENTED_HELD] if corner.held_back and corner.vented else []
+    places = {}
     for block in seen.blocks:
-        if block.end not in (CLOSED_FORMED, CLOSED_HELD):
-            continue
-        if block.end == CLOSED_HELD and not corner.held_back:
-            continue
         for k, row in enumerate(block.rows):
-            signs = tuple(int(np.sign(rows.factor[row, r] - 1.0)) for r in paced)
-            same = int(np.sign(rows.shift[row])) == corner.shift and signs == corner.signs
-            if rows.point[row] == point and same:
-                wanted = (block, k)
-    assert wanted is not None
-    return wanted
+            signs = tuple(int(np.sign(seen.rows.factor[row, r] - 1.0)) for r in paced)
+            same = int(np.sign(seen.rows.shift[row])) == corner.shift and signs == corner.signs
+            if seen.rows.point[row] == point and same and block.end in allowed:
+                places[block.end] = (block, k)
+    if corner.vented and VENTED_FORMED in places:
+        places.pop(CLOSED_HELD, None)
+    return places[max(places)]
 
 
 def cell_around(
@@ -99,6 +103,11 @@ def point_values(
     for corner in cell.corners:
         block, k = place_of(seen, point, corner, cell.recipe.paced)
         values |= state_values(made.rows[corner.tag], block, k)
+        if corner.vented:
+            waters = block.state.totals[k]
+            vent = relaxation.vent(cell, relaxation._signs(cell, corner))
+            carbonate = relaxation.plant.system.index["CO3-2"]
+            values[f"kept @{corner.tag}"] = float(waters[carbonate]) / max(vent.kept_high, 1e-9)
         key = f"control @{corner.tag}"
         if key in made.model.variables:
             values[key] = float(block.dose[k]) / max(made.control[corner.tag][1], 1e-6)

@@ -11,9 +11,10 @@ from numpy.typing import NDArray
 from optimiser.bound_cells import Corner
 from optimiser.bound_model import Relaxation
 from optimiser.bound_shrink import shrink
+from optimiser.bound_vent import can_vent
 from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.points import Points
-from optimiser.recipes import recipes, set_point_bounds, trim_for
+from optimiser.recipes import Recipe, recipes, set_point_bounds, trim_for
 from optimiser.site import Site
 from optimiser.solver import open_solver
 from tests.optimiser.bound_points import broken, cell_around, least_cost_at, point_values
@@ -69,12 +70,15 @@ def random_points(evaluator: Evaluator, count: int, seed: int) -> Evaluation:
     return evaluator.evaluate(Points.join(parts))
 
 
-def random_corners(paced: int, rng: np.random.Generator, *, held_ph: bool) -> tuple[Corner, ...]:
+def random_corners(
+    paced: int, rng: np.random.Generator, *, held_ph: bool, vents: bool
+) -> tuple[Corner, ...]:
     found = {}
     for _ in range(2):
         shift = int(rng.choice([-1, 1])) if held_ph else 0
         signs = tuple(int(s) for s in rng.choice([-1, 1], size=paced))
-        corner = Corner(shift, signs, bool(rng.integers(2)))
+        vented = vents and bool(rng.integers(2))
+        corner = Corner(shift, signs, bool(rng.integers(2)), vented=vented)
         if shift or paced:
             found[corner.tag] = corner
     return tuple(found.values())
@@ -87,8 +91,12 @@ def contained(site: Site, count: int, seed: int) -> int:
     solver = open_solver("highs", relative_gap=1e-9)
     seen, checked = random_points(evaluator, count, seed), 0
     for point in np.flatnonzero(seen.feasible):
-        paced = int((seen.points.doses[point] > 0.0).sum())
-        corners = random_corners(paced, rng, held_ph=seen.points.controller[point] >= 0)
+        paced = np.flatnonzero(seen.points.doses[point] > 0.0)
+        own = int(seen.points.controller[point])
+        recipe = Recipe(None if own < 0 else own, tuple(int(r) for r in paced))
+        corners = random_corners(
+            paced.size, rng, held_ph=own >= 0, vents=can_vent(evaluator.plant, recipe)
+        )
         cell = cell_around(
             evaluator, seen, int(point), corners,
             ph_width=10.0 ** rng.uniform(-2.0, 0.3), dose_ratio=10.0 ** rng.uniform(0.02, 0.5),
