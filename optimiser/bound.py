@@ -32,12 +32,12 @@ feasible:
 **What every plan of a cell satisfies.** `Plant.blocks` solves the nominal state and every corner
 with gas kept and scale formed, and the same with scale held back wherever scale forms; where none
 forms, the one state is also the other. Where paced reagents bring carbonate, the same holds with
-carbon dioxide vented, on totals that `bound_vent` brackets. Each is an equilibrium on ``T = feed + sum dose x reacting +
-control x reacting`` with ``control >= 0`` and meets every check of `Judge`. The relaxation takes
-the nominal state and a few of these corners, with the conditions derived in `bound_rows`; leaving
-other corners and ends, floors and some rules out only adds plans. The states share the
-paced doses (times 1 -+ tolerance), and their pH differ by the tolerance exactly where both are
-held; a corner whose controller may rest is split into the two cases. In each state:
+carbon dioxide vented, on totals that `bound_vent` brackets. Each is an equilibrium on ``T = feed +
+sum dose x reacting + control x reacting`` with ``control >= 0`` and meets every check of `Judge`.
+The relaxation takes the nominal state and a few of these corners, with the conditions derived in
+`bound_rows`; leaving other corners and ends, floors and some rules out only adds plans. The states
+share the paced doses (times 1 -+ tolerance), and their pH differ by the tolerance exactly where
+both are held; a corner whose controller may rest is split into the two cases. In each state:
 
 - a check of metals: ``residual + share x held <= target`` with the least share of the cell,
   ``min(tss / largest mass of floc, 1 - capture)``, since the share falls as the mass rises;
@@ -50,12 +50,11 @@ search, the fixed costs of the recipe, and disposal, polymer and charges at the 
 gas kept and scale formed, which the dearest end costs at least.
 
 **Why the run proves something.** A relaxation's least cost is a lower bound for its cell; a cell
-without solution holds no plan. Splitting the pH, a dose or a log activity, adding a corner, and
-shrinking a cell to plans no dearer than the plan in question lose no such plan. The bound is the
-least over all cells, closed for their cost or still open. Mixed-integer bounds and claims of
-infeasibility are the solver's: rows are loosened by ten times its tolerance and bounds lowered by
-`bound_tree.ALLOWANCE`. ``gap = 1 - bound / cost``.
-"""
+without solution holds no plan. Splitting the pH or a dose, adding a corner, and shrinking a cell to
+plans no dearer than the plan in question lose no such plan. The bound is the least over all cells,
+closed for their cost or still open. Mixed-integer bounds and claims of infeasibility are the
+solver's: rows are loosened by ten times its tolerance and bounds lowered by `bound_tree.ALLOWANCE`.
+``gap = 1 - bound / cost``."""
 
 from __future__ import annotations
 

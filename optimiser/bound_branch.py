@@ -21,7 +21,6 @@ MOST_CORNERS = 3
 TELLING_RATIO = 1e-6
 PH_STEP = 0.1  # a pH interval this wide counts as much as
 SPENT_SHARE = 0.04  # this share of the plan's cost spent on a dose's range
-LOOSE_SHARE = 0.05  # of a balance, by which a species may exceed mass action before that is split
 WIDE_RATIO = 4.0
 
 

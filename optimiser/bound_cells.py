@@ -72,7 +72,6 @@ class Cell:
     bound: float = -np.inf
     ranges: Mapping[str, Ranges] = field(default_factory=dict)
     control: Mapping[str, tuple[float, float]] = field(default_factory=dict)
-    depth: int = 0
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -32,7 +32,7 @@ LEAST_RISE = 1e-3  # of the plan's cost, per round of shrinking
 LEAST_SHRINKAGE = 0.9
 LEAST_SHARE, LEAST_MISS = 1e-4, 0.01  # of tangents worth adding
 
-CELL_GAP = 2e-4
+CELL_GAP = 1e-3
 CELL_TIME_LIMIT_S = 20.0
 
 EMPTY, DEAR, FIXED = "no compliant water", "cost", "fixed cost"
@@ -44,6 +44,7 @@ class Examined:
 
     made: CellModel
     report: SolveReport | None
+    shrunk: bool
 
 
 class BranchAndBound:
@@ -74,16 +75,14 @@ class BranchAndBound:
             return Bound(lower_per_year=0.0, plan_per_year=self.plan, reason=why)
         self._begin()
         while self.heap and self.heap[0][0] < self.cut and not self._late():
-            bound, _, cell, known = heapq.heappop(self.heap)
+            _, _, cell, known = heapq.heappop(self.heap)
             self.progress(f"no plan below {self.lowest:,.0f} so far, {self.cells} cells examined")
-            children = [cell]
-            if known is not None:
-                children = self.branching.split(cell, known.made, known.report)
-            for child in children:
-                if self._late():
-                    self._keep(replace(child, bound=bound), None)
-                else:
-                    self.examine(child)
+            if known is None:
+                self.examine(cell)
+            elif not known.shrunk:
+                self.shrink(cell, known)
+            else:
+                self._split(cell, known)
         return Bound(
             lower_per_year=self.lowest, plan_per_year=self.plan, recipes=self.recipes,
             cells=self.cells, closed=dict(self.closed), open_cells=len(self.heap),
@@ -117,34 +116,55 @@ class BranchAndBound:
 
     # -- one cell ----------------------------------------------------------------------------------
 
+    def _split(self, cell: Cell, known: Examined) -> None:
+        for child in self.branching.split(cell, known.made, known.report):
+            if self._late():
+                self._keep(child, None)
+            else:
+                self.examine(child)
+
     def examine(self, cell: Cell) -> None:
-        """Bound a cell: close it, or keep it for splitting."""
+        """Bound a cell as it is: close it, or keep it for shrinking."""
         self.cells += 1
         made = self.relaxation.build(cell)
-        bound, report, width = cell.bound, None, float("inf")
-        for turn in range(1 + SHRINK_ROUNDS):
-            if made is None:
-                break
-            before = bound
-            bound, report = self._bounded(made, bound)
-            if report is not None and report.termination is Termination.INFEASIBLE:
-                made = None
-                break
-            rose = bound - before >= LEAST_RISE * self.plan
-            stuck = turn > 0 and not rose and made.width > LEAST_SHRINKAGE * width
-            if bound >= self.cut or stuck or self._late():
-                break
-            width = made.width
+        if made is None:
+            self._close(EMPTY, self.plan)
+            return
+        bound, report = self._bounded(made, cell.bound)
+        self._settle(made, bound, report, shrunk=False)
+
+    def shrink(self, cell: Cell, known: Examined) -> None:
+        """Shrink a cell as long as that pays: close it, or keep it for splitting."""
+        made: CellModel | None = known.made
+        bound, report = cell.bound, known.report
+        for turn in range(SHRINK_ROUNDS):
+            assert made is not None
+            before, width = bound, made.width
             smaller = shrink(self.relaxation, made, self.plan)
             made = None if smaller is None else self.relaxation.build(smaller)
-        if made is None:
+            if made is None:
+                self._close(EMPTY, self.plan)
+                return
+            bound, report = self._bounded(made, bound)
+            rose = bound - before >= LEAST_RISE * self.plan
+            stuck = turn > 0 and not rose and made.width > LEAST_SHRINKAGE * width
+            if bound >= self.cut or stuck or _infeasible(report) or self._late():
+                break
+        assert made is not None
+        self._settle(made, bound, report, shrunk=True)
+
+    def _settle(
+        self, made: CellModel, bound: float, report: SolveReport | None, *, shrunk: bool
+    ) -> None:
+        """Close a cell or keep it with what is known of it."""
+        if _infeasible(report):
             self._close(EMPTY, self.plan)
         elif bound >= self.cut:
             self._close(DEAR, bound)
         else:
             control = dict(made.control)
             cell = replace(made.cell, bound=bound, ranges=made.ranges, control=control)
-            self._keep(cell, Examined(made, report))
+            self._keep(cell, Examined(made, report, shrunk))
 
     def _bounded(self, made: CellModel, bound: float) -> tuple[float, SolveReport | None]:
         """Bound of a relaxation with tangents added where it needs them, and its last report."""
@@ -166,6 +186,10 @@ class BranchAndBound:
             if not added:
                 break
         return bound, report
+
+
+def _infeasible(report: SolveReport | None) -> bool:
+    return report is not None and report.termination is Termination.INFEASIBLE
 
 
 def prove(
