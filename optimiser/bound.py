@@ -54,7 +54,8 @@ without solution holds no plan. Splitting the pH or a dose, adding a corner, and
 plans no dearer than the plan in question lose no such plan. The bound is the least over all cells,
 closed for their cost or still open. Mixed-integer bounds and claims of infeasibility are the
 solver's: rows are loosened by ten times its tolerance and bounds lowered by `bound_tree.ALLOWANCE`.
-``gap = 1 - bound / cost``."""
+``gap = 1 - bound / cost``.
+"""
 
 from __future__ import annotations
 
