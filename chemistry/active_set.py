@@ -13,14 +13,18 @@ from chemistry.kernel import Kernel
 from chemistry.linear import left_inverse
 from chemistry.system import LN10
 
+SETTLED_ABOVE = 0.5e-8 * LN10  # saturation index (natural log) above which a solid forms
+CLEARLY_ABOVE = 0.05  # the same of a water that is nearly exact
+CLEARLY_NEGATIVE = 1e-2  # share of a solid's largest amount, likewise
 DEPENDENT = 1e-12  # smallest eigenvalue of the Gram matrix of independent stoichiometries
 
 
 def slots_of(active: BoolArray) -> tuple[IntArray, BoolArray]:
     """Indices of active solids padded to the largest count, and which slots are used."""
-    width = int(active.sum(axis=1).max(initial=0))
+    count = active.sum(axis=1)
+    width = int(count.max(initial=0))
     order = np.argsort(~active, axis=1, kind="stable")[:, :width]
-    return order, np.take_along_axis(active, order, axis=1)
+    return order, np.arange(width) < count[:, None]
 
 
 def keep_independent(kernel: Kernel, batch: Batch) -> None:
@@ -78,24 +82,44 @@ def _used_up(
     return kept, left
 
 
-def exchange(kernel: Kernel, part: Batch, solved: BoolArray) -> BoolArray:
-    """Drop the most negative solid, else add the most supersaturated one; True if settled."""
+def exchange(kernel: Kernel, part: Batch, exact: BoolArray, near: BoolArray) -> BoolArray:
+    """Drop the most negative solid, else add the most supersaturated one; True where exchanged.
+
+    Rows that are ``near`` their exact state exchange only what is beyond doubt: an amount below
+    zero by a share of what the water holds, or a clear supersaturation.
+    """
     n = part.totals.shape[0]
+    moved = np.zeros(n, dtype=bool)
     if not kernel.solid_ln_k.size:
-        return np.ones(n, dtype=bool)
-    take = np.arange(n)
-    negative = np.where(part.active, part.solids, 0.0)
-    worst = np.argmin(negative, axis=1)
-    drop = solved & (negative[take, worst] < 0.0)
-    si = np.where(part.active, -np.inf, kernel.saturation_ln(part.ln_activity, part.surroundings))
+        return moved
+    some = np.flatnonzero(exact | near)
+    take, doubtful = np.arange(some.size), near[some]
+    active, solids = part.active[some], part.solids[some]
+    worst = np.argmin(np.where(active, solids, 0.0), axis=1)
+    drop = active[take, worst] & (solids[take, worst] < 0.0)
+    unsure = np.flatnonzero(drop & doubtful)
+    if unsure.size:
+        most = _most(kernel, part, some[unsure], worst[unsure])
+        drop[unsure] = solids[unsure, worst[unsure]] < -CLEARLY_NEGATIVE * most
+    index = kernel.saturation_ln(part.ln_activity[some], part.surroundings[some])
+    si = np.where(active, -np.inf, index)
     best = np.argmax(si, axis=1)
-    add = solved & ~drop & (si[take, best] > 0.5e-8 * LN10)
-    part.active[take[drop], worst[drop]] = False
-    part.solids[take[drop], worst[drop]] = 0.0
+    add = ~drop & (si[take, best] > np.where(doubtful, CLEARLY_ABOVE, SETTLED_ABOVE))
+    part.active[some[drop], worst[drop]] = False
+    part.solids[some[drop], worst[drop]] = 0.0
     if add.any():
-        _add(kernel, part, take[add], best[add])
-    settled: BoolArray = ~(drop | add)
-    return settled
+        _add(kernel, part, some[add], best[add])
+    moved[some] = drop | add
+    return moved
+
+
+def _most(kernel: Kernel, part: Batch, rows: IntArray, solid: IntArray) -> FloatArray:
+    """Most of a solid that the totals of each row allow, protons left out, (rows,). [mol/L]"""
+    need = kernel.solid_formation[solid].copy()
+    if kernel.proton >= 0:
+        need[:, kernel.proton] = 0.0
+    room = np.where(need > 0.0, part.totals[rows] / np.where(need > 0.0, need, 1.0), np.inf)
+    return np.asarray(np.maximum(room.min(axis=1), 0.0), dtype=float)
 
 
 def _add(kernel: Kernel, part: Batch, rows: IntArray, chosen: IntArray) -> None:

@@ -60,20 +60,22 @@ class Coupling:
         n, k, c = m.shape[0], columns.size, self.count
         _, slope = self.model.screening(y[:, 0])
         screened = m @ self.screened  # sums of z^2 A and of z^2 L
+        if self.model.name != "sit":
+            held_back = 1.0 - slope * screened[:, c]
+            side = slope[:, None] * screened[:, :c]
+            by_activity = 0.5 * screened[:, None, :c]
+            return Coupled(held_back[:, None, None], by_activity, side[:, None])
         spread, side = np.zeros((n, k, k)), np.zeros((n, k, c))
         spread[:, :, 0] = slope[:, None] * screened[:, c + columns]
         side[:, 0] = slope[:, None] * screened[:, :c]
-        by_activity = 0.5 * screened[:, None, :c]
-        water = None
-        if self.model.name == "sit":
-            grouped = self.members.sums(m)
-            by_activity = np.concatenate(
-                [by_activity, (m @ self.formation)[:, None], grouped], axis=1
-            )[:, columns]
-            self._add_groups(spread, side, columns, Sums(seen, screened[:, c:], grouped))
-            hydrated, water = m @ self.hydrated, self.model.ln_water_slope(y)[:, columns]
-            spread += hydrated[:, c + columns, None] * water[:, None, :]
-            side += water[:, :, None] * hydrated[:, None, :c]
+        grouped = self.members.sums(m)
+        by_activity = np.concatenate(
+            [0.5 * screened[:, None, :c], (m @ self.formation)[:, None], grouped], axis=1
+        )[:, columns]
+        self._add_groups(spread, side, columns, Sums(seen, screened[:, c:], grouped))
+        hydrated, water = m @ self.hydrated, self.model.ln_water_slope(y)[:, columns]
+        spread += hydrated[:, c + columns, None] * water[:, None, :]
+        side += water[:, :, None] * hydrated[:, None, :c]
         return Coupled(np.eye(k) - spread, by_activity, side, water)
 
     def _add_groups(

@@ -169,7 +169,8 @@ def _interior_step(
     kernel: Kernel, part: Batch, edge: Barrier, mu: FloatArray, target: float
 ) -> BoolArray:
     x, s, pos = edge.amount, edge.slack, edge.possible
-    m = kernel.molalities(part.ln_activity, part.surroundings)
+    ln_m = kernel.ln_molalities(part.ln_activity, part.surroundings)
+    m = np.exp(ln_m)
     sums, scale = kernel.amounts(m, x * edge.most)
     off = np.where(pos, -(kernel.saturation_ln(part.ln_activity, part.surroundings) + s), 0.0)
     weight = np.where(pos, x * edge.most / s, 0.0)
@@ -186,7 +187,7 @@ def _interior_step(
     dl = _scaled_solve(part, matrix, rhs)
     ds = np.where(pos, off - dl @ kernel.solid_formation.T, 0.0)
     dx = np.where(pos, (mu[:, None] - x * s - x * ds) / s, 0.0)
-    primal = np.minimum(kernel.step_cap(part, m, dl, scale), _to_boundary(s, ds))
+    primal = np.minimum(kernel.step_cap(part, ln_m, dl, scale), _to_boundary(s, ds))
     dual = np.minimum(_to_boundary(x, dx), np.maximum(primal * 4.0, 0.1))
     go = (~done)[:, None]
     part.ln_activity += np.where(go, primal[:, None] * dl, 0.0)

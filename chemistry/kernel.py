@@ -31,12 +31,12 @@ class Kernel:
         self.solid_water = system.solid_water
         count = len(system.components)
         self.upper = np.triu_indices(count)
-        self.pairs = self.formation[:, self.upper[0]] * self.formation[:, self.upper[1]]
-        self.solid_pairs = (
-            self.solid_formation[:, self.upper[0]] * self.solid_formation[:, self.upper[1]]
-        )
+        self.pairs, self.pair_cells = _pairs(self.formation, self.upper)
+        self.solid_pairs, self.solid_cells = _pairs(self.solid_formation, self.upper)
         self.absolute = np.abs(self.formation)
         self.solid_absolute = np.abs(self.solid_formation)
+        self.both = np.ascontiguousarray(np.concatenate([self.formation, self.absolute], axis=1))
+        self.solid_both = np.concatenate([self.solid_formation, self.solid_absolute], axis=1)
         self.positive = np.maximum(self.formation, 0.0)
         self.negative = np.maximum(-self.formation, 0.0)
         self.largest = np.maximum(self.absolute.max(axis=0), 1.0)
@@ -52,10 +52,14 @@ class Kernel:
 
     def molalities(self, ln_activity: FloatArray, surroundings: FloatArray) -> FloatArray:
         """Species concentrations by mass action, (n, species). [mol/L]"""
+        return np.exp(self.ln_molalities(ln_activity, surroundings))
+
+    def ln_molalities(self, ln_activity: FloatArray, surroundings: FloatArray) -> FloatArray:
+        """Natural log of `molalities`, (n, species)."""
         ln_m = ln_activity @ self.formation_t
         ln_m += self.ln_k
         ln_m += self.model.offset(surroundings)
-        return np.exp(np.minimum(ln_m, LN_MOLALITY_CAP))
+        return np.minimum(ln_m, LN_MOLALITY_CAP, out=ln_m)
 
     def surroundings(self, m: FloatArray) -> FloatArray:
         """What the activity model sees of the species, (n, width), ionic strength first."""
@@ -70,20 +74,26 @@ class Kernel:
 
     def gram(self, m: FloatArray, solids_weight: FloatArray | None = None) -> FloatArray:
         """A^T diag(m) A (+ G^T diag(w) G), (n, components, components)."""
-        packed = m @ self.pairs
-        if solids_weight is not None and self.solid_ln_k.size:
-            packed = packed + solids_weight @ self.solid_pairs
         count = len(self.system.components)
-        full = np.empty((m.shape[0], count, count))
-        full[:, self.upper[0], self.upper[1]] = packed
-        full[:, self.upper[1], self.upper[0]] = packed
-        return full
+        full = np.zeros((m.shape[0], count * count))
+        packed = m @ self.pairs
+        for cells in self.pair_cells:
+            full[:, cells] = packed
+        if solids_weight is not None and self.solid_ln_k.size:
+            packed = solids_weight @ self.solid_pairs
+            upper, lower = self.solid_cells
+            full[:, upper] += packed
+            off = upper != lower
+            full[:, lower[off]] += packed[:, off]
+        return full.reshape(m.shape[0], count, count)
 
     def amounts(self, m: FloatArray, solids: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Sum of each component over species and solids, and the same with |stoichiometry|."""
-        total = m @ self.formation + solids @ self.solid_formation
-        scale = m @ self.absolute + solids @ self.solid_absolute
-        return total, scale
+        summed = m @ self.both
+        if solids.shape[1]:
+            summed += solids @ self.solid_both
+        count = self.formation.shape[1]
+        return summed[:, :count], summed[:, count:]
 
     # -- held pH and pCO2 ----------------------------------------------------------------------
 
@@ -204,14 +214,29 @@ class Kernel:
 
     # -- steps ---------------------------------------------------------------------------------
 
-    def step_cap(self, part: Batch, m: FloatArray, dl: FloatArray, scale: FloatArray) -> FloatArray:
+    def step_cap(
+        self, part: Batch, ln_m: FloatArray, dl: FloatArray, scale: FloatArray
+    ) -> FloatArray:
         """Step length so that no species outgrows the water's inventory, (n,)."""
         inventory = np.abs(part.totals).sum(axis=1) + scale.min(axis=1) + 1e-7
         rise = dl @ self.formation_t
-        room = np.log(10.0 * inventory)[:, None] - np.log(np.maximum(m, 1e-300))
-        room = np.maximum(room, 1.0)
-        with np.errstate(divide="ignore"):
-            limit = np.where(rise > room, room / np.maximum(rise, 1e-300), 1.0).min(axis=1)
-        biggest = np.abs(dl).max(axis=1)
-        cap: FloatArray = np.minimum(np.minimum(limit, 20.0 / np.maximum(biggest, 1e-300)), 1.0)
+        room = np.maximum(np.log(10.0 * inventory)[:, None] - ln_m, 1.0)
+        steepest = np.maximum((rise / room).max(axis=1), 1.0)
+        biggest = np.maximum(np.abs(dl).max(axis=1) / 20.0, 1.0)
+        cap: FloatArray = 1.0 / np.maximum(steepest, biggest)
         return cap
+
+
+def _pairs(
+    formation: FloatArray, upper: tuple[IntArray, IntArray]
+) -> tuple[FloatArray, tuple[IntArray, IntArray]]:
+    """Products of two components' stoichiometry where any species has both, and their cells.
+
+    Cells are positions in the flattened matrix of components, above and below its diagonal.
+    """
+    first, second = upper
+    products = formation[:, first] * formation[:, second]
+    some = products.any(axis=0)
+    count = formation.shape[1]
+    first, second = first[some], second[some]
+    return np.ascontiguousarray(products[:, some]), (first * count + second, second * count + first)

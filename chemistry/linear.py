@@ -44,20 +44,23 @@ def _solve_singular(matrix: FloatArray, rhs: FloatArray) -> FloatArray:
         return np.full_like(rhs, np.nan)
 
 
-def solve_equilibrated(matrix: FloatArray, rhs: FloatArray) -> FloatArray:
-    """Solve with rows and columns scaled to unit largest entries, one refinement step."""
+def solve_equilibrated(matrix: FloatArray, rhs: FloatArray, *, refined: bool = True) -> FloatArray:
+    """Solve with rows and columns scaled to unit largest entries, ``refined`` by one step."""
     scaled, row, column = equilibrate_matrix(matrix)
     target = rhs / row
     answer = solve_batch(scaled, target)
-    rest = target - np.einsum("nij,nj->ni", scaled, answer)
-    answer = answer + solve_batch(scaled, rest)
+    if refined:
+        rest = target - (scaled @ answer[:, :, None])[:, :, 0]
+        answer = answer + solve_batch(scaled, rest)
     return answer / column
 
 
 def equilibrate_matrix(matrix: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Row- and column-scaled copy with the scales."""
-    row = np.maximum(np.abs(matrix).max(axis=2), 1e-300)
+    size = np.abs(matrix)
+    row = np.maximum(size.max(axis=2), 1e-300)
+    size /= row[:, :, None]
+    column = np.maximum(size.max(axis=1), 1e-300)
     scaled = matrix / row[:, :, None]
-    column = np.maximum(np.abs(scaled).max(axis=1), 1e-300)
-    scaled = scaled / column[:, None, :]
+    scaled /= column[:, None, :]
     return scaled, row, column

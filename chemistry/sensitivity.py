@@ -11,12 +11,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from chemistry.active_set import slots_of
 from chemistry.batch import Batch, BoolArray, FloatArray, IntArray, new_batch
 from chemistry.equilibrium import solve_warm
 from chemistry.kernel import Kernel
 from chemistry.linear import equilibrate_matrix, solve_batch
-from chemistry.newton import Linearised, assemble, linearise
+from chemistry.linearised import Border, Linearised, assemble, linearise
 from chemistry.system import LN10
 
 if TYPE_CHECKING:
@@ -53,10 +52,11 @@ def sensitivity_of(state: EquilibriumState, directions: FloatArray) -> Sensitivi
     n, count = state.totals.shape
     ways = np.broadcast_to(directions, (n, *np.shape(directions)[-2:]))
     kernel, batch = state.kernel, _with_traces(state, ways)
-    slots, used = slots_of(batch.active)
+    border = Border.of(kernel, batch)
+    slots, used = border.slots, border.used
     columns = kernel.model.leading(batch.surroundings, least=0.0)
-    lin = linearise(kernel, batch, slots, used, columns=columns)
-    bordered = assemble(kernel, batch, lin, used)
+    lin = linearise(kernel, batch, border, columns=columns)
+    bordered = assemble(kernel, batch, lin, border)
     scaled, row, column = equilibrate_matrix(bordered.matrix)
     rhs = np.zeros((n, scaled.shape[1], ways.shape[1]))
     for j in range(ways.shape[1]):

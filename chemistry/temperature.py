@@ -12,13 +12,12 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from chemistry.active_set import slots_of
 from chemistry.activity import LN10, debye_hueckel_a
 from chemistry.batch import Batch, FloatArray
 from chemistry.gas import CO2_SPECIES, ln_henry_slope
 from chemistry.kernel import Kernel
 from chemistry.linear import solve_equilibrated
-from chemistry.newton import Linearised, assemble, linearise
+from chemistry.linearised import Border, Linearised, assemble, linearise
 from chemistry.sensitivity import Sensitivity
 from chemistry.system import (
     GAS_CONSTANT_KJ_PER_MOL_K,
@@ -94,9 +93,10 @@ def temperature_sensitivity_of(state: EquilibriumState) -> Sensitivity:
     """
     kernel, batch = state.kernel, state.batch
     drift = drift_of(state.system)
-    slots, used = slots_of(batch.active)
+    border = Border.of(kernel, batch)
+    slots, used = border.slots, border.used
     columns = kernel.model.leading(batch.surroundings, least=0.0)
-    lin = linearise(kernel, batch, slots, used, columns=columns)
+    lin = linearise(kernel, batch, border, columns=columns)
     by_a_ln = _by_screening(kernel, batch, drift)
     q = drift.ln_k + by_a_ln[:, : lin.m.shape[1]]
     followed = _followed(kernel, batch, lin, q)
@@ -111,7 +111,7 @@ def temperature_sensitivity_of(state: EquilibriumState) -> Sensitivity:
     rhs[:, :count] = _balances(kernel, batch, -(lin.m * moved) @ kernel.formation, held)
     risen = drift.solid_ln_k + water[:, None] * kernel.solid_water
     rhs[:, count:] = np.where(used, -np.take_along_axis(risen, slots, axis=1), 0.0)
-    answer = solve_equilibrated(assemble(kernel, batch, lin, used).matrix, rhs)
+    answer = solve_equilibrated(assemble(kernel, batch, lin, border).matrix, rhs)
     dl, dx = answer[:, :count], np.where(used, answer[:, count:], 0.0)
     dm = dl @ kernel.formation_t + moved
     dm += np.einsum("nsy,nyc,nc->ns", slope, lin.follow, dl)

@@ -59,13 +59,16 @@ class StartValues:
     surroundings: FloatArray
     solids_mol_per_l: FloatArray
     active: BoolArray
+    resting: BoolArray
 
     @classmethod
-    def of(cls, state: EquilibriumState) -> StartValues:
-        """Take the values of a state."""
+    def of(cls, state: EquilibriumState, resting: BoolArray | None = None) -> StartValues:
+        """Take the values of a state; ``resting`` tells where no dose was needed."""
+        if resting is None:
+            resting = np.zeros(state.totals.shape[0], dtype=bool)
         return cls(
             state.totals, state.log_activity, state.surroundings, state.solids_mol_per_l,
-            state.active,
+            state.active, resting,
         )  # fmt: skip
 
     @classmethod
@@ -82,7 +85,7 @@ class StartValues:
         n = self.totals.shape[0]
         return StartValues(
             self.totals, self.log_activity, self.surroundings, np.zeros((n, 0)),
-            np.zeros((n, 0), dtype=bool),
+            np.zeros((n, 0), dtype=bool), self.resting,
         )  # fmt: skip
 
     def put(self, rows: IntArray, state: EquilibriumState | StartValues) -> None:
@@ -100,6 +103,7 @@ def titrate(
     reagent: FloatArray,
     *,
     start: EquilibriumState | StartValues | None = None,
+    upward: BoolArray | None = None,
 ) -> Titration:
     """Find the dose of a reagent that brings each water to its pH.
 
@@ -112,6 +116,9 @@ def titrate(
         Moles of each component per unit of reagent; doses come in that unit per litre.
     start
         States of neighbouring dosed waters (n of them).
+    upward : ndarray, shape (n,)
+        Which reagents raise the pH: with it, waters whose neighbours in ``start`` rested are tried
+        without a dose first.
 
     Notes
     -----
@@ -121,6 +128,8 @@ def titrate(
     work = _Work(system, totals, ph, reagent)
     if start is not None:
         work.begin_at(start)
+        if upward is not None and isinstance(start, StartValues):
+            work.rest(np.flatnonzero(start.resting), upward)
         work.try_directly()
     work.search()
     return work.result()
@@ -145,7 +154,7 @@ class _Work:
         self.iterate = StartValues(
             totals, np.zeros((n, count)), np.zeros((n, system.activity_model.width)),
             np.zeros((n, solids)),
-            np.zeros((n, solids), dtype=bool),
+            np.zeros((n, solids), dtype=bool), np.zeros(n, dtype=bool),
         )  # fmt: skip
 
     @property
@@ -156,6 +165,19 @@ class _Work:
     def begin_at(self, start: EquilibriumState | StartValues) -> None:
         """Take the iterate of neighbouring waters."""
         self.iterate.put(np.arange(self.ph.size), start)
+
+    def rest(self, rows: IntArray, upward: BoolArray) -> None:
+        """Give up rows that are beyond their pH without any dose, and keep those states."""
+        if not rows.size:
+            return
+        state = equilibrate(
+            self.system, self.totals[rows], on_failure="flag", start=self.iterate.rows(rows)
+        )
+        beyond = np.where(upward[rows], state.ph > self.ph[rows], state.ph < self.ph[rows])
+        done = np.flatnonzero(beyond & state.converged)
+        self.iterate.put(rows[done], state.rows(done))
+        self.hopeless[rows[done]] = True
+        self.iterate.resting[rows[done]] = True
 
     def try_directly(self) -> None:
         """Newton with the dose as an unknown, from the iterate; keeps what succeeds."""
@@ -263,7 +285,8 @@ class _Work:
         """Plain states of the dosed waters."""
         dose = np.where(self.reached, self.dose, 0.0)
         dosed = self.totals + dose[:, None] * self.vectors
-        state = certified_or_solved(self.system, dosed, self.iterate, self.reached)
+        known = self.reached | self.iterate.resting
+        state = certified_or_solved(self.system, dosed, self.iterate, known)
         return Titration(dose / self.size, state, self.reached & state.converged)
 
 

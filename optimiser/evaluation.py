@@ -115,8 +115,63 @@ class _Neighbours:
 def _iterates(seen: Evaluation, end: int, rows: IntArray) -> StartValues:
     for block in seen.blocks:
         if block.end == end and np.isin(rows, block.rows).all():
-            return StartValues.of(block.state).rows(np.searchsorted(block.rows, rows))
-    return StartValues.of(seen.blocks[0].state).rows(rows)
+            return _start_of(block, np.searchsorted(block.rows, rows))
+    return _start_of(seen.blocks[0], rows)
+
+
+def _start_of(block: Block, picked: IntArray) -> StartValues:
+    return StartValues.of(block.state, block.reached & ~block.held).rows(picked)
+
+
+class _Before:
+    """The feed with some of its doses left out: what it is where a reagent meets it.
+
+    ``moved`` (points, 1 + reagents) is the change of the controller's dose; None where no slopes
+    are wanted.
+    """
+
+    def __init__(
+        self, plant: Plant, seen: Evaluation, near: Sequence[Place] | None,
+        moved: FloatArray | None,
+    ) -> None:  # fmt: skip
+        self.plant, self.seen, self.near, self.moved = plant, seen, near, moved
+
+    def ph(self, label: str, some: IntArray, without: BoolArray) -> tuple[FloatArray, FloatArray]:
+        """PH of the feed with every dose but those of ``without``, and its slope."""
+        plant, doses = self.plant, self.seen.priced.doses
+        kept = np.where(without, 0.0, doses[some])
+        mixed = plant.totals + kept @ plant.reacting
+        start = self._start(label, some)
+        state = equilibrate(plant.system, mixed, on_failure="flag", start=start)
+        self.seen.before[label] = (some, state)
+        plant.states_solved += some.size
+        ph = np.where(state.converged, state.ph, np.nan)
+        slope = np.zeros((some.size, 1 + len(plant.names)))
+        used = np.flatnonzero((kept > 0.0).any(axis=0))
+        if self.moved is None or not used.size:
+            return ph, slope
+        dosed = kept[:, used] > 0.0
+        sens = state.sensitivity(plant.reacting[used] * dosed[:, :, None])
+        for k, reagent in enumerate(used):
+            slope[:, 1 + reagent] += sens.ph[:, k]
+            own = self.seen.points.controller[some] == reagent
+            slope[own] += sens.ph[own, k][:, None] * self.moved[some[own]]
+        return ph, slope
+
+    def _start(self, label: str, some: IntArray) -> StartValues:
+        """The same mixture at the neighbours, else the water that all doses make."""
+        nominal = np.flatnonzero(self.seen.rows.nominal)
+        parts = []
+        for point in some:
+            place = self.near[int(point)] if self.near is not None else None
+            known = place.seen.before.get(label) if place is not None else None
+            if known is not None and place is not None and place.point in known[0]:
+                row = np.flatnonzero(known[0] == place.point)
+                parts.append(StartValues.of(known[1]).rows(row))
+            else:
+                row = nominal[[int(point)]]
+                parts.append(StartValues.of(self.seen.blocks[0].state).rows(row))
+        return StartValues.join(parts)
 
 
 class Evaluator:
@@ -149,15 +204,16 @@ class Evaluator:
         judged = [self.judge.judge(points, rows, b, slopes=slopes) for b in blocks]
         priced = self.pricing.price(points, rows, blocks, judged)
         seen = Evaluation(points, rows, blocks, judged, priced)
-        self._rules(seen, near)
+        self._rules(seen, near, slopes=slopes)
         return seen
 
     # -- rules ------------------------------------------------------------------------------------
 
-    def _rules(self, seen: Evaluation, near: Sequence[Place] | None) -> None:
+    def _rules(self, seen: Evaluation, near: Sequence[Place] | None, *, slopes: bool) -> None:
         seen.rules.append(self._least_rule(seen))
-        seen.rules.extend(self._sulfide_rules(seen, near))
-        seen.rules.extend(self._ceiling_rules(seen, near))
+        feed = _Before(self.plant, seen, near, self._dose_slope(seen) if slopes else None)
+        seen.rules.extend(self._sulfide_rules(seen, feed))
+        seen.rules.extend(self._ceiling_rules(seen, feed))
 
     def _dose_slope(self, seen: Evaluation) -> FloatArray:
         """Change of the controller's nominal dose with set point and paced doses, (points, k)."""
@@ -188,48 +244,7 @@ class Evaluator:
         ratio = np.where((paced | over).any(axis=1), np.maximum(ratio, 1.0), ratio)
         return Rule(DOSE_RULE, ratio, slope)
 
-    def _before(
-        self, seen: Evaluation, label: str, some: IntArray, without: BoolArray,
-        near: Sequence[Place] | None,
-    ) -> tuple[FloatArray, FloatArray]:  # fmt: skip
-        """PH of the feed with every dose but those of ``without``, and its slope."""
-        plant, doses = self.plant, seen.priced.doses
-        kept = np.where(without, 0.0, doses[some])
-        mixed = plant.totals + kept @ plant.reacting
-        start = self._before_start(seen, label, some, near)
-        state = equilibrate(plant.system, mixed, on_failure="flag", start=start)
-        seen.before[label] = (some, state)
-        plant.states_solved += some.size
-        ph = np.where(state.converged, state.ph, np.nan)
-        used = np.flatnonzero((doses[some] > 0.0).any(axis=0) & ~without)
-        slope = np.zeros((some.size, 1 + len(plant.names)))
-        moved = self._dose_slope(seen)[some]
-        if used.size:
-            sens = state.sensitivity(plant.reacting[used])
-            for k, reagent in enumerate(used):
-                slope[:, 1 + reagent] += sens.ph[:, k]
-                own = seen.points.controller[some] == reagent
-                slope[own] += sens.ph[own, k][:, None] * moved[own]
-        return ph, slope
-
-    def _before_start(
-        self, seen: Evaluation, label: str, some: IntArray, near: Sequence[Place] | None
-    ) -> StartValues:
-        """The same mixture at the neighbours, else the water that all doses make."""
-        nominal = np.flatnonzero(seen.rows.nominal)
-        parts = []
-        for point in some:
-            place = near[int(point)] if near is not None else None
-            known = place.seen.before.get(label) if place is not None else None
-            if known is not None and place is not None and place.point in known[0]:
-                row = np.flatnonzero(known[0] == place.point)
-                parts.append(StartValues.of(known[1]).rows(row))
-            else:
-                row = nominal[[int(point)]]
-                parts.append(StartValues.of(seen.blocks[0].state).rows(row))
-        return StartValues.join(parts)
-
-    def _sulfide_rules(self, seen: Evaluation, near: Sequence[Place] | None) -> list[Rule]:
+    def _sulfide_rules(self, seen: Evaluation, feed: _Before) -> list[Rule]:
         plant = self.plant
         some = np.flatnonzero((seen.priced.doses[:, plant.is_sulfide] > 0.0).any(axis=1))
         if not some.size:
@@ -237,7 +252,7 @@ class Evaluator:
         least = plant.treatment.sulfide_least_ph
         n, width = len(seen.points), 1 + len(plant.names)
         label = "pH before the sulfide dose"
-        ph, moved = self._before(seen, label, some, plant.is_sulfide, near)
+        ph, moved = feed.ph(label, some, plant.is_sulfide)
         before = np.full(n, -np.inf)
         before[some] = np.where(np.isnan(ph), 5.0, LN10 * (least - ph))
         slope = np.zeros((n, width))
@@ -253,7 +268,7 @@ class Evaluator:
         rules.append(Rule("pH after the sulfide dose", after, slope))
         return rules
 
-    def _ceiling_rules(self, seen: Evaluation, near: Sequence[Place] | None) -> list[Rule]:
+    def _ceiling_rules(self, seen: Evaluation, feed: _Before) -> list[Rule]:
         """A reagent with a practical pH ceiling has all dissolved at or below it."""
         plant, points = self.plant, seen.points
         rules = []
@@ -270,7 +285,7 @@ class Evaluator:
             slope[some[own], 0] = LN10
             paced = some[~own]
             if paced.size:
-                ph, moved = self._before(seen, label, paced, self.stronger, near)
+                ph, moved = feed.ph(label, paced, self.stronger)
                 ratio[paced] = np.where(np.isnan(ph), 5.0, LN10 * (ph - ceiling))
                 slope[paced] = LN10 * moved
             rules.append(Rule(label, ratio, slope))

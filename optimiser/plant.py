@@ -225,14 +225,15 @@ class Plant:
         controlled = (vectors != 0.0).any(axis=1)
         dose, held = np.zeros(totals.shape[0]), np.zeros(totals.shape[0], dtype=bool)
         if controlled.all():
-            result = titrate(system, totals, ph, vectors, start=start)
+            result = titrate(system, totals, ph, vectors, start=start, upward=upward)
             state, dose, held = result.state, result.dose, result.reached
         else:
             if controlled.any():
                 begin = start.rows(controlled) if start is not None else None
                 part = titrate(
-                    system, totals[controlled], ph[controlled], vectors[controlled], start=begin
-                )
+                    system, totals[controlled], ph[controlled], vectors[controlled], start=begin,
+                    upward=upward[controlled],
+                )  # fmt: skip
                 dose[controlled], held[controlled] = part.dose, part.reached
             dosed = totals + dose[:, None] * vectors
             state = equilibrate(system, dosed, on_failure="flag", start=start)

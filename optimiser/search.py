@@ -258,7 +258,7 @@ class Search:
             if previous < 0:
                 rows.append(base)
             else:
-                fed = self._controller_dose(track)
+                fed = float(track.place.seen.priced.doses[track.place.point, previous])
                 for share in (0.5, 0.85, 0.97):
                     row = base.copy()
                     row[previous] = max(share * fed, float(self.bounds.dose_low[previous]))
@@ -275,10 +275,6 @@ class Search:
             np.array(rows), np.full(n, controller, dtype=np.int64), np.full(n, ph),
             np.full(n, old.trim[0], dtype=np.int64),
         )  # fmt: skip
-
-    def _controller_dose(self, track: Track) -> float:
-        seen = self.evaluator.evaluate(track.point, full=False, all_ends=False)
-        return float(seen.priced.doses[0, track.point.controller[0]])
 
     # -- settle ------------------------------------------------------------------------------------
 
