@@ -31,6 +31,7 @@ ALWAYS_POLISHED, MOST_POLISHED = 2, 7
 NEARER = 0.8  # of the nearest miss: what comes no nearer than this at nominal states is left
 LARGEST_RATIO = 7.0
 UNUSUAL = {"Ba": "Ba+2", "Fe": "Fe+3"}  # metals that a reagent may bring into the water
+SCREENED, NO_TIME = "screened at nominal states only", "screened, then the time limit came"
 NO_OFFER = "no offer in the price book: chemistry only, cost unknown"
 
 
@@ -57,9 +58,10 @@ def openers(evaluator: Evaluator, findings: Findings, solver: SolverPort) -> lis
     rows = []
     for number, (miss, starts, one) in enumerate(screened):
         worth = number < ALWAYS_POLISHED or miss <= NEARER * least
-        worth &= number < MOST_POLISHED and time.perf_counter() < deadline
-        if not worth:
-            rows.append(_row(one, None, miss))
+        worth &= number < MOST_POLISHED
+        late = worth and time.perf_counter() > deadline
+        if late or not worth:
+            rows.append({**_row(one, None, miss), **({"how": NO_TIME} if late else {})})
             continue
         alone = narrowed(one, evaluator, starts)
         rows.append(_row(alone, _polished(alone, solver, least), miss))
@@ -125,7 +127,7 @@ def _row(one: Try, track: Track | None, screened: float) -> Data:
     return {
         "kind": one.kind, "what": one.what, "opens": opens, "plan": plan,
         "miss_percent": 0.0 if opens else 100.0 * math.expm1(np.clip(ratio, 0.0, LARGEST_RATIO)),
-        "how": "screened at nominal states only" if track is None else "polished",
+        "how": SCREENED if track is None else "polished",
         "note": "; ".join(_notes(one, unpriced=unpriced)),
     }  # fmt: skip
 

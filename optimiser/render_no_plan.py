@@ -113,10 +113,16 @@ def _openers(data: Data, ink: Ink) -> list[str]:
     if tried:
         named = "; ".join(f"{row['what']} (still misses by {_miss(row)})" for row in tried)
         lines += paragraph(f"Tried and not found to open one: {named}.")
-    rest = [row for row in rows if not row["opens"] and row["how"] != "polished"]
+    late = [str(row["what"]) for row in rows if "time limit" in row["how"]]
+    if late:
+        lines += paragraph(
+            f"Promising after a coarse look, but the time limit came first: {', '.join(late)}."
+        )
+    rest = [str(row["what"]) for row in rows if row["how"].endswith("states only")]
     if rest:
-        named = ", ".join(str(row["what"]) for row in rest)
-        lines += paragraph(f"Left after a coarse look that showed others nearer: {named}.")
+        lines += paragraph(
+            f"Left after a coarse look that showed others nearer: {', '.join(rest)}."
+        )
     return lines
 
 

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Callable
 from dataclasses import replace
 from functools import cache
+from itertools import count
 from typing import Any
 
 import pytest
@@ -188,3 +190,21 @@ def test_the_ways_out_are_plain_data_and_text_within_the_width() -> None:
     assert max(map(len, text.splitlines())) <= 100
     assert "Zn alone: no value of it opens a plan" in text
     assert "hydrated lime allowed: hydrated lime" in text
+
+
+def test_what_the_time_limit_left_untried_is_not_said_to_have_been_tried() -> None:
+    site = refused("ceiling")[0]
+    with pytest.raises(NoPlan) as caught:
+        plan(site)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr("optimiser.openers.time.perf_counter", _leaping())
+        data = no_plan_data(site.name, caught.value, "EUR")
+    row = next(r for r in data["openers"] if r["what"] == "hydrated lime")
+    assert not row["opens"]
+    assert "the time limit came first: " in no_plan_text(data)
+
+
+def _leaping() -> Callable[[], float]:
+    """A clock that is an hour later each time it is read."""
+    hours = count()
+    return lambda: 3600.0 * next(hours)
