@@ -10,7 +10,7 @@ import pytest
 
 ROOT = Path(__file__).resolve().parent.parent
 FLOORS = {"chemistry": 0, "catalogs": 1, "optimiser": 2}
-HEAVY = {"pandas", "scipy", "pulp", "highspy", "matplotlib"}
+HEAVY = {"pandas", "scipy", "pulp", "highspy", "matplotlib", "openpyxl"}
 FILES = sorted(path for package in FLOORS for path in (ROOT / package).rglob("*.py"))
 READS_FILES = {
     "open",
