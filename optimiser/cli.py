@@ -327,6 +327,26 @@ def _print(
         sys.stdout.write(text(data, _ink()))
 
 
+def _jar(options: argparse.Namespace) -> int:
+    from catalogs import load_reagents
+    from optimiser.bench_sheet import load_bench_sheet
+    from optimiser.jar_file import calibration_text, refuse_to_overwrite, write_calibration
+    from optimiser.jar_tests import compare_jars
+    from optimiser.render_jar import jar_table, jar_text
+
+    site = _load(options)
+    target = site.path.parent / options.out
+    refuse_to_overwrite(target, force=options.force)
+    names = {key: load_reagents()[key].name for key in site.reagents}
+    sheet = load_bench_sheet(options.results, names, tuple(site.analysis.measurements))
+    found = compare_jars(site, sheet)
+    data = found.to_dict()
+    text = calibration_text(found.calibration, jar_table(data))
+    write_calibration(target, text, force=options.force)
+    _print({**data, "written": str(target)}, options.json, jar_text)
+    return DONE
+
+
 def _check(options: argparse.Namespace) -> int:
     from optimiser.render_site import site_text
 
@@ -350,6 +370,7 @@ _COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
     "floors": _floors,
     "offers": _offers,
     "chances": _chances,
+    "jar": _jar,
     "check": _check,
     "new": _new,
 }

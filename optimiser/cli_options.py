@@ -120,6 +120,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_floors(commands)
     _add_offers(commands)
     _add_chances(commands)
+    _add_jar(commands)
     _add_command(commands, "check", "read a site and report every problem found", "check site.yaml")
     new = _add_command(
         commands, "new", "write a commented starter site with its price book", "new my-plant",
@@ -278,3 +279,29 @@ def _add_offers(commands: _Commands) -> None:
         "--csv", metavar="FILE", type=Path, help="write the ranking to FILE as well"
     )
     _add_json(parser)
+
+
+def _add_jar(commands: _Commands) -> None:
+    parser = _add_command(
+        commands, "jar", "hold jar tests against theory and write the factors that follow",
+        "jar site.yaml bench.csv",
+    )  # fmt: skip
+    parser.add_argument(
+        "results", metavar="RESULTS", type=Path,
+        help="bench results (CSV or XLSX), one row a jar: date, doses in mg/L pure, pH, metals "
+        "filtered and unfiltered, sludge; a row without doses is the raw water",
+    )  # fmt: skip
+    parser.add_argument(
+        "--out", metavar="NAME", type=_file_name, default="jar.yaml",
+        help="file to write into the site's folder (default: jar.yaml)",
+    )  # fmt: skip
+    parser.add_argument("--force", action="store_true", help="replace that file if it is there")
+    _add_json(parser)
+
+
+def _file_name(text: str) -> str:
+    if Path(text).name != text or not text.endswith((".yaml", ".yml")):
+        raise argparse.ArgumentTypeError(
+            f"expected the name of a .yaml file without a folder, found {text!r}"
+        )
+    return text

@@ -14,6 +14,7 @@ from chemistry.feed import WaterAnalysis
 from chemistry.sample_waters import SampleWaters
 from chemistry.samples import Samples
 from chemistry.system import System
+from optimiser.jar_file import JarCalibration
 from optimiser.offer import Offer
 
 __all__ = [
@@ -242,8 +243,18 @@ class Site:
     """Dated samples of the feed where the site names a file; ``analysis`` is then their mean."""
     sample_waters: SampleWaters | None = None
     """The samples' closed waters in ``system``, in the order of ``samples``."""
+    jar: JarCalibration | None = None
+    """Jar tests that the site names; ``treatment`` and ``floors_mg_per_l`` hold their factors."""
 
     @property
     def flow_m3_per_year(self) -> float:
         """Treated volume in a year. [m3/year]"""
         return self.flow_m3_per_d * self.operating_days_per_year
+
+    @property
+    def residual_factors(self) -> Mapping[str, tuple[float, float, float]]:
+        """Metal to (factor, low, high) of dissolved as measured over theory, from jar tests."""
+        if self.jar is None:
+            return {}
+        found = self.jar.residual_factors
+        return {metal: (fit.factor, fit.low, fit.high) for metal, fit in found.items()}

@@ -22,10 +22,12 @@ from chemistry.errors import WaterError
 from chemistry.feed import ANALYTES, BURDENS, FeedWater, WaterAnalysis, feed_water
 from chemistry.sample_waters import SampleWaters, close_samples, mean_analysis
 from chemistry.system import System
+from optimiser.jar_file import JarCalibration
 from optimiser.site import Disposal, Dosing, Site, SolverSettings, Uncertainty
 from optimiser.site_constants import OwnBlock, read_own
 from optimiser.site_dosing import read_dosing
 from optimiser.site_feed import FeedBlock, read_feed
+from optimiser.site_jar import JarChanges, read_site_jar, with_jar
 from optimiser.site_limits import Foreseen, LimitsBlock, read_limits
 from optimiser.site_offers import SiteOffers, read_site_offers
 from optimiser.site_salt import ACTIVITY_CHOICES, AUTO, activity_notes, saltiest_mol_per_l
@@ -60,6 +62,7 @@ class _Blocks:
     doses_today: Mapping[str, float]
     own: OwnBlock
     activity: str
+    jar: JarCalibration | None = None
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -120,6 +123,9 @@ def _read_blocks(
     treatment_entry = entry.block("treatment")
     treatment = None if treatment_entry is None else read_treatment(treatment_entry, reagents)
     limits_entry = entry.block("limits")
+    jar = None
+    if treatment is not None and treatment.jar_spot is not None:
+        jar = read_site_jar(treatment.jar_tests, treatment.jar_spot, file.parent, reagents)
     foreseen = _foreseen(feed, treatment, reagents)
     limits = None if limits_entry is None else read_limits(limits_entry, foreseen)
     disposal_entry = entry.block("disposal")
@@ -137,6 +143,7 @@ def _read_blocks(
         doses_today=entry.numbers("today", known, "reagents allowed in treatment", NON_NEGATIVE),
         own=read_own(entry),
         activity=entry.choice_or("activity", AUTO, ACTIVITY_CHOICES, "activity models"),
+        jar=jar,
     )  # fmt: skip
     entry.finish()
     return blocks
@@ -266,14 +273,19 @@ def _site(
     if not (feed and treatment and limits and disposal and chemistry and feed.analysis):
         raise AssertionError("a block that is missing leaves a problem")
     system = chemistry.system
+    changes = JarChanges(
+        treatment=treatment.treatment, floors_mg_per_l=limits.floors_mg_per_l, notes=()
+    )
+    if blocks.jar is not None:
+        changes = with_jar(blocks.jar, treatment.treatment, limits.floors_mg_per_l)
     return Site(
         name=blocks.name, path=file, currency=blocks.currency,
         flow_m3_per_d=feed.flow_m3_per_d, operating_days_per_year=feed.operating_days_per_year,
         stands_for=feed.stands_for, analysis=chemistry.analysis, system=system,
         reagents={name: reagents[name] for name in treatment.allowed_at},
         limits=limits.limits, ph_window=limits.ph_window, design_margin=limits.design_margin,
-        variability=limits.variability, floors_mg_per_l=limits.floors_mg_per_l,
-        treatment=treatment.treatment, disposal=disposal,
+        variability=limits.variability, floors_mg_per_l=changes.floors_mg_per_l,
+        treatment=changes.treatment, disposal=disposal,
         burden_charges_per_kg=blocks.charges, offers=blocks.offers.offers, solver=blocks.solver,
         uncertainty=blocks.uncertainty, dosing=blocks.dosing,
         peak_flow_m3_per_d=feed.peak_flow_m3_per_d,
@@ -281,9 +293,11 @@ def _site(
         own_constants=blocks.own.constants, solid_switches=blocks.own.switches,
         samples=feed.sampled.samples if feed.sampled else None,
         sample_waters=chemistry.sample_waters,
+        jar=blocks.jar,
         notes=(
             *blocks.own.notes(system), *chemistry.notes, *feed.notes, *limits.notes,
             *_closing_notes(feed, limits), *blocks.offers.notes, *_sample_notes(feed),
+            *changes.notes, *_jar_notes(blocks.jar, chemistry.analysis),
         ),
     )  # fmt: skip
 
@@ -306,3 +320,11 @@ def _sample_notes(feed: FeedBlock) -> list[str]:
         f"planned on the flow-weighted mean of {count} samples in {feed.sampled.samples.source}:"
         " the doses are not yet verified on each of them"
     ]
+
+
+def _jar_notes(jar: JarCalibration | None, analysis: WaterAnalysis) -> list[str]:
+    """Metals of the feed that have left the range of the jar tests."""
+    if jar is None:
+        return []
+    feed = {name: m.dissolved_mg_per_l for name, m in analysis.measurements.items()}
+    return [f"{text}: make new jar tests" for text in jar.outside(feed_mg_per_l=feed)]

@@ -49,6 +49,8 @@ class TreatmentBlock:
 
     treatment: Treatment
     allowed_at: Mapping[str, Spot] = field(default_factory=dict)
+    jar_tests: str = ""
+    jar_spot: Spot | None = None
 
 
 def read_treatment(entry: Entry, reagents: Mapping[str, Reagent]) -> TreatmentBlock:
@@ -98,8 +100,12 @@ def read_treatment(entry: Entry, reagents: Mapping[str, Reagent]) -> TreatmentBl
             "Below that pH sulfide gives off hydrogen sulfide: name the gas scrubber of the closed "
             "tank in `scrubber`, or raise `sulfide_least_ph`.",
         )
+    jar_tests = entry.text_or("jar_tests")
     entry.finish()
-    return TreatmentBlock(treatment=treatment, allowed_at=allowed_at)
+    return TreatmentBlock(
+        treatment=treatment, allowed_at=allowed_at, jar_tests=jar_tests,
+        jar_spot=entry.at("jar_tests"),
+    )  # fmt: skip
 
 
 _PLAIN: Mapping[str, Range] = {
