@@ -25,6 +25,7 @@ from optimiser.plan_purchases import deal_of_point, exact_costs, purchase_rows
 from optimiser.points import END_TEXT
 from optimiser.quality import LOAD
 from optimiser.quality_slopes import RULE
+from optimiser.site_jar import jar_cautions
 from optimiser.site_salt import MODEL_TEXT
 from optimiser.sludge_figures import sludge_data
 
@@ -304,8 +305,6 @@ class Describer:
             }  # fmt: skip
         return found
 
-    # -- sludge ------------------------------------------------------------------------------------
-
     # -- words -------------------------------------------------------------------------------------
 
     def cautions(self) -> list[str]:
@@ -324,6 +323,7 @@ class Describer:
                 f"about {model.trusted_to_mol_per_l:g}, so residuals are less certain here"
             )
         texts += self._complexed()
+        texts += jar_cautions(self.site.jar, self.dose_map(), self.seen.points, self.point)
         return [*dict.fromkeys(texts), CAUTIONS_DEFER_TO] if texts else []
 
     def certificate(self) -> Data:

@@ -38,6 +38,8 @@ FloatArray = NDArray[np.float64]
 
 SMALLEST_MG_PER_L = 1e-9
 """Theory below this promises nothing that a laboratory could compare."""
+UNTOUCHED_SHARE = 0.98
+"""Where theory leaves this much of a metal in solution, no solid says what its residual is."""
 JARS_FOR_A_FLOOR = 3
 
 
@@ -130,8 +132,8 @@ def compare_jars(site: Site, sheet: BenchSheet, *, confidence: float = CONFIDENC
     -----
     Jars without a dose are the raw water: their metals and pH stand in for the site's. Reacting
     doses follow from the fitted dose factors (`chemistry.calibration`), the catalog's where none
-    could be fitted. Results below a reporting limit take no part in a fit. A floor comes from the
-    third lowest unfiltered result.
+    could be fitted. Results below a reporting limit take no part in a fit, nor do jars in which
+    theory precipitates nothing of the metal. A floor comes from the third lowest unfiltered result.
     """
     raw = tuple(jar for jar in sheet.jars if jar.is_raw)
     jars = tuple(jar for jar in sheet.jars if not jar.is_raw)
@@ -145,7 +147,7 @@ def compare_jars(site: Site, sheet: BenchSheet, *, confidence: float = CONFIDENC
     predicted = {metal: _dissolved(state, site.system, metal) for metal in metals}
     residual = {}
     for metal in metals:
-        ratios = _ln_ratios(jars, metal, predicted[metal])
+        ratios = _ln_ratios(jars, metal, predicted[metal], _in_feed(analysis, metal))
         if ratios:
             residual[metal] = fit_factor(ratios, confidence=confidence)
     sludge = _sludge(site, state, analysis, jars, names, doses)
@@ -171,8 +173,16 @@ def compare_jars(site: Site, sheet: BenchSheet, *, confidence: float = CONFIDENC
         calibration=calibration,
         warnings=tuple(
             jar_warnings(
-                site, sheet, calibration, predicted,
+                site, sheet, calibration,
                 {metal: _in_feed(site.analysis, metal) for metal in metals},
+                {
+                    metal: [
+                        jar.name
+                        for jar, amount in zip(jars, predicted[metal], strict=True)
+                        if amount >= UNTOUCHED_SHARE * _in_feed(analysis, metal)
+                    ]
+                    for metal in metals
+                },
             )
         ),
     )  # fmt: skip
@@ -243,13 +253,17 @@ def _dissolved(state: EquilibriumState, system: System, metal: str) -> FloatArra
     return np.asarray(found)
 
 
-def _ln_ratios(jars: Sequence[JarTest], metal: str, predicted: FloatArray) -> list[float]:
+def _ln_ratios(
+    jars: Sequence[JarTest], metal: str, predicted: FloatArray, feed_mg_per_l: float
+) -> list[float]:
+    """Logarithms of measured over theory, of jars in which theory precipitates the metal."""
     return [
         math.log(jar.filtered[metal].value / max(float(theory), SMALLEST_MG_PER_L))
         for jar, theory in zip(jars, predicted, strict=True)
         if metal in jar.filtered
         and not jar.filtered[metal].is_below
         and jar.filtered[metal].value > 0.0
+        and theory < UNTOUCHED_SHARE * feed_mg_per_l
     ]
 
 

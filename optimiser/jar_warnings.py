@@ -4,15 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 
-import numpy as np
-from numpy.typing import NDArray
-
 from chemistry.calibration import FEW_JARS, FactorFit
 from optimiser.bench_sheet import BenchSheet, JarTest
 from optimiser.jar_file import JarCalibration
 from optimiser.site import Site
-
-FloatArray = NDArray[np.float64]
 
 FAR_OFF = 30.0
 """Residual factors beyond this, either way, are called a failure of the theory (own choice)."""
@@ -20,8 +15,8 @@ _TEMPERATURE_CHANGE_DEGC = 5.0
 
 
 def jar_warnings(
-    site: Site, sheet: BenchSheet, made: JarCalibration, predicted: Mapping[str, FloatArray],
-    feed_mg_per_l: Mapping[str, float],
+    site: Site, sheet: BenchSheet, made: JarCalibration, feed_mg_per_l: Mapping[str, float],
+    untouched: Mapping[str, Sequence[str]],
 ) -> list[str]:  # fmt: skip
     """Sentences on what the factors rest on.
 
@@ -29,10 +24,10 @@ def jar_warnings(
     ----------
     site, sheet, made
         The site, its bench sheet and what was fitted.
-    predicted
-        Metal to its dissolved amount by theory in every jar with a dose. [mg/L]
     feed_mg_per_l
         Dissolved metals of the site's feed, whatever was tested.
+    untouched
+        Metal to the jars in which theory precipitates nothing of it.
     """
     jars = [jar for jar in sheet.jars if not jar.is_raw]
     said = _about_water(sheet, made, feed_mg_per_l, site.system.temperature_degc)
@@ -44,7 +39,12 @@ def jar_warnings(
         for name, fit in made.dose_factors.items()
         if fit.factor < 1.0
     ]
-    for metal in predicted:
+    for metal, names in untouched.items():
+        if names:
+            said.append(
+                f"{metal}: theory precipitates none of it in test {', '.join(names)}, which is left"
+                " out of its fit"
+            )
         said += _about_metal(metal, jars, made.residual_factors.get(metal))
     return said
 

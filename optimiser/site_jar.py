@@ -12,6 +12,7 @@ from pathlib import Path
 from catalogs.problems import Spot, echo
 from chemistry.feed import METALS
 from optimiser.jar_file import JarCalibration, read_calibration
+from optimiser.points import Points
 from optimiser.site import Treatment
 from optimiser.site_feed import STATES_OF_ELEMENT
 
@@ -91,6 +92,28 @@ def with_jar(
         treatment=replace(treatment, dose_factors={**factors, **own}),
         floors_mg_per_l=floors, notes=tuple(notes),
     )  # fmt: skip
+
+
+def jar_cautions(
+    jar: JarCalibration | None, doses_mg_per_l: Mapping[str, float], points: Points, point: int
+) -> list[str]:
+    """Say what of a point lies outside the range that its jar tests covered.
+
+    Parameters
+    ----------
+    jar
+        The calibration, or None where the site has none.
+    doses_mg_per_l
+        Doses of the point by key; those of the trim are not part of a jar test.
+    points, point
+        Where the set point is looked up; without a controller the pH is free.
+    """
+    if jar is None:
+        return []
+    held = points.controller[point] >= 0
+    ph = round(float(points.ph[point]), 2) if held else None
+    in_tank = {key: dose for key, dose in doses_mg_per_l.items() if "@" not in key}
+    return [f"outside the jar tests: {text}" for text in jar.outside(ph=ph, doses_mg_per_l=in_tank)]
 
 
 def _first_note(jar: JarCalibration) -> str:
