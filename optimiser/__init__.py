@@ -19,6 +19,7 @@ if TYPE_CHECKING:
     from optimiser.planning import plan as plan
     from optimiser.purchasing import purchase as purchase
     from optimiser.site_reader import load_site as load_site
+    from optimiser.trade_curve import trade_off as trade_off
 
 _HOMES = {
     "NoPlan": "optimiser.errors",
@@ -30,6 +31,7 @@ _HOMES = {
     "plan": "optimiser.planning",
     "plan_with_confidence": "optimiser.confidence",
     "purchase": "optimiser.purchasing",
+    "trade_off": "optimiser.trade_curve",
 }
 
 __all__ = [
@@ -42,6 +44,7 @@ __all__ = [
     "plan",
     "plan_with_confidence",
     "purchase",
+    "trade_off",
 ]
 
 

@@ -234,11 +234,51 @@ def _unknown_reagent(reagent: str, site: Site) -> str:
     return f"unknown reagent; {hint}This site lists {', '.join(site.reagents)}"
 
 
+def _trade_off(options: argparse.Namespace) -> int:
+    import optimiser
+    from optimiser.errors import refuse_existing_chart
+    from optimiser.render_no_plan import no_plan_data, no_plan_text
+    from optimiser.render_trade_off import trade_off_text
+
+    refuse_existing_chart(options.chart, force=options.force)
+    site = _load(options)
+    try:
+        found = optimiser.trade_off(
+            site, options.against, options.points, caps=options.at, progress=_progress()
+        )
+    except optimiser.NoPlan as none:
+        _clear_progress()
+        _print(no_plan_data(site.name, none, site.currency), options.json, no_plan_text)
+        return NO_PLAN
+    _clear_progress()
+    if options.csv is not None:
+        found.frame().to_csv(options.csv, index=False, lineterminator="\n")
+    if options.chart is not None:
+        from optimiser.chart_trade_off import draw_trade_off
+
+        draw_trade_off(found.to_dict(), options.chart)
+    _print(found.to_dict(), options.json, trade_off_text)
+    return DONE if found.points else NO_PLAN
+
+
 def _curves(options: argparse.Namespace) -> int:
     from optimiser.curves import build_curves
+    from optimiser.errors import refuse_existing_chart
     from optimiser.render_curves import curves_text
 
-    curves = build_curves(_load(options), options.ph)
+    refuse_existing_chart(options.chart, force=options.force)
+    site = _load(options)
+    doses = _given_doses(options.dose)
+    asked = dict.fromkeys([*options.reagent, *doses])
+    unknown = next((name for name in asked if name not in site.reagents), None)
+    if unknown is not None:
+        say(_unknown_reagent(unknown, site))
+        return BAD_INPUT
+    curves = build_curves(site, options.ph)
+    if options.chart is not None:
+        from optimiser.chart_curves import chart_curves
+
+        chart_curves(site, curves, options.chart, options.reagent, doses)
     if options.csv is not None:
         write_csv(curves.to_frame(), options.csv)
     _print(curves.to_dict(), options.json, curves_text)
@@ -366,6 +406,7 @@ _COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
     "plan": _plan,
     "assess": _assess,
     "explain": _explain,
+    "tradeoff": _trade_off,
     "curves": _curves,
     "floors": _floors,
     "offers": _offers,

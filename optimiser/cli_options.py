@@ -12,6 +12,8 @@ from typing import Any, NoReturn
 BAD_USAGE = 2
 PROGRAM = "dosewright"
 DEFAULT_PROVE_S = 60.0
+CHART_FORMATS = (".svg", ".png")
+MOST_POINTS = 60
 
 _DESCRIPTION = """\
 Pick precipitation reagents, doses and supplier offers that bring the dissolved metals
@@ -65,6 +67,21 @@ def _whole(text: str) -> int:
     return int(text)
 
 
+def _curve_points(text: str) -> int:
+    if not text.isdecimal() or not 2 <= int(text) <= MOST_POINTS:
+        raise argparse.ArgumentTypeError(
+            f"expected a whole number from 2 to {MOST_POINTS}, found {text!r}"
+        )
+    return int(text)
+
+
+def _chart_file(text: str) -> Path:
+    path = Path(text)
+    if path.suffix.lower() not in CHART_FORMATS:
+        raise argparse.ArgumentTypeError(f"a chart ends in .svg or .png, found {text!r}")
+    return path
+
+
 def _ph(text: str) -> float:
     value = _finite(text)
     if not 0.0 <= value <= 14.0:
@@ -116,6 +133,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_plan(commands)
     _add_assess(commands)
     _add_explain(commands)
+    _add_trade_off(commands)
     _add_curves(commands)
     _add_floors(commands)
     _add_offers(commands)
@@ -213,6 +231,37 @@ def _add_explain(commands: _Commands) -> None:
     _add_json(parser)
 
 
+def _add_trade_off(commands: _Commands) -> None:
+    parser = _add_command(
+        commands, "tradeoff", "trade the cost against TDS, sludge, design margin or pH set point",
+        "tradeoff site.yaml --against TDS --points 7 --chart tds.svg",
+    )  # fmt: skip
+    parser.add_argument(
+        "--against", choices=("TDS", "sludge", "margin", "ph"), required=True,
+        help="TDS of the mean discharge (mg/L), wet sludge (t a year), design margin (share of "
+        "every limit), or pH set point of the tank",
+    )  # fmt: skip
+    parser.add_argument(
+        "--points", metavar="N", type=_curve_points, default=7,
+        help="how many points between the ends (default: 7)",
+    )  # fmt: skip
+    parser.add_argument(
+        "--at", metavar="VALUE", type=_positive, action="extend", nargs="+", default=[],
+        help="look at these values instead; repeat it for more",
+    )  # fmt: skip
+    parser.add_argument("--csv", metavar="FILE", type=Path, help="write the points to FILE as well")
+    _add_chart(parser)
+    _add_json(parser)
+
+
+def _add_chart(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument(
+        "--chart", metavar="FILE", type=_chart_file,
+        help="draw a chart into FILE as well, .svg or .png",
+    )  # fmt: skip
+    parser.add_argument("--force", action="store_true", help="write over a chart that is there")
+
+
 def _add_curves(commands: _Commands) -> None:
     parser = _add_command(
         commands, "curves",
@@ -226,6 +275,15 @@ def _add_curves(commands: _Commands) -> None:
     parser.add_argument(
         "--csv", metavar="FILE", type=Path, help="write every state to FILE as well"
     )
+    _add_chart(parser)
+    parser.add_argument(
+        "--reagent", metavar="NAME", action="extend", nargs="+", default=[],
+        help="draw these reagents alone, with envelopes around their residuals",
+    )  # fmt: skip
+    parser.add_argument(
+        "--dose", metavar="REAGENT=MG_PER_L", type=_dose, action="extend", nargs="+", default=[],
+        help="mark a dose in the chart, such as a plan's",
+    )  # fmt: skip
     _add_json(parser)
 
 

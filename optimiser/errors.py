@@ -3,6 +3,8 @@
 OptimiserError
 ├── NoPlan              no doses meet every limit with what the site allows      (exit code 3)
 ├── NoPurchase          the offers cannot cover the demand                       (exit code 3)
+├── TradeOffError       a trade-off that was asked for wrongly                   (exit code 2)
+├── ChartError          a chart that cannot be drawn as it was asked for         (exit code 2)
 ├── FeedRefused         a feed that must not be planned on as it stands          (exit code 2)
 ├── Interrupted         stopped by the user or a time limit before a result      (exit code 4)
 ├── VerificationFault   no plan found holds when it is verified afresh            (exit code 1)
@@ -18,6 +20,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from functools import cached_property
+from pathlib import Path
 from typing import Any, ClassVar
 
 _MOST_SHOWN = 5
@@ -73,6 +76,36 @@ class NoPurchase(OptimiserError):  # noqa: N818 - a public name that says what h
     def __init__(self, reasons: Iterable[str]) -> None:
         self.reasons: tuple[str, ...] = tuple(reasons)
         super().__init__(_with_reasons("no purchase covers this demand:", self.reasons))
+
+
+class TradeOffError(OptimiserError):
+    """A trade-off that was asked for wrongly."""
+
+    exit_code: ClassVar[int] = 2
+
+
+class ChartError(OptimiserError):
+    """A chart that cannot be drawn as asked: over a file that is there, or of no states."""
+
+    exit_code: ClassVar[int] = 2
+
+
+def refuse_existing_chart(path: Path | None, *, force: bool) -> None:
+    """Refuse a chart that would write over a file, or that has no folder, unless told to.
+
+    Raises
+    ------
+    ChartError
+        The file is there and ``force`` is not given.
+    FileNotFoundError
+        There is no such folder.
+    """
+    if path is None:
+        return
+    if not path.parent.is_dir():
+        raise FileNotFoundError(2, "there is no such folder for a chart", str(path.parent))
+    if path.exists() and not force:
+        raise ChartError(f"{path} exists: give --force to write over it, or another name")
 
 
 class FeedRefused(OptimiserError):  # noqa: N818 - named after what happened, like its siblings

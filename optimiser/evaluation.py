@@ -19,6 +19,7 @@ from optimiser.plant import Plant
 from optimiser.points import Block, Points, Rows
 from optimiser.quality import LN10, Judge, Judged
 from optimiser.site import Site
+from optimiser.yearly_caps import cap_rules
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -214,6 +215,7 @@ class Evaluator:
         feed = _Before(self.plant, seen, near, self._dose_slope(seen) if slopes else None)
         seen.rules.extend(self._sulfide_rules(seen, feed))
         seen.rules.extend(self._ceiling_rules(seen, feed))
+        seen.rules.extend(Rule(*one) for one in cap_rules(self, seen))
 
     def _dose_slope(self, seen: Evaluation) -> FloatArray:
         """Change of the controller's nominal dose with set point and paced doses, (points, k)."""

@@ -64,7 +64,7 @@ def stand(evaluator: Evaluator, solver: SolverPort, track: Track) -> Standing:
 
 
 def changed(evaluator: Evaluator, site: Site) -> Evaluator:
-    """Evaluator of a site that differs in limits, margin, separator, disposal or offers alone.
+    """Evaluator of a site that differs in limits, caps, set points, separator, disposal or offers.
 
     Feed, species and reagents stay, so that states of one may start those of the other.
     """

@@ -167,13 +167,19 @@ def refuse_salty(site: Site, ionic_strength: float, what: str) -> None:
     """
     model = site.system.activity_model
     largest = LARGEST_IONIC_STRENGTH[model.name]
-    if ionic_strength > largest and not site.treatment.salty_water_allowed:
+    if too_salty(site, ionic_strength):
         raise FeedRefused(
             f"{site.path}: {what} has an ionic strength of {ionic_strength:.2f} mol/L; the "
             f"activity model, {MODEL_TEXT[model.name]}, is trusted to about "
             f"{model.trusted_to_mol_per_l:g} and refused above {largest:g}.\n    Set treatment."
             "salty_water_allowed: true to plan all the same, and confirm by bench tests."
         )
+
+
+def too_salty(site: Site, ionic_strength: float) -> bool:
+    """Whether a water is above the activity model's range and the site does not say to go on."""
+    largest = LARGEST_IONIC_STRENGTH[site.system.activity_model.name]
+    return ionic_strength > largest and not site.treatment.salty_water_allowed
 
 
 def _proof(evaluator: Evaluator, findings: Findings) -> dict[str, Any]:

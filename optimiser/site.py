@@ -149,11 +149,12 @@ class DisposalRule:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Disposal:
-    """Cake and tariff."""
+    """Cake and tariff; ``most_wet_t_per_year`` caps the wet sludge of a year, None: no cap."""
 
     rules: tuple[DisposalRule, ...]
     cake_solids_fraction: float = 0.30
     bound_water_factor: float = 1.2
+    most_wet_t_per_year: float | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -245,6 +246,8 @@ class Site:
     """The samples' closed waters in ``system``, in the order of ``samples``."""
     jar: JarCalibration | None = None
     """Jar tests that the site names; ``treatment`` and ``floors_mg_per_l`` hold their factors."""
+    mean_caps_mg_per_l: Mapping[str, float] = field(default_factory=dict)
+    """Caps on burdens of the mean discharge, which trade-offs set; a permit's are limits."""
 
     @property
     def flow_m3_per_year(self) -> float:

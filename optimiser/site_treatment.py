@@ -222,6 +222,7 @@ def read_disposal(entry: Entry) -> Disposal:
         bound_water_factor=entry.number_or(
             "bound_water_factor", usual.bound_water_factor, _BOUND_WATER
         ),
+        most_wet_t_per_year=entry.number_or("most_wet_t_per_year", None, POSITIVE),
     )
     entry.finish()
     return disposal

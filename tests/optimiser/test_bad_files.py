@@ -318,6 +318,8 @@ def test_an_analysis_that_cannot_be_electroneutral_is_refused_at_its_line() -> N
          "24: disposal.rules",
          "found only rules with a condition, expected a last rule without `metals` for every other"
          " sludge\n    Add the tariff of ordinary sludge as last rule."),
+        ("disposal:", "disposal:\n  most_wet_t_per_year: 0", "24: disposal.most_wet_t_per_year",
+         f"found 0, expected a number above 0\n{RANGE}"),
         ("offers: offers.csv", "offers: offers.csv\ntoday: {soda_ash: 5}", "27: today.soda_ash",
          "found 'soda_ash', expected one of the reagents allowed in treatment\n    The reagents"
          " allowed in treatment known here: caustic_soda, hydrated_lime, sulfuric_acid."),
