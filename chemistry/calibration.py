@@ -34,6 +34,8 @@ ASSUMED_SCATTER_LN = 0.5
 """Scatter of one jar's ratio where a single jar shows none (common practice, no source). [ln]"""
 FEW_JARS = 4
 """Below this number of jars a factor is called uncertain (common practice, no source)."""
+WIDEST_LN = 50.0
+"""Ends of intervals stay within this of a factor of 1: beyond it they say nothing. [ln]"""
 _WORST_CONDITION = 1e6  # of the fit: beyond it doses moved together and share one factor
 
 
@@ -155,8 +157,9 @@ def _fit(
 
     reach = float(t.ppf(0.5 + confidence / 2.0, degrees)) * error
     return FactorFit(
-        factor=math.exp(ln_factor), low=math.exp(ln_factor - reach),
-        high=math.exp(ln_factor + reach), scatter_ln=scatter, jars=jars, scatter_assumed=jars == 1,
+        factor=math.exp(ln_factor), low=math.exp(max(ln_factor - reach, -WIDEST_LN)),
+        high=math.exp(min(ln_factor + reach, WIDEST_LN)), scatter_ln=scatter, jars=jars,
+        scatter_assumed=jars == 1,
     )  # fmt: skip
 
 

@@ -42,6 +42,7 @@ DOSE, SLUDGE, SLUDGE_VOLUME, SETTLING = "dose", "sludge", "sludge volume", "sett
 TEST = "test"
 _READ = (DOSE, SLUDGE, SLUDGE_VOLUME, SETTLING, ANALYTE, *MEASURED_ROLES)
 _DOSE_UNITS = {"mg/L": 1.0, "g/L": 1000.0, "g/m3": 1.0, "kg/m3": 1000.0}
+MOST_DOSED_MG_PER_L = 1e5
 _TEST_WORDS = ("test", "jar", "beaker", "no", "test no", "jar no")
 EXAMPLE_HEADER = "date,test,hydrated_lime mg/L,pH,Cu filtered mg/L,Cu unfiltered mg/L,sludge mg/L"
 
@@ -233,7 +234,13 @@ class _BenchReader:
             if value is None:
                 continue
             if column.reagent:
-                doses[column.reagent] = value.number * _DOSE_UNITS.get(column.heading.unit, 1.0)
+                dose = value.number * _DOSE_UNITS.get(column.heading.unit, 1.0)
+                doses[column.reagent] = dose
+                if dose > MOST_DOSED_MG_PER_L:
+                    self.findings.add(
+                        cell, column.heading.text, f"{dose:g} mg/L",
+                        f"at most {MOST_DOSED_MG_PER_L:g} mg/L", "Check the unit of the dose.",
+                    )  # fmt: skip
             elif column.heading.role in (SLUDGE, SLUDGE_VOLUME, SETTLING):
                 plain[column.heading.role] = value.number
             else:

@@ -23,6 +23,7 @@ from chemistry.calibration import (
     fit_dose_factors,
     fit_factor,
 )
+from chemistry.errors import EquilibriumError, WaterError
 from chemistry.feed import ALKALINITY_LEAST_PH, feed_water
 from chemistry.samples import Reported
 from chemistry.sludge import dry_masses_mg_per_l
@@ -128,6 +129,11 @@ def compare_jars(site: Site, sheet: BenchSheet, *, confidence: float = CONFIDENC
     confidence
         Of the intervals.
 
+    Raises
+    ------
+    WaterError
+        The raw water cannot be closed, or no water has the doses and the pH of a jar.
+
     Notes
     -----
     Jars without a dose are the raw water: their metals and pH stand in for the site's. Reacting
@@ -141,8 +147,7 @@ def compare_jars(site: Site, sheet: BenchSheet, *, confidence: float = CONFIDENC
     feed = feed_water(analysis, site.system)
     names = tuple(dict.fromkeys(n for jar in jars for n in jar.doses_mg_per_l))
     bench, given = _bench(site, feed.totals_mol_per_l, jars, names)
-    doses = fit_dose_factors(bench, given, confidence=confidence)
-    state = bench.settled(doses.factors)
+    doses, state = _theory(bench, given, confidence)
     metals = tuple(dict.fromkeys(m for jar in jars for m in jar.filtered))
     predicted = {metal: _dissolved(state, site.system, metal) for metal in metals}
     residual = {}
@@ -237,6 +242,17 @@ def _bench(
         ph=np.array([jar.ph for jar in jars]),
     )  # fmt: skip
     return bench, np.array([site.reagents[n].dose_factor for n in names])
+
+
+def _theory(bench: Bench, given: FloatArray, confidence: float) -> tuple[DoseFit, EquilibriumState]:
+    try:
+        doses = fit_dose_factors(bench, given, confidence=confidence)
+        return doses, bench.settled(doses.factors)
+    except EquilibriumError as error:
+        raise WaterError(
+            "theory finds no water with the doses and the pH of every jar; look for a wrong unit or"
+            f" pH in the bench sheet ({error})"
+        ) from error
 
 
 # -- theory --------------------------------------------------------------------------------------

@@ -183,6 +183,11 @@ def test_fewer_jars_make_wider_intervals() -> None:
     assert not fit_factor([0.3, 0.7]).scatter_assumed
 
 
+def test_an_interval_that_says_nothing_stays_a_number() -> None:
+    found = fit_factor([-200.0 / 7, 200.0 / 7])
+    assert (found.low, found.high) == (math.exp(-50.0), math.exp(50.0))
+
+
 def test_no_ratio_gives_no_factor() -> None:
     with pytest.raises(WaterError, match="at least one ratio"):
         fit_factor([])

@@ -366,6 +366,7 @@ def test_every_problem_of_a_sheet_is_told_at_once() -> None:
         ("date,caustic_soda mg/L,pH\n2025-05-05,20,8\n", "no column with a metal"),
         ("date,caustic_soda mg/L,pH,Cu filtered mg/L\n2025-05-05,0,8,1\n", "no jar with a dose"),
         ("date,caustic_soda mg/L,pH,Cu filtered mg/L\n", "no jars"),
+        ("date,caustic_soda g/L,pH,Cu filtered mg/L\n2025-05-05,300,8,1\n", "300000 mg/L"),
         (
             "date,caustic_soda mg/L,caustic soda mg/L,pH,Cu filtered mg/L\n2025-05-05,2,2,8,1\n",
             "a second column like 'caustic_soda mg/L'",
