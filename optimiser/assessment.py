@@ -15,6 +15,7 @@ from optimiser.outcome import Assessment
 from optimiser.planning import refuse_salty
 from optimiser.points import Points
 from optimiser.recipes import make_recipe, trim_for
+from optimiser.separators import separator_sites
 from optimiser.site import Offer, Site
 
 if TYPE_CHECKING:
@@ -55,7 +56,8 @@ def assess(
     -----
     Of the reagents that can control a pH the one of best rank is taken to do so. Its dose brings
     the water at the dearest end (gypsum and calcite formed or not, CO2 kept or vented) to a pH:
-    that is the set point, around which every corner is checked.
+    that is the set point, around which every corner is checked. Where the site may choose its
+    separator, the doses are assessed with the cheapest one that complies.
     """
     if trim not in TRIMS:
         raise ValueError(f"trim is {trim!r}: use 'auto' or 'none'")
@@ -64,6 +66,14 @@ def assess(
 
         site = replace(site, offers=read_offers(offers))
     site = _with_reagents(site, doses)
+    if site.treatment.separator_options:
+        found = [_assess(option, doses, trim) for option in separator_sites(site)]
+        return min(found, key=lambda one: (not one.compliant, one.cost["total"]))
+    return _assess(site, doses, trim)
+
+
+def _assess(site: Site, doses: Mapping[str, float], trim: str) -> Assessment:
+    """Verify and cost doses with the separator that the site names."""
     evaluator = Evaluator(site)
     tank, trimmed = _read_doses(evaluator, doses)
     refuse_salty(site, evaluator.plant.feed.ionic_strength, "the feed")

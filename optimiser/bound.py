@@ -59,7 +59,7 @@ solver's: rows are loosened by ten times its tolerance and bounds lowered by `bo
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -113,3 +113,26 @@ class Bound:
                 "statement": "no plan that the site allows costs less than the lower bound",
             }
         return found
+
+
+def joined(bounds: Sequence[Bound]) -> Bound:
+    """One bound for sites that between them allow every plan: the least of their bounds.
+
+    A site that could not be bounded leaves nothing proven.
+    """
+    unbounded = next((bound for bound in bounds if bound.reason), None)
+    if unbounded is not None:
+        return unbounded
+    closed: dict[str, int] = {}
+    for bound in bounds:
+        for reason, count in bound.closed.items():
+            closed[reason] = closed.get(reason, 0) + count
+    return Bound(
+        lower_per_year=min(bound.lower_per_year for bound in bounds),
+        plan_per_year=bounds[0].plan_per_year,
+        recipes=sum(bound.recipes for bound in bounds),
+        cells=sum(bound.cells for bound in bounds),
+        closed=closed,
+        open_cells=sum(bound.open_cells for bound in bounds),
+        seconds=sum(bound.seconds for bound in bounds),
+    )

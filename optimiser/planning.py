@@ -6,7 +6,7 @@ import time
 from collections.abc import Callable, Sequence
 from typing import Any
 
-from optimiser.bound import Bound
+from optimiser.bound import Bound, joined
 from optimiser.bound_tree import prove
 from optimiser.describe import describe
 from optimiser.diagnosis import explain_no_plan
@@ -17,6 +17,7 @@ from optimiser.plan_purchases import price_exactly
 from optimiser.runners_up import finish
 from optimiser.runners_up import runners_up as others_of
 from optimiser.search import SETTLE_STEP, Findings, Search
+from optimiser.separators import choose_separator, separator_sites
 from optimiser.site import Site
 from optimiser.site_salt import MODEL_TEXT
 from optimiser.solver import solver_from
@@ -67,9 +68,22 @@ def plan(
     refuted: list[str] = []
     if prove_s is not None:
         _, refuted = _verified(evaluator, findings)
-        least = findings.feasible[0][1].total
-        bound = prove(evaluator, least, seconds=prove_s, progress=progress)
+        bound = _proven(site, evaluator, findings, prove_s, progress)
     return plan_of(evaluator, findings, begun, bound, runners_up=runners_up, refuted=refuted)
+
+
+def _proven(
+    site: Site, evaluator: Evaluator, findings: Findings, seconds: float,
+    progress: Callable[[str], None] | None,
+) -> Bound:  # fmt: skip
+    """Bound every plan of a site, whatever separator it chooses: the least bound counts."""
+    least = findings.feasible[0][1].total
+    options = separator_sites(site)
+    if len(options) == 1:
+        return prove(evaluator, least, seconds=seconds, progress=progress)
+    share = seconds / len(options)
+    bounds = [prove(Evaluator(o), least, seconds=share, progress=progress) for o in options]
+    return joined(bounds)
 
 
 def plan_of(
@@ -104,6 +118,7 @@ def plan_of(
     data["runners_up"], data["runners_up_left_out"] = others_of(
         evaluator, findings, solver_from(evaluator.site.solver), runners_up
     )
+    data["separators"] = [dict(row) for row in findings.separators]
     data["proof"]["seconds"] = {
         **findings.seconds, "total": time.perf_counter() - begun,
     }  # fmt: skip
@@ -134,11 +149,21 @@ def _verified(evaluator: Evaluator, findings: Findings) -> tuple[Evaluation, lis
 def find(site: Site, progress: Callable[[str], None] | None = None) -> tuple[Evaluator, Findings]:
     """Search a site; the first of ``findings.feasible`` is the plan.
 
+    Where the site may choose its separator, the evaluator is that of the best one.
+
     Raises
     ------
     NoPlan, FeedRefused, Interrupted
         As `plan` does.
     """
+    if site.treatment.separator_options:
+        chosen = choose_separator(site, lambda option: _search(option, progress))
+        chosen.findings.separators = chosen.rows
+        return chosen.evaluator, chosen.findings
+    return _search(site, progress)
+
+
+def _search(site: Site, progress: Callable[[str], None] | None) -> tuple[Evaluator, Findings]:
     evaluator = Evaluator(site)
     refuse_salty(site, evaluator.plant.feed.ionic_strength, "the feed")
     solver = solver_from(site.solver)

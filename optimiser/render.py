@@ -12,6 +12,7 @@ from optimiser.render_capacities import capacity_lines
 from optimiser.render_gas import gas_lines
 from optimiser.render_proof import proof_lines
 from optimiser.render_runners_up import runners_up_lines
+from optimiser.render_separators import separator_lines
 from optimiser.tables import INDENT, PLAIN, Ink, bullets, given, money, number, paragraph, table
 
 Data = Mapping[str, Any]
@@ -61,6 +62,7 @@ def _document(title: str, data: Data, ink: Ink) -> str:
         ("Gas over the water", gas_lines(data)),
         ("Burden: what the doses add to the water, mg/L", _burden(data)),
         ("Sludge", _sludge(data)),
+        ("Separators to choose from", separator_lines(data)),
         ("Cautions", bullets(data["cautions"])),
         ("Assumptions", bullets(data["assumptions"])),
         ("Proof", proof_lines(data)),

@@ -10,6 +10,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -54,6 +55,8 @@ class Findings:
     lowest_point: list[Points | None] = field(default_factory=list)
     seconds: dict[str, float] = field(default_factory=dict)
     stopped_early: bool = False
+    separators: tuple[dict[str, Any], ...] = ()
+    """What became of each separator that the site may choose; empty where there is one."""
 
     def keep(self, recipe: tuple[str, ...], track: Track) -> None:
         """Remember a track if it is the recipe's best."""

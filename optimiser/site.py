@@ -67,12 +67,16 @@ class PhWindow:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Separator:
-    """What takes the solids out after the reaction, and what slips past it."""
+    """What takes the solids out after the reaction, and what slips past it.
+
+    ``polymer_g_per_kg_solids`` replaces the treatment's for this separator.
+    """
 
     name: str = "clarifier"
     tss_mg_per_l: float = 20.0
     capture_fraction: float = 0.98
     cost_per_year: float = 0.0
+    polymer_g_per_kg_solids: float | None = None
     source: str = ""
 
 
@@ -92,6 +96,8 @@ class Treatment:
     ph_tolerance: float = 0.25
     dose_tolerance_fraction: float = 0.05
     separator: Separator = Separator()
+    separator_options: tuple[Separator, ...] = ()
+    """Separators to choose from; empty where there is only `separator`."""
     polymer_g_per_kg_solids: float = 0.0
     polymer_price_per_kg: float = 0.0
     scale_supersaturation_si: float = 0.3

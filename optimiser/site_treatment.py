@@ -72,6 +72,7 @@ def read_treatment(entry: Entry, reagents: Mapping[str, Reagent]) -> TreatmentBl
     ceilings = entry.numbers("dose_ceilings_mg_per_l", known, "allowed reagents", POSITIVE)
     least = entry.numbers("least_doses_mg_per_l", known, "allowed reagents", NON_NEGATIVE)
     _check_dose_ends(entry, ceilings, least)
+    options = _read_separator_options(entry)
     treatment = Treatment(
         reagents=main, required=required, trim_reagents=trim, dose_ceilings_mg_per_l=ceilings,
         least_doses_mg_per_l=least,
@@ -81,7 +82,8 @@ def read_treatment(entry: Entry, reagents: Mapping[str, Reagent]) -> TreatmentBl
             "equipment_cost_per_year", known, "allowed reagents", NON_NEGATIVE
         ),
         ph_set_point=read_ph_window(entry, "ph_set_point") or _DEFAULTS.ph_set_point,
-        separator=_read_separator(entry),
+        separator=options[0] if options else _read_separator(entry),
+        separator_options=options,
         scrubber=entry.text_or("scrubber"),
         inert_solids_dilute=entry.flag_or("inert_solids_dilute", default=False),
         salty_water_allowed=entry.flag_or("salty_water_allowed", default=False),
@@ -187,16 +189,35 @@ def read_ph_window(entry: Entry, key: str, *, required: bool = False) -> PhWindo
     return PhWindow(low=low, high=high, source=source)
 
 
+def _read_separator_options(entry: Entry) -> tuple[Separator, ...]:
+    """Separators to choose from; refused beside a single `separator`."""
+    options = tuple(_separator(block) for block in entry.blocks("separators"))
+    if options and entry.has("separator"):
+        entry.at("separators").problem(
+            "`separators` beside `separator`", "one of the two",
+            "Write every separator that may be chosen under `separators`.",
+        )  # fmt: skip
+    names = [option.name for option in options]
+    if len(set(names)) < len(names):
+        entry.at("separators").problem(
+            f"the names {', '.join(names)}", "a name of its own for each", "Rename one of them."
+        )
+    return options
+
+
 def _read_separator(entry: Entry) -> Separator:
     block = entry.block_or_none("separator")
-    if block is None:
-        return _DEFAULTS.separator
+    return _DEFAULTS.separator if block is None else _separator(block)
+
+
+def _separator(block: Entry) -> Separator:
     usual = _DEFAULTS.separator
     separator = Separator(
         name=block.text_or("name", usual.name),
         tss_mg_per_l=block.number("tss_mg_per_l", NON_NEGATIVE),
         capture_fraction=block.number_or("capture_fraction", usual.capture_fraction, FRACTION),
         cost_per_year=block.number_or("cost_per_year", usual.cost_per_year, NON_NEGATIVE),
+        polymer_g_per_kg_solids=block.number_or("polymer_g_per_kg_solids", None, NON_NEGATIVE),
         source=block.text_or("source"),
     )
     block.finish()
