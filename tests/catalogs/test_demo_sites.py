@@ -22,7 +22,14 @@ FloatArray = NDArray[np.float64]
 
 HOME = Path(catalogs.__file__).parent / "sites"
 REFERENCE = Path(__file__).parent.parent / "reference"
-NAMES = ("plating_rinse", "silver_rinse", "barium_glaze", "lead_battery", "mercury_lab")
+NAMES = (
+    "plating_rinse",
+    "silver_rinse",
+    "barium_glaze",
+    "lead_battery",
+    "mercury_lab",
+    "filter_choice",
+)
 MONEY = ("price", "cost", "tariff", "disposal", "recycling", "saving")
 
 
@@ -210,6 +217,7 @@ BINDING = {
     "barium_glaze": (("sulfuric_acid", "hydrochloric_acid"), "SO4"),
     "lead_battery": (("caustic_soda", "quicklime", "soda_ash"), "SO4"),
     "mercury_lab": (("caustic_soda", "ferrous_sulfide"), "Zn"),
+    "filter_choice": (("caustic_soda",), "Ni"),
 }
 
 
