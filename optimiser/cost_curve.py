@@ -24,6 +24,9 @@ IntArray = NDArray[np.int64]
 _TIE = 1e-12
 """Costs that differ by less than this fraction are equal."""
 
+MOST_SPLIT = 40
+"""Splits between more offers of one reagent than this are left to a solver."""
+
 Amounts = tuple[tuple[int, float], ...]
 """Offers (positions in the curve's list) with the kg pure bought of each."""
 
@@ -86,11 +89,23 @@ class CostCurve:
         """Position of the piece that the first gram lies on."""
         return int(np.searchsorted(self.high_kg, 0.0, side="right"))
 
+    def _bends_down(self) -> NDArray[np.bool_]:
+        """Ends of pieces where the cost goes on without a jump at a lower slope."""
+        at = self.high_kg[:-1]
+        left = self.fixed[:-1] + self.slope[:-1] * at
+        right = self.fixed[1:] + self.slope[1:] * at
+        even = np.abs(right - left) <= _TIE * (np.abs(left) + 1.0)
+        return np.append(even & (self.slope[1:] <= self.slope[:-1]), False)
+
     def vertices(self, *, with_origin: bool) -> Iterable[tuple[float, float, float, Amounts]]:
-        """Finite ends: kg, cost, freight, amounts; with what the first gram costs if asked."""
+        """Finite ends: kg, cost, freight, amounts; with what the first gram costs if asked.
+
+        Ends where the slope falls without a jump are left out: a purchase that stands there
+        together with others costs no more after a move one way or the other.
+        """
         if with_origin and self.surplus_kg[0] == 0.0:
             yield 0.0, float(self.fixed[0]), float(self.freight_fixed[0]), self.ways[0].at(0.0)
-        for k in np.flatnonzero(np.isfinite(self.high_kg)):
+        for k in np.flatnonzero(np.isfinite(self.high_kg) & ~self._bends_down()):
             kg = float(self.high_kg[k])
             cost = float(self.fixed[k] + self.slope[k] * kg)
             freight = float(self.freight_fixed[k] + self.freight_slope[k] * kg)
@@ -260,6 +275,8 @@ def curve_of(offers: tuple[Offer, ...]) -> CostCurve | None:
         return None
     if all(_never_split(offer) for offer, _ in curves):
         return _least_of([curve for _, curve in curves])
+    if len(curves) > MOST_SPLIT:
+        return _lower_line(curves, [k for k, (_, curve) in enumerate(every) if curve is not None])
     signed = [curve for offer, curve in curves if offer.signed]
     both: CostCurve | None = None
     for curve in signed:
@@ -273,6 +290,31 @@ def curve_of(offers: tuple[Offer, ...]) -> CostCurve | None:
         both = _least_of([both, *_sums(both, curve, forced=bool(signed)), *alone])
     assert both is not None, "some offer has a curve"
     return replace(both, at_zero=at_zero)
+
+
+def is_exact(offers: Sequence[Offer]) -> bool:
+    """Whether the curve of these offers is the least cost and no lower value."""
+    some = [offer for offer in offers if pieces_of(offer)]
+    return len(some) <= MOST_SPLIT or all(_never_split(offer) for offer in some)
+
+
+def _lower_line(curves: Sequence[tuple[Offer, CostCurve]], positions: Sequence[int]) -> CostCurve:
+    """A lower value for very many offers: every kg at the least average cost of any offer."""
+    sunk = math.fsum(curve.fixed[0] for offer, curve in curves if offer.signed)
+    best, free, most = math.inf, 0, 0.0
+    for (offer, curve), position in zip(curves, positions, strict=True):
+        paid = float(curve.fixed[0]) if offer.signed else 0.0
+        slopes = [(cost - paid) / kg for kg, cost, *_ in curve.vertices(with_origin=False) if kg]
+        if math.isinf(curve.high_kg[-1]):
+            slopes.append(float(curve.slope[-1]))
+        most += float(curve.high_kg[-1])
+        if min(slopes) < best:
+            best, free = min(slopes), position
+    zero = np.zeros(1)
+    return CostCurve(
+        np.array([most]), np.array([sunk]), np.array([best]), zero, zero, zero,
+        (Way((), free),), at_zero=sunk,
+    )  # fmt: skip
 
 
 def _never_split(offer: Offer) -> bool:

@@ -15,7 +15,7 @@ from typing import SupportsFloat
 import numpy as np
 from numpy.typing import NDArray
 
-from optimiser.cost_curve import CostCurve, curve_of
+from optimiser.cost_curve import CostCurve, curve_of, is_exact
 from optimiser.deal import Buy, Deal, buys_of, deal_of
 from optimiser.errors import NoPurchase, bad_demand, beyond_offers, no_offer
 from optimiser.offer import Offer
@@ -46,8 +46,8 @@ class PriceBook:
     Notes
     -----
     Exact for every term of one offer and for splits between offers of one reagent. `inexact` names
-    the reagents with whole packs, bundles, frameworks or suppliers' shares: their values are lower
-    values.
+    the reagents with whole packs, bundles, frameworks, suppliers' shares or very many offers: their
+    values are lower values.
     """
 
     def __init__(self, offers: Iterable[Offer]) -> None:
@@ -58,7 +58,9 @@ class PriceBook:
         self._offers = {name: tuple(mine) for name, mine in by_reagent.items()}
         curves = {name: curve_of(mine) for name, mine in self._offers.items()}
         self._curves = {name: curve for name, curve in curves.items() if curve is not None}
-        self.inexact = frozenset(o.reagent for o in self.offers if _needs_a_solver(o))
+        tied = {o.reagent for o in self.offers if _needs_a_solver(o)}
+        many = {name for name, mine in self._offers.items() if not is_exact(mine)}
+        self.inexact = frozenset(tied | many)
 
     @property
     def reagents(self) -> tuple[str, ...]:
