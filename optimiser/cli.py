@@ -13,6 +13,7 @@ from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from optimiser.cli_doses import dose_problem, given_doses, unknown_reagent
 from optimiser.cli_options import PROGRAM, build_parser
 from optimiser.cli_process import (
     BAD_INPUT,
@@ -188,50 +189,17 @@ def _assess(options: argparse.Namespace) -> int:
     from optimiser.render import assessment_text
 
     site = _load(options)
-    doses = _given_doses(options.dose) or dict(site.today)
+    doses = given_doses(options.dose) or dict(site.today)
     if not doses:
         say("no doses: give --dose REAGENT=MG_PER_L, or write them under `today` in the site file")
         return BAD_INPUT
-    problem = _dose_problem(doses, site)
+    problem = dose_problem(doses, site)
     if problem:
         say(problem)
         return BAD_INPUT
     found = optimiser.assess(site, doses, trim=options.trim)
     _print(found.to_dict(), options.json, assessment_text)
     return DONE if found.compliant else NO_PLAN
-
-
-def _given_doses(pairs: Sequence[tuple[str, float]]) -> dict[str, float]:
-    doses: dict[str, float] = {}
-    for key, value in pairs:
-        doses[key] = doses.get(key, 0.0) + value
-    return doses
-
-
-def _dose_problem(doses: Mapping[str, float], site: Site) -> str:
-    for key in doses:
-        reagent, at, stage = key.partition("@")
-        if reagent not in site.reagents:
-            return f"--dose {key}: {_unknown_reagent(reagent, site)}"
-        if at and stage != "trim":
-            return f"--dose {key}: unknown stage {stage!r}; a dose is REAGENT or REAGENT@trim"
-    trims = [key for key in doses if "@" in key]
-    return f"--dose {' '.join(trims)}: name one trim reagent" if len(trims) > 1 else ""
-
-
-def _unknown_reagent(reagent: str, site: Site) -> str:
-    from catalogs import load_reagents
-    from catalogs.problems import closest
-
-    known = load_reagents()
-    if reagent in known:
-        return (
-            f"this site does not list {reagent}; add it under treatment.reagents or "
-            "treatment.trim_reagents, with an offer in the price book"
-        )
-    near = closest(reagent, known)
-    hint = f"did you mean `{near}`? " if near else ""
-    return f"unknown reagent; {hint}This site lists {', '.join(site.reagents)}"
 
 
 def _trade_off(options: argparse.Namespace) -> int:
@@ -268,11 +236,11 @@ def _curves(options: argparse.Namespace) -> int:
 
     refuse_existing_chart(options.chart, force=options.force)
     site = _load(options)
-    doses = _given_doses(options.dose)
+    doses = given_doses(options.dose)
     asked = dict.fromkeys([*options.reagent, *doses])
     unknown = next((name for name in asked if name not in site.reagents), None)
     if unknown is not None:
-        say(_unknown_reagent(unknown, site))
+        say(unknown_reagent(unknown, site))
         return BAD_INPUT
     curves = build_curves(site, options.ph)
     if options.chart is not None:
@@ -346,10 +314,10 @@ def _offers(options: argparse.Namespace) -> int:
     from optimiser.site_comparison import compare_site_offers
 
     site = _load(options, use_expired=options.expired)
-    demand = _given_doses(options.demand)
+    demand = given_doses(options.demand)
     for key in demand:
         if key.partition("@")[0] not in site.reagents:
-            say(f"--demand {key}: {_unknown_reagent(key.partition('@')[0], site)}")
+            say(f"--demand {key}: {unknown_reagent(key.partition('@')[0], site)}")
             return BAD_INPUT
     found = compare_site_offers(site, demand, of_plan=options.plan)
     if options.csv is not None:
