@@ -98,26 +98,50 @@ def polish(
         for i in range(len(starts))
     ]
     for _ in range(steps):
-        trials: list[Points] = []
-        moving: list[Track] = []
-        for track in tracks:
-            if not track.alive:
-                continue
-            trial = step(evaluator, track, solver, bounds)
-            if trial is None:
-                track.alive = False
-            else:
-                trials.append(trial)
-                moving.append(track)
-        if not trials:
+        if not _advance(evaluator, tracks, solver, bounds):
             break
-        tried = evaluator.evaluate(Points.join(trials), slopes=True, near=[t.place for t in moving])
-        for row, track in enumerate(moving):
-            _accept(track, Place(tried, row))
         if rival is not None:
             _rest_dear(tracks, rival)
     _restore(evaluator, tracks, solver, bounds)
     return tracks
+
+
+def polish_each(
+    evaluator: Evaluator, near: Sequence[Place], solver: SolverPort, *, bounds: Bounds, steps: int,
+    radius: float,
+) -> list[Track]:  # fmt: skip
+    """Polish places side by side, each to its own end whatever the others cost."""
+    starts = Points.join([place.seen.points.take([place.point]) for place in near])
+    seen = evaluator.evaluate(starts, slopes=True, near=near)
+    tracks = [Track(Place(seen, i), radius) for i in range(len(starts))]
+    for _ in range(steps):
+        if not _advance(evaluator, tracks, solver, bounds):
+            break
+    _restore(evaluator, tracks, solver, bounds)
+    return tracks
+
+
+def _advance(
+    evaluator: Evaluator, tracks: Sequence[Track], solver: SolverPort, bounds: Bounds
+) -> bool:
+    """Move every track that is alive by one step; False where none could be moved."""
+    trials: list[Points] = []
+    moving: list[Track] = []
+    for track in tracks:
+        if not track.alive:
+            continue
+        trial = step(evaluator, track, solver, bounds)
+        if trial is None:
+            track.alive = False
+        else:
+            trials.append(trial)
+            moving.append(track)
+    if not trials:
+        return False
+    tried = evaluator.evaluate(Points.join(trials), slopes=True, near=[t.place for t in moving])
+    for row, track in enumerate(moving):
+        _accept(track, Place(tried, row))
+    return True
 
 
 def _restore(

@@ -14,9 +14,10 @@ from numpy.typing import NDArray
 from optimiser.costing import BURDEN, DISPOSAL, EQUIPMENT, FEES, FREIGHT, POLYMER, SEPARATOR
 from optimiser.evaluation import Evaluator, Place
 from optimiser.marginal import BINDING_RATIO, binding_otherwise
-from optimiser.nearby import Standing, point_data, repolish, worst_ratios
-from optimiser.polish import Track, at_rest
+from optimiser.nearby import Standing, point_data, worst_ratios
+from optimiser.polish import Track, at_rest, polish_each
 from optimiser.quality_slopes import RULE
+from optimiser.recipes import set_point_bounds
 from optimiser.search import Findings
 from optimiser.sludge_figures import sludge_data
 from optimiser.solver import SolverPort
@@ -56,9 +57,14 @@ def finish(evaluator: Evaluator, findings: Findings, solver: SolverPort, count: 
     near.sort(key=lambda item: item[1].merit)
     worth = sorted(t.merit for r, t in findings.best.items() if r != plan)[: count + SPARE]
     near = [(recipe, track) for recipe, track in near if track.merit <= worth[-1]]
-    for recipe, track in near:
-        again = repolish(evaluator, track.place, solver, steps=FINISH_STEPS, radius=FINISH_RADIUS)
-        findings.keep(recipe, again)
+    if not near:
+        return
+    again = polish_each(
+        evaluator, [track.place for _, track in near], solver,
+        bounds=set_point_bounds(evaluator), steps=FINISH_STEPS, radius=FINISH_RADIUS,
+    )  # fmt: skip
+    for (recipe, _), track in zip(near, again, strict=True):
+        findings.keep(recipe, track)
 
 
 def runners_up(
