@@ -13,17 +13,20 @@ import numpy as np
 from numpy.typing import NDArray
 
 from chemistry.state import equilibrate
-from optimiser.evaluation import Evaluator
+from optimiser.evaluation import FEASIBLE_RATIO, Evaluator
+from optimiser.largest_dose import USUAL_MOL_PER_L, largest_dose_mol_per_l
 from optimiser.plant import Plant
 from optimiser.points import Points
-from optimiser.polish_step import Bounds
+from optimiser.polish_step import PENALTY, Bounds
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-# Ligand doses tried, mol/L: from a trace to the most that a wastewater plant doses.
-LIGAND_LADDER = (2e-5, 6e-5, 2e-4, 5e-4, 1.2e-3, 3e-3, 8e-3, 2e-2)
+# Ligand doses tried, mol/L: from a trace to the most that wastewater plants usually dose. Where the
+# feed binds more, rungs about as far apart follow.
+LIGAND_LADDER = (2e-5, 6e-5, 2e-4, 5e-4, 1.2e-3, 3e-3, 8e-3, USUAL_MOL_PER_L)
 SHORT_LADDER = (6e-5, 5e-4, 3e-3, 1.5e-2)
+RUNG, SHORT_RUNG = 2.5, 5.0
 # Shares of the alkali demand that a bulk alkali beside the controller is tried at.
 BULK_SHARES = (0.3, 0.6, 0.85, 0.97)
 SHORT_SHARES = (0.5, 0.9)
@@ -168,12 +171,23 @@ def ladder(
         shares = SHORT_SHARES if short else BULK_SHARES
         doses += [share * demand_eq / per_mg for share in shares]
     if known.family not in ("hydroxide", "acid") or not doses:
-        steps = SHORT_LADDER if short else LIGAND_LADDER
+        steps = _ligand_steps(plant, reagent, short=short)
         per_mole = 1000.0 * known.molar_mass_g_per_mol * float(plant.factors[reagent])
         doses += [moles * per_mole for moles in steps]
     low, high = float(bounds.dose_low[reagent]), float(bounds.dose_high[reagent])
     kept = np.unique(np.clip(np.array(doses), low, high))
     return kept[kept > 0.0]
+
+
+def _ligand_steps(plant: Plant, reagent: int, *, short: bool) -> list[float]:
+    """Reacting doses of a ligand to try, up to what the feed can bind of it. [mol/L]"""
+    steps = list(SHORT_LADDER if short else LIGAND_LADDER)
+    bringing = plant.reagents[reagent].components
+    most = largest_dose_mol_per_l(plant.system, plant.totals, bringing)
+    if most > USUAL_MOL_PER_L:
+        rungs = np.log(most / steps[-1]) / np.log(SHORT_RUNG if short else RUNG)
+        steps += list(np.geomspace(steps[-1], most, int(np.ceil(rungs)) + 1)[1:])
+    return steps
 
 
 def grid(
@@ -204,6 +218,27 @@ def grid(
         np.array(doses), np.full(len(ph), controller, dtype=np.int64), np.array(ph),
         np.array(trims, dtype=np.int64),
     )  # fmt: skip
+
+
+def starts_of(ph: FloatArray, total: FloatArray, violation: FloatArray) -> list[int]:
+    """Rows of a recipe's grid to polish: the best basins over the set point, and the nearest miss.
+
+    Notes
+    -----
+    The nearest miss is left out where one of the others complies. Within the grid a miss weighs
+    at least as much as complying costs there: a trace of a reagent that costs next to nothing must
+    not be preferred to a dose that works, because no slope leads from the one to the other before
+    the first solid forms.
+    """
+    cost = np.where(np.isfinite(total), total, np.inf)
+    miss = np.clip(violation, 0.0, 60.0)
+    works = cost[miss <= FEASIBLE_RATIO]
+    weight = np.maximum(cost, works.min() if works.size else 0.0)
+    found = basins(ph, cost + weight * PENALTY * miss)
+    if not found or violation[found].min() <= FEASIBLE_RATIO:
+        return found
+    nearest = int(np.argmin(np.where(np.isfinite(cost), violation, np.inf)))
+    return found if nearest in found else [*found, nearest]
 
 
 def basins(ph: FloatArray, merit: FloatArray) -> list[int]:

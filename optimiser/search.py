@@ -22,13 +22,13 @@ from optimiser.polish_step import PENALTY, Bounds
 from optimiser.recipes import (
     Recipe,
     alkali_demand,
-    basins,
     grid,
     ladder,
     make_recipe,
     recipe_of,
     recipes,
     set_point_bounds,
+    starts_of,
     trim_choices,
 )
 from optimiser.solver import SolverPort
@@ -160,13 +160,12 @@ class Search:
             seen = self.evaluator.evaluate(joined, full=False)
             self.findings.cells_examined += len(joined)
             self.findings.note_values(seen)
-            merit = self._merit(seen)
             begin = 0
             for recipe, points in chunk:
                 rows = slice(begin, begin + len(points))
                 begin += len(points)
                 self.findings.recipes_examined.add(self._names(recipe))
-                found = basins(points.ph, merit[rows])
+                found = starts_of(points.ph, seen.total[rows], seen.violation[rows])
                 starts += [Place(seen, rows.start + k) for k in found]
         return starts
 

@@ -16,6 +16,7 @@ from catalogs.reagents import Reagent
 from chemistry.feed import FeedWater
 from chemistry.state import equilibrate
 from chemistry.system import System
+from optimiser.largest_dose import largest_dose_mol_per_l
 from optimiser.site import Treatment
 
 FloatArray = NDArray[np.float64]
@@ -23,9 +24,6 @@ FloatArray = NDArray[np.float64]
 AUTO = "auto"
 ACTIVITY_CHOICES = (AUTO, "davies", "sit")
 """What the key ``activity`` of a site file may say."""
-
-LARGEST_DOSE_MOL_PER_L = 0.02
-"""Most of a precipitant that a plan looks at, unless the site's ceiling is lower."""
 
 CAUSTIC = {"Na+": 1.0, "H+": -1.0}
 MAJOR_MOL_PER_L = 1e-3  # an ion of the feed above this counts as a major one
@@ -47,7 +45,7 @@ def saltiest_mol_per_l(
     system = feed.system
     doses = [np.zeros(len(system.components))]
     doses += [
-        _largest_dose(system, reagents[name], treatment)
+        _largest_dose(feed, reagents[name], treatment)
         for name in treatment.reagents
         if reagents[name].family not in ("hydroxide", "acid")
     ]
@@ -58,9 +56,10 @@ def saltiest_mol_per_l(
     return max(feed.ionic_strength, float(np.nan_to_num(strength[0])) + several)
 
 
-def _largest_dose(system: System, reagent: Reagent, treatment: Treatment) -> FloatArray:
+def _largest_dose(feed: FeedWater, reagent: Reagent, treatment: Treatment) -> FloatArray:
     """Moles of each component in the largest dose of a reagent, (components,). [mol/L]"""
-    amount = LARGEST_DOSE_MOL_PER_L
+    system = feed.system
+    amount = largest_dose_mol_per_l(system, feed.totals_mol_per_l, reagent.components)
     ceiling = treatment.dose_ceilings_mg_per_l.get(reagent.reagent)
     if ceiling is not None:
         amount = min(amount, ceiling / (1000.0 * reagent.molar_mass_g_per_mol))

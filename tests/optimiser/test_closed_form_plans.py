@@ -138,6 +138,27 @@ def test_lime_leaves_the_published_sulfate_and_cannot_meet_1000_mg_per_l() -> No
         plan(closed_site(("hydrated_lime",), ("SO4", 1000.0), acid, ends))
 
 
+def test_a_plan_is_found_where_a_trace_of_the_reagent_costs_next_to_nothing() -> None:
+    """No solid forms at a trace, so that no slope leads from it to the dose that works."""
+    lead = closed_site(
+        ("sodium_sulfate",), ("Pb", 5.0), feed(3.5, "Cl", Pb=150.0, Na=100.0),
+        floor("Pb", "sulfate"), window(3.0, 10.0),
+    )  # fmt: skip
+    assert plan(lead).compliant
+    sulfate = closed_site(
+        ("calcium_chloride",), ("SO4", 1800.0), feed(7.0, "Na", Cu=0.001, SO4=3200.0, Cl=100.0)
+    )
+    assert plan(sulfate).compliant
+
+
+def test_a_dose_is_found_however_much_of_it_the_feed_binds() -> None:
+    """104 mmol/L of sulfate down to 20 take more than 84 mmol/L of calcium."""
+    site = closed_site(
+        ("calcium_chloride",), ("SO4", 1920.0), feed(7.0, "Na", Cu=0.001, SO4=10000.0, Cl=100.0)
+    )
+    assert plan(site).doses["calcium_chloride"] / hand.CACL_2 > 84.0
+
+
 HYDROXIDES: Mapping[str, tuple[float, dict[str, Any]]] = {
     # Ni(OH)2 fresh 12.8 and NiOH+ -9.54, Ni(OH)2 -21.15, Ni(OH)3- -30.0 (Baes & Mesmer 1976; COST
     # compilation), NiCl+ 0.08 (Gamsjager et al. 2005)

@@ -8,8 +8,10 @@ from catalogs.problems import InputFileError
 from chemistry.feed import feed_water
 from optimiser import assess, plan
 from optimiser.errors import FeedRefused
-from optimiser.recipes import LIGAND_LADDER
-from optimiser.site_salt import LARGEST_DOSE_MOL_PER_L, pairs_by_rule, saltiest_mol_per_l
+from optimiser.evaluation import Evaluator
+from optimiser.largest_dose import USUAL_MOL_PER_L, largest_dose_mol_per_l
+from optimiser.recipes import Recipe, ladder, set_point_bounds
+from optimiser.site_salt import pairs_by_rule, saltiest_mol_per_l
 from tests.optimiser.small_sites import CARBONATE, Tree, own, small_site
 
 LOOSE = own({"parameter": "Cu", "daily_mg_per_l": 5.0}, {"parameter": "Zn", "daily_mg_per_l": 8.0})
@@ -83,8 +85,23 @@ def test_what_is_dosed_counts_as_salt() -> None:
     assert less < saltiest - 0.03
 
 
-def test_the_largest_dose_is_the_largest_that_recipes_try() -> None:
-    assert LIGAND_LADDER[-1] == LARGEST_DOSE_MOL_PER_L
+@pytest.mark.parametrize("calcium", ["2 mg/L", "2 g/L"])
+def test_the_largest_dose_is_the_largest_that_recipes_try(calcium: str) -> None:
+    """2 g/L of calcium are 0.05 mol/L, and bind as much carbonate."""
+    site = small_site(CARBONATE, {"feed": {"analysis": {"Ca": calcium}}})
+    evaluator = Evaluator(site)
+    plant, soda = evaluator.plant, evaluator.plant.index["soda_ash"]
+    known = plant.reagents[soda]
+    most = largest_dose_mol_per_l(plant.system, plant.totals, known.components)
+    assert (most > 0.05) is (calcium == "2 g/L")
+    assert most >= USUAL_MOL_PER_L
+    per_mole = 1000.0 * known.molar_mass_g_per_mol * float(plant.factors[soda])
+    for short in (False, True):
+        tried = ladder(
+            evaluator, Recipe(None, (soda,)), soda, 1e-3, set_point_bounds(evaluator), short=short
+        )
+        assert max(tried) / per_mole >= (most if most > USUAL_MOL_PER_L or not short else 0.015)
+        assert max(tried[1:] / tried[:-1]) < 11.0
 
 
 def test_a_feed_close_to_the_boundary_is_tipped_over_by_its_doses() -> None:
