@@ -36,6 +36,8 @@ from optimiser.solver import SolverPort
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
+_Kept = tuple[tuple[str, ...], Track]
+
 POLISHED_AT_ONCE = 40
 SETTLE_STEP = 0.01
 SETTLED = 2
@@ -46,9 +48,10 @@ FAR_RATIO, NEAR_RATIO, ENOUGH_NEAR = 1.5, 0.5, 4
 
 @dataclass(slots=True)
 class Findings:
-    """What a search has seen: best track per recipe, counts, and lowest value of every check."""
+    """What a search has seen: best track and nearest miss per recipe, counts, lowest values."""
 
     best: dict[tuple[str, ...], Track] = field(default_factory=dict)
+    nearest: dict[tuple[str, ...], Track] = field(default_factory=dict)
     recipes_examined: set[tuple[str, ...]] = field(default_factory=set)
     cells_examined: int = 0
     lowest: FloatArray | None = None
@@ -59,13 +62,16 @@ class Findings:
     """What became of each separator that the site may choose; empty where there is one."""
 
     def keep(self, recipe: tuple[str, ...], track: Track) -> None:
-        """Remember a track if it is the recipe's best."""
+        """Remember a track if it is the recipe's best, or its nearest miss."""
         known = self.best.get(recipe)
         better = known is None or (not track.feasible, track.merit) < (
             not known.feasible, known.merit,
         )  # fmt: skip
         if better:
             self.best[recipe] = track
+        near = self.nearest.get(recipe)
+        if near is None or track.violation < near.violation:
+            self.nearest[recipe] = track
 
     def note_values(self, seen: Evaluation) -> None:
         """Remember the lowest value of every check and where it was seen."""
@@ -226,20 +232,27 @@ class Search:
     def _extend(self, size: int) -> list[Place]:
         """Starts of larger recipes: the best smaller points with one more reagent."""
         plant = self.evaluator.plant
-        parts = sorted(
-            (item for item in self.findings.best.items() if len(item[0]) == size - 1),
-            key=lambda item: item[1].merit,
-        )
+        parts = self._parts(size - 1)
         demand = alkali_demand(self.evaluator)
         grids: list[tuple[Recipe, Points]] = []
         for recipe in recipes(plant, size):
             names = set(self._names(recipe))
-            mine = [t for part, t in parts if set(part) < names][:2]
+            mine = [t for part, t in parts[0] if set(part) < names][:2]
+            mine += [t for part, t in parts[1] if set(part) < names and t not in mine][:1]
             made = [p for t in mine if (p := self._with_one_more(recipe, t, demand)) is not None]
             if made:
                 grids.append((recipe, Points.join(made)))
         self.progress(f"trying {len(grids)} recipes of {size}")
         return self._best_of(grids)
+
+    def _parts(self, size: int) -> tuple[list[_Kept], list[_Kept]]:
+        """Recipes of one size, the best first, and those that miss with the nearest miss first."""
+        known = self.findings
+        best = [item for item in known.best.items() if len(item[0]) == size]
+        missing = [(recipe, known.nearest[recipe]) for recipe, track in best if not track.feasible]
+        best.sort(key=lambda item: item[1].merit)
+        missing.sort(key=lambda item: item[1].violation)
+        return best, missing
 
     def _with_one_more(
         self, recipe: Recipe, track: Track, demand: dict[float, float]

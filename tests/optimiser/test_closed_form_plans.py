@@ -151,6 +151,19 @@ def test_a_plan_is_found_where_a_trace_of_the_reagent_costs_next_to_nothing() ->
     assert plan(sulfate).compliant
 
 
+def test_three_ligands_are_found_where_each_alone_leaves_the_other_metals() -> None:
+    """Salt for silver, sulfate for barium, caustic for zinc: no two of them will do."""
+    limits = {"Ag": 1.0, "Ba": 0.5, "Zn": 0.5}
+    own = [{"parameter": m, "daily_mg_per_l": v, "source": "invented"} for m, v in limits.items()]
+    site = closed_site(
+        ("sodium_chloride", "sodium_sulfate", "caustic_soda"), ("Ag", 1.0),
+        feed(6.0, "acetate", Ag=30.0, Ba=50.0, Na=100.0, Zn=40.0),
+        floor("Ag", "chloride"), floor("Ba", "sulfate"), window(3.0, 10.0),
+        {"limits": {"own": own}},
+    )  # fmt: skip
+    assert set(plan(site).doses) == {"sodium_chloride", "sodium_sulfate", "caustic_soda"}
+
+
 def test_a_dose_is_found_however_much_of_it_the_feed_binds() -> None:
     """104 mmol/L of sulfate down to 20 take more than 84 mmol/L of calcium."""
     site = closed_site(
