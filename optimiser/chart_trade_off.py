@@ -33,7 +33,7 @@ WIDTH_IN, HEIGHT_IN = 9.0, 4.8
 LEAST_COST_RANGE = 0.05  # of the cost: a flat curve is drawn flat
 TOP_ROOM, BOTTOM_ROOM = 0.16, 0.14
 LABEL_GAP_PT, LABEL_RISE_PT = 11.0, 7.0
-LABEL_LETTERS = 52
+LABEL_LETTERS = 53
 
 
 def draw_trade_off(data: Data, path: Path) -> None:
@@ -48,7 +48,7 @@ def draw_trade_off(data: Data, path: Path) -> None:
     """
     with house_style():
         figure = new_figure(WIDTH_IN, HEIGHT_IN)
-        axes = figure.add_axes((0.09, 0.125, 0.56, 0.775))
+        axes = figure.add_axes((0.09, 0.125, 0.55, 0.775))
         _draw(axes, data)
         save(figure, path)
 
@@ -101,7 +101,7 @@ def _recipes(axes: Axes, data: Data) -> None:
         )  # fmt: skip
         line.set_gid(f"recipe-{order.index(recipe)}-{'-'.join(recipe)}-{column}-{len(named)}")
         if any(point["is_plan"] for point in mine):
-            text[recipe] = " (ringed: the plan as it is)"
+            text[recipe] = " (ringed: the plan)"
         anchor = max(mine, key=lambda point: point[column])
         named[recipe] = max(named.get(recipe, (-1.0, 0.0)), (anchor[column], anchor["total"]))
     words = {recipe: " + ".join(n.replace("_", " ") for n in recipe) for recipe in order}

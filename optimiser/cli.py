@@ -22,9 +22,11 @@ from optimiser.cli_process import (
     OUR_FAULT,
     PLEASE_REPORT,
     STOPPED,
+    clear_progress,
     drop_output,
     drop_unwritable_output,
     own_the_process,
+    progress,
     say,
     write_csv,
 )
@@ -61,7 +63,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         code = _COMMANDS[options.command](options)
         sys.stdout.flush()
     except KeyboardInterrupt:
-        _clear_progress()
+        clear_progress()
         say("stopped before there was a result")
         return STOPPED
     except BrokenPipeError:
@@ -69,7 +71,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         drop_output()
         return DONE
     except _known_errors() as error:
-        _clear_progress()
+        clear_progress()
         return _refuse(error, debug=options.debug)
     return code
 
@@ -137,23 +139,6 @@ def _print_json(data: Mapping[str, Any]) -> None:
     sys.stdout.write(json.dumps(data, indent=2, allow_nan=False) + "\n")
 
 
-def _progress() -> Callable[[str], None] | None:
-    """Show one line that renews itself, only where somebody watches."""
-    if not sys.stderr.isatty():
-        return None
-
-    def show(message: str) -> None:
-        sys.stderr.write(f"\r\x1b[K{message[:99]}")
-        sys.stderr.flush()
-
-    return show
-
-
-def _clear_progress() -> None:
-    if sys.stderr.isatty():
-        sys.stderr.write("\r\x1b[K")
-
-
 def _plan(options: argparse.Namespace) -> int:
     from dataclasses import replace
 
@@ -172,14 +157,14 @@ def _plan(options: argparse.Namespace) -> int:
     site = replace(site, treatment=treatment, solver=solver)
     try:
         found = optimiser.plan(
-            site, progress=_progress(), prove_s=options.prove, runners_up=options.runners_up
+            site, progress=progress(), prove_s=options.prove, runners_up=options.runners_up
         )
     except optimiser.NoPlan as none:
         data = no_plan_data(site.name, none, site.currency)
-        _clear_progress()
+        clear_progress()
         _print(data, options.json, no_plan_text)
         return NO_PLAN
-    _clear_progress()
+    clear_progress()
     _print(found.to_dict(), options.json, plan_text)
     return DONE
 
@@ -212,15 +197,15 @@ def _trade_off(options: argparse.Namespace) -> int:
     site = _load(options)
     try:
         found = optimiser.trade_off(
-            site, options.against, options.points, caps=options.at, progress=_progress()
+            site, options.against, options.points, caps=options.at, progress=progress()
         )
     except optimiser.NoPlan as none:
-        _clear_progress()
+        clear_progress()
         _print(no_plan_data(site.name, none, site.currency), options.json, no_plan_text)
         return NO_PLAN
-    _clear_progress()
+    clear_progress()
     if options.csv is not None:
-        found.frame().to_csv(options.csv, index=False, lineterminator="\n")
+        write_csv(found.frame(), options.csv)
     if options.chart is not None:
         from optimiser.chart_trade_off import draw_trade_off
 
@@ -237,11 +222,10 @@ def _curves(options: argparse.Namespace) -> int:
     refuse_existing_chart(options.chart, force=options.force)
     site = _load(options)
     doses = given_doses(options.dose)
-    asked = dict.fromkeys([*options.reagent, *doses])
-    unknown = next((name for name in asked if name not in site.reagents), None)
-    if unknown is not None:
-        say(unknown_reagent(unknown, site))
-        return BAD_INPUT
+    for name in (*options.reagent, *doses):
+        if name not in site.reagents:
+            say(unknown_reagent(name, site))
+            return BAD_INPUT
     curves = build_curves(site, options.ph)
     if options.chart is not None:
         from optimiser.chart_curves import chart_curves
@@ -274,19 +258,19 @@ def _chances(options: argparse.Namespace) -> int:
     try:
         if options.confidence is None:
             found = explain_chances(
-                site, draws=options.draws, seed=options.seed, progress=_progress()
+                site, draws=options.draws, seed=options.seed, progress=progress()
             )
-            _clear_progress()
+            clear_progress()
             _print(found.to_dict(), options.json, chances_text)
             return DONE
         sure = optimiser.plan_with_confidence(
-            site, options.confidence, draws=options.draws, seed=options.seed, progress=_progress()
+            site, options.confidence, draws=options.draws, seed=options.seed, progress=progress()
         )
     except optimiser.NoPlan as none:
-        _clear_progress()
+        clear_progress()
         _print(no_plan_data(site.name, none), options.json, no_plan_text)
         return NO_PLAN
-    _clear_progress()
+    clear_progress()
     _print(sure.to_dict(), options.json, confidence_text)
     return DONE if sure.reached else NO_PLAN
 
@@ -299,12 +283,12 @@ def _explain(options: argparse.Namespace) -> int:
 
     site = _load(options)
     try:
-        found = explain_plan(site, progress=_progress())
+        found = explain_plan(site, progress=progress())
     except optimiser.NoPlan as none:
-        _clear_progress()
+        clear_progress()
         _print(no_plan_data(site.name, none, site.currency), options.json, no_plan_text)
         return NO_PLAN
-    _clear_progress()
+    clear_progress()
     _print(found.to_dict(), options.json, explain_text)
     return DONE
 

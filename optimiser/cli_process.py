@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING
 from optimiser.cli_options import PROGRAM
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
     from types import FrameType, TracebackType
 
     import pandas as pd
@@ -30,6 +31,24 @@ PLEASE_REPORT = (
 def say(message: str) -> None:
     """Tell the user something that is no result."""
     sys.stderr.write(f"{PROGRAM}: {message}\n")
+
+
+def progress() -> Callable[[str], None] | None:
+    """Show one line that renews itself, only where somebody watches."""
+    if not sys.stderr.isatty():
+        return None
+
+    def show(message: str) -> None:
+        sys.stderr.write(f"\r\x1b[K{message[:99]}")
+        sys.stderr.flush()
+
+    return show
+
+
+def clear_progress() -> None:
+    """Take the progress line away."""
+    if sys.stderr.isatty():
+        sys.stderr.write("\r\x1b[K")
 
 
 def own_the_process(*, debug: bool) -> None:

@@ -184,7 +184,7 @@ class _Run:
         return loosest, self._least_value(loosest)
 
     def _spread(self, loosest: float, tightest: float, count: int) -> list[float]:
-        own = {PH: self._value(self.plan), MARGIN: self.site.design_margin}.get(self.axis.key)
+        own = self._value(self.plan) if self.axis.costly is None else None
         if abs(loosest - tightest) <= 2.0 * LEAST_SLACK * abs(loosest):
             return [loosest]
         wanted = [float(cap) for cap in np.linspace(loosest, tightest, count)]
@@ -361,7 +361,8 @@ class _Run:
             "cap": cap, **measures(evaluator, Place(seen, 0)), "total": float(seen.total[0]),
             "reagents": list(recipe_of(evaluator.plant, track.point, 0)),
             "doses": Describer(evaluator, seen, 0).dose_map(),
-            "is_plan": abs(track.total - self.plan.total) <= SAME * self.plan.total,
+            "is_plan": cap == self._value(self.plan)
+            or abs(track.total - self.plan.total) <= SAME * self.plan.total,
             "found_by": SEARCH if cap in self.fresh or track is self.plan else POOL,
         }  # fmt: skip
 

@@ -99,7 +99,7 @@ def test_a_trade_off_names_its_recipes_costs_and_what_has_no_plan(tmp_path: Path
     draw_trade_off(TRADE_OFF, path)
     words = texts(drawn(path))
     for text in (
-        "hydrated lime (ringed: the plan as it is)", "hydrated lime + soda ash",
+        "hydrated lime (ringed: the plan)", "hydrated lime + soda ash",
         "magnesium hydroxide",
         "40,000", "52,000", "EUR a year", "TDS of the mean discharge, mg/L",
         "no plan found below 809",
