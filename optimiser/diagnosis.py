@@ -88,7 +88,7 @@ def _nearest_miss(
     evaluator: Evaluator, findings: Findings, solver: SolverPort
 ) -> tuple[Evaluation, int]:
     """Polish the least misses seen to where the largest miss is least."""
-    ranked = sorted(findings.best.values(), key=lambda track: track.violation)[:NEAREST]
+    ranked = sorted(findings.nearest.values(), key=lambda track: track.violation)[:NEAREST]
     try:
         tracks = polish(
             evaluator, Points.join([track.point for track in ranked]), solver,

@@ -63,7 +63,7 @@ def narrowed(one: Try, evaluator: Evaluator, starts: Points) -> Try:
 
 
 def _nearest(findings: Findings) -> list[Track]:
-    return sorted(findings.best.values(), key=lambda track: track.violation)
+    return sorted(findings.nearest.values(), key=lambda track: track.violation)
 
 
 def _reagents(evaluator: Evaluator, findings: Findings) -> list[Try]:

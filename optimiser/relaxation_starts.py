@@ -96,7 +96,7 @@ def sweep(evaluator: Evaluator, findings: Findings) -> Sweep | None:
     A solid that comes or goes makes limits jump, and no step looks over such an edge.
     """
     bounds = set_point_bounds(evaluator)
-    tracks = sorted(findings.best.values(), key=lambda track: track.violation)[:RECIPES_SWEPT]
+    tracks = sorted(findings.nearest.values(), key=lambda track: track.violation)[:RECIPES_SWEPT]
     if not tracks:
         return None
     gap = max(evaluator.plant.treatment.ph_tolerance, LEAST_SWEEP_STEP)
