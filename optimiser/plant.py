@@ -158,7 +158,9 @@ class Plant:
             return found
         found += self._held(points, rows, base, first, CLOSED_HELD, none_lost, warm)
         doses = self.fed_doses(points, rows, found)
-        lost, slope = self._vented(points, rows, doses)
+        lost, slope, unknown = self._vented(points, rows, doses)
+        if unknown.any():  # an end that cannot be looked at is no end that holds
+            first = found[0] = replace(first, reached=first.reached & ~unknown)
         venting = np.flatnonzero(lost > 1e-9)
         if venting.size:
             vented = base - lost[:, None] * self.co2
@@ -254,31 +256,33 @@ class Plant:
 
     def _vented(
         self, points: Points, rows: Rows, doses: FloatArray
-    ) -> tuple[FloatArray, FloatArray]:
+    ) -> tuple[FloatArray, FloatArray, BoolArray]:
         """Carbon dioxide that carbonate dosed into the feed may lose, (rows,) [mol/L].
 
         The feed and all carbonate reagents of a row meet before other alkali and come to rest with
         air of the site's CO2 pressure; what leaves is lost. ``doses`` (points, reagents) are the
         nominal ones, from which the controller's is taken. Also returned: the change per mg/L of
-        each carbonate reagent at the mean row, (reagents,) [mol/mg].
+        each carbonate reagent at the mean row, (reagents,) [mol/mg]; and the rows whose vented
+        water could not be solved, (rows,).
         """
-        lost = np.zeros(len(rows))
+        lost, unknown = np.zeros(len(rows)), np.zeros(len(rows), dtype=bool)
         slope = np.zeros(len(self.names))
         fed = np.where(rows.doses > 0.0, rows.doses, doses[rows.point]) * self.is_carbonate
         dosed = np.flatnonzero(fed.any(axis=1))
         if not dosed.size or "CO2(aq)" not in self.system.species_names:
-            return lost, slope
+            return lost, slope, unknown
         added = fed[dosed] @ self.reacting
         mixed = self.totals + added
         carbonate = self.system.index["CO3-2"]
         state = equilibrate(
             self.liquid_system, mixed, pco2_atm=self.treatment.vent_pco2_atm, on_failure="flag"
         )
+        unknown[dosed] = ~state.converged
         gone = mixed[:, carbonate] - state.totals[:, carbonate]
         lost[dosed] = np.where(state.converged, np.clip(gone, 0.0, mixed[:, carbonate]), 0.0)
         share = np.clip(lost[dosed] / np.maximum(added[:, carbonate], 1e-12), 0.0, 1.0)
         slope[self.is_carbonate] = float(share.mean()) * self.reacting[self.is_carbonate, carbonate]
-        return lost, slope
+        return lost, slope, unknown
 
     # -- trim ------------------------------------------------------------------------------------
 

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from itertools import product
+from typing import Any
 
 import numpy as np
 import pytest
@@ -10,7 +12,10 @@ import pytest
 from catalogs.problems import InputFileError
 from chemistry import equilibrate
 from chemistry.state import EquilibriumState
+from chemistry.system import System
 from optimiser import NoPlan, assess, plan
+from optimiser.evaluation import Evaluator
+from optimiser.points import VENTED_FORMED, Points
 from optimiser.site import Site
 from tests.optimiser.small_sites import (
     CARBONATE,
@@ -189,6 +194,30 @@ def test_carbon_dioxide_is_planned_kept_and_vented_and_the_dearer_dose_counts() 
         assert row["residual"] == pytest.approx(max(residual), rel=1e-5)
         kept = residual[0] > residual[1]
         assert ("gas kept" if kept else "CO2 vented") in row["worst_state"]
+
+
+def test_a_vented_water_that_cannot_be_solved_does_not_count_as_one_that_lost_nothing(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    evaluator = Evaluator(small_site(CARBONATE, EXACT))
+    index = evaluator.plant.index
+    doses = np.zeros((1, len(index)))
+    doses[0, index["soda_ash"]] = 300.0
+    controller = np.array([index["caustic_soda"]])
+    points = Points(doses, controller, np.array([8.8]), np.array([-1]))
+    honest = evaluator.evaluate(points)
+    assert honest.blocks[0].reached.all()
+    assert VENTED_FORMED in {block.end for block in honest.blocks}
+
+    def unsettled(system: System, totals: Any, *given: Any, **asked: Any) -> EquilibriumState:
+        state = equilibrate(system, totals, *given, **asked)
+        return replace(state, converged=state.converged & ("pco2_atm" not in asked))
+
+    monkeypatch.setattr("optimiser.plant.equilibrate", unsettled)
+    seen = evaluator.evaluate(points)
+    assert not seen.blocks[0].reached.any()
+    assert seen.violation[0] >= 5.0
+    assert not seen.feasible[0]
 
 
 def test_carbonate_into_an_alkaline_feed_loses_no_carbon_dioxide() -> None:
