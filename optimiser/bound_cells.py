@@ -209,8 +209,9 @@ class Waters:
         for check in self.judge.checks:
             if check.metals:
                 chosen = list(check.metals)
-                weights = self.judge.weights[chosen].sum(axis=0)
-                room = check.target * SLACK - float(self.judge.dissolved_only[chosen].sum())
+                room = check.target * SLACK
+                weights = self.judge.jar.least_weights(chosen, self.plant.totals, room)
+                room -= float(self.judge.dissolved_only[chosen].sum())
             elif check.burden and check.burden != "TDS":
                 weights, room = self.judge.burden_weights[check.burden], check.target * SLACK
             else:

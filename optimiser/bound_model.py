@@ -165,7 +165,9 @@ class Relaxation(Waters):
         judge = self.judge
         if check.metals:
             chosen = list(check.metals)
-            form = rows.dissolved(judge.weights[chosen].sum(axis=0))
+            target = check.target * SLACK
+            weights = judge.jar.least_weights(chosen, self.plant.totals, target)
+            form = rows.dissolved(weights)
             form = form.plus(rows.solids(judge.solid_metal[:, chosen].sum(axis=1)).times(share))
             fixed = float(judge.dissolved_only[chosen].sum())
             fixed += share * float(judge.particles[chosen].sum())

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from chemistry.errors import ChemistryError
-from optimiser.draws import ANALYSIS, CARRY_OVER, CONSTANTS, Draw, draw_sites
+from optimiser.draws import ANALYSIS, CARRY_OVER, CONSTANTS, JAR, Draw, draw_sites
 from optimiser.evaluation import DOSE_RULE, FEASIBLE_RATIO, Evaluation, Evaluator, Place
 from optimiser.points import Points
 from optimiser.quality import LOAD
@@ -101,8 +101,18 @@ class Chances:
                 "analysis_percent": unsure.analysis_percent, "ph": unsure.ph,
                 "carried_solids_percent": unsure.carried_solids_percent,
                 "constants": "published ranges as the middle 90 %, one number per metal and review",
+                "jar_tests": self._jar_text(),
             },
         }  # fmt: skip
+
+    def _jar_text(self) -> str:
+        jar = self.site.jar
+        if jar is None or not any(name.startswith(JAR) for name in self.number_names):
+            return ""
+        return (
+            f"factors of the jar tests within their intervals of {100.0 * jar.confidence:g} %,"
+            " apart from the constants, which is rather too wide than too narrow"
+        )
 
     def frame(self) -> pd.DataFrame:
         """Each limit with its chance as a pandas frame."""
@@ -243,6 +253,7 @@ def _numbers(draw: Draw) -> tuple[tuple[str, ...], list[float]]:
     named = {f"{CONSTANTS}: {k}": v for k, v in draw.constants.items()}
     named |= {f"{ANALYSIS}: {k}": v for k, v in draw.analysis.items()}
     named[CARRY_OVER] = draw.carried
+    named |= {f"{JAR}: {k}": v for k, v in draw.jar.items()}
     return tuple(named), list(named.values())
 
 

@@ -128,6 +128,7 @@ class Describer:
             scale = self.site.flow_m3_per_d / 1000.0 if check.averaging == LOAD else 1.0
             metals = list(check.metals)
             residual = part.residual[k, metals].sum() if metals else value
+            theory = part.theory[k, metals].sum() if metals else value
             carried = part.carried[k, metals].sum() if metals else 0.0
             floor = part.floor[k, metals].sum() if metals else 0.0
             predicted = value * scale * check.variability
@@ -136,7 +137,9 @@ class Describer:
                 {
                     "parameter": check.label, "averaging": check.averaging, "unit": check.unit,
                     "limit": check.limit, "source": check.source,
-                    "residual": float(residual) * scale, "carry_over": float(carried) * scale,
+                    "residual": float(residual) * scale,
+                    "residual_by_theory": float(theory) * scale,
+                    "carry_over": float(carried) * scale,
                     "floor": float(floor) * scale, "variability_factor": check.variability,
                     "predicted": predicted, "target": check.margin * check.limit,
                     "margin_percent": 100.0 * (1.0 - predicted / check.limit),

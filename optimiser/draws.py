@@ -6,28 +6,35 @@ Owns the sampling; what a draw does to a plan is `optimiser.chances`.
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
+from statistics import NormalDist
 
 import numpy as np
 
 from catalogs.constant_ranges import ConstantSpread, constant_spreads
 from chemistry.analysis import Measurement, WaterAnalysis
+from chemistry.calibration import FactorFit
 from optimiser.site import Separator, Site
+from optimiser.site_jar import fitted_dose_factors
 
-CONSTANTS, ANALYSIS, CARRY_OVER = "constants", "analysis", "carried solids"
+CONSTANTS, ANALYSIS, CARRY_OVER, JAR = "constants", "analysis", "carried solids", "jar tests"
+RESIDUAL, DOSE = "residual factor of ", "dose factor of "
+MOST_CONFIDENCE = 0.9999  # of an interval: beyond it the spread would follow from rounding
 
 
 @dataclass(frozen=True, slots=True)
 class Draw:
     """One draw as standard normal numbers: by group of constants, by analyte, and for the floc.
 
-    ``site`` is the problem as it would be if the draw were the truth.
+    ``site`` is the problem as it would be if the draw were the truth; ``jar`` has a number for
+    every factor of jar tests.
     """
 
     constants: Mapping[str, float]
     analysis: Mapping[str, float]
     carried: float
     site: Site
+    jar: Mapping[str, float] = field(default_factory=dict)
 
 
 def draw_sites(site: Site, count: int, seed: int) -> Iterator[Draw]:
@@ -36,19 +43,22 @@ def draw_sites(site: Site, count: int, seed: int) -> Iterator[Draw]:
     Every constant group, analyte, pH and the separator's solids get an independent standard normal
     number. Constants move within their published range (`catalogs.constant_ranges`), analyses and
     separator solids by the lognormal spreads of `Site.uncertainty`, the pH by its normal one.
+    Factors of jar tests are lognormal with their interval at its confidence, apart from the
+    constants although they were fitted beside them: rather too wide than too narrow.
     """
     generator = np.random.default_rng(seed)
     spreads = constant_spreads(site.system)
     groups = tuple(dict.fromkeys(s.group for s in spreads))
     analytes = tuple(site.analysis.measurements)
+    factors = _fits(site)
     for _ in range(count):
         by_group = dict(zip(groups, generator.standard_normal(len(groups)), strict=True))
         by_analyte = dict(zip(analytes, generator.standard_normal(len(analytes)), strict=True))
         by_analyte["pH"], by_analyte["acid"] = generator.standard_normal(2)
         carried = float(generator.standard_normal())
-        yield Draw(
-            by_group, by_analyte, carried, _drawn(site, spreads, by_group, by_analyte, carried)
-        )
+        by_factor = dict(zip(factors, generator.standard_normal(len(factors)), strict=True))
+        drawn = _drawn(site, spreads, by_group, by_analyte, carried)
+        yield Draw(by_group, by_analyte, carried, _with_factors(drawn, by_factor), by_factor)
 
 
 def _drawn(
@@ -68,6 +78,50 @@ def _drawn(
 
 def _move(spread: ConstantSpread, number: float) -> float:
     return number * (spread.up_log10 if number > 0.0 else spread.down_log10)
+
+
+def _fits(site: Site) -> dict[str, FactorFit]:
+    """Fitted factors that the site plans with; a dose factor of the site file is no fit."""
+    if site.jar is None:
+        return {}
+    fits = {f"{RESIDUAL}{metal}": fit for metal, fit in site.jar.residual_factors.items()}
+    planned = fitted_dose_factors(site.jar, site.treatment)
+    return fits | {
+        f"{DOSE}{name}": site.jar.dose_factors[name]
+        for name, factor in planned.items()
+        if site.treatment.dose_factors.get(name) == factor
+    }
+
+
+def _with_factors(site: Site, numbers: Mapping[str, float]) -> Site:
+    """The site with every factor of its jar tests moved within its interval."""
+    if site.jar is None or not numbers:
+        return site
+    z = NormalDist().inv_cdf(0.5 + 0.5 * min(site.jar.confidence, MOST_CONFIDENCE))
+
+    def moved(kind: str, fits: Mapping[str, FactorFit]) -> dict[str, FactorFit]:
+        return {
+            name: replace(fit, factor=_moved(fit, numbers[kind + name] / z))
+            if kind + name in numbers else fit
+            for name, fit in fits.items()
+        }  # fmt: skip
+
+    jar = replace(
+        site.jar, residual_factors=moved(RESIDUAL, site.jar.residual_factors),
+        dose_factors=moved(DOSE, site.jar.dose_factors),
+    )  # fmt: skip
+    drawn = fitted_dose_factors(jar, site.treatment)
+    doses = {
+        name: drawn[name] if DOSE + name in numbers else factor
+        for name, factor in site.treatment.dose_factors.items()
+    }
+    return replace(site, jar=jar, treatment=replace(site.treatment, dose_factors=doses))
+
+
+def _moved(fit: FactorFit, share: float) -> float:
+    """Factor at a share of the way, in the logarithm, to an end of its interval."""
+    end = fit.high if share > 0.0 else fit.low
+    return float(fit.factor * np.exp(abs(share) * np.log(end / fit.factor)))
 
 
 def _factor(percent: float, number: float) -> float:

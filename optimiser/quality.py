@@ -19,6 +19,7 @@ from chemistry.state import H2S_SPECIES
 from optimiser.plant import Plant
 from optimiser.points import Block, Points, Rows
 from optimiser.quality_slopes import RULE, SMALLEST_MG_PER_L, fill_slopes
+from optimiser.residual_factors import ResidualFactors
 from optimiser.site import Limit
 
 FloatArray = NDArray[np.float64]
@@ -57,16 +58,19 @@ class Judged:
     """Values of one block's rows, with slopes by (set point, paced doses...).
 
     ``value`` and ``ratio`` are (rows, checks); ``slope`` (rows, checks, 1 + reagents) the change of
-    ``ratio``; ``residual``, ``carried`` and ``floor`` (rows, metals) in mg/L; ``dose_slope``
-    (rows, 1 + reagents) the change of the controller's dose, ``trim_slope`` of the trim dose,
-    ``solid_slope`` (rows, solids, 1 + reagents) of the amounts of solids, ``effluent_slope`` of the
-    discharged totals.
+    ``ratio``; ``residual``, ``carried`` and ``floor`` (rows, metals) in mg/L, ``theory`` the
+    residual without factors of jar tests, ``at_most`` where all in the tank dissolves;
+    ``dose_slope`` (rows, 1 + reagents) the change of the controller's dose, ``trim_slope`` of the
+    trim dose, ``solid_slope`` (rows, solids, 1 + reagents) of the amounts of solids,
+    ``effluent_slope`` of the discharged totals.
     """
 
     block: Block
     value: FloatArray
     ratio: FloatArray
     residual: FloatArray
+    theory: FloatArray
+    at_most: BoolArray
     carried: FloatArray
     floor: FloatArray
     burden: dict[str, FloatArray]
@@ -95,6 +99,7 @@ class Judge:
             [sum(plant.feed.unmodelled_mg_per_l.get(p, 0.0) for p in _parts(m)) for m in names]
         )
         self.solid_metal = plant.system.solid_formation @ self.weights.T
+        self.jar = ResidualFactors(site, names, self.weights)
         self.solid_mass = self._credited_mass()
         self.feed_particle_mass = max(site.analysis.tss_mg_per_l, sum(particles.values(), 0.0))
         self.floors = self._floors()
@@ -224,7 +229,8 @@ class Judge:
     def judge(self, points: Points, rows: Rows, block: Block, *, slopes: bool = False) -> Judged:
         """Values, ratios and (if ``slopes``) their derivatives for one block of states."""
         state = block.state
-        residual = state.dissolved_mol_per_l @ self.weights.T + self.dissolved_only
+        residual, theory, at_most = self.jar.residual(state, self.solid_metal)
+        residual, theory = residual + self.dissolved_only, theory + self.dissolved_only
         solids = state.solids_mol_per_l
         share, share_by_mass = self._share(solids)
         held = solids @ self.solid_metal + self.particles
@@ -240,7 +246,7 @@ class Judge:
         width = 1 + len(self.plant.names)
         n, count = value.shape
         judged = Judged(
-            block, value, ratio, residual, carried, floor, burden,
+            block, value, ratio, residual, theory, at_most, carried, floor, burden,
             np.zeros((n, count, width if slopes else 0)), np.zeros((n, width)),
             np.zeros((n, width)), np.zeros((n, solids.shape[1], width if slopes else 0)),
             np.zeros((n, block.effluent.shape[1], width if slopes else 0)),

@@ -71,9 +71,9 @@ def fill_slopes(
     activity = hold(np.swapaxes(free.ln_activity, 1, 2))
     trim, effluent, trim_activity = _trim_slopes(judge, points, rows, block, liquid, activity)
     effluent = effluent + _surplus_slopes(judge, points, rows, block, dose)[:, :, columns]
-    metal = np.einsum("mc,nck->nmk", judge.weights, liquid)
     mass = np.einsum("p,npk->nk", judge.solid_mass, solids)
     held_slope = np.einsum("pm,npk->nmk", judge.solid_metal, solids)
+    metal = judge.jar.slope(liquid, held_slope, judged.at_most)
     metal = metal + share[:, None, None] * held_slope
     metal += (held[:, :, None] * share_by_mass[:, None, None]) * mass[:, None, :]
     free_of_floor = (judged.residual + judged.carried) >= judged.floor

@@ -10,6 +10,7 @@ from typing import Any
 
 from optimiser.render_capacities import capacity_lines
 from optimiser.render_gas import gas_lines
+from optimiser.render_jar import theory_lines
 from optimiser.render_proof import proof_lines
 from optimiser.render_runners_up import runners_up_lines
 from optimiser.render_separators import separator_lines
@@ -204,6 +205,7 @@ def _limits(data: Data, ink: Ink) -> list[str]:
         "Floor: the least value promised without a jar test of this water. Factor: from the value "
         "of the analysis to that of the period. Target: the limit less its design margin."
     )
+    lines += theory_lines(data["limits"])
     lines += _held_up(data["limits"])
     lines += _grouped("Worst case", data["limits"], "worst_state", plain=True)
     lines += _grouped("Source of the limit", data["limits"], "source")

@@ -70,6 +70,7 @@ def _body(data: Data, ink: Ink) -> list[str]:
             "%: common practice, no source; `uncertainty` in the site file sets your own",
         ]
     )
+    lines += bullets([assumed["jar_tests"]]) if assumed["jar_tests"] else []
     if data["unsolved_draws"]:
         lines += bullets([f"{data['unsolved_draws']} draws had no solution and count as missed"])
     return lines

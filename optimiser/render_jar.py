@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from math import exp
 from typing import Any
 
-from optimiser.tables import Ink, bullets, number, paragraph, table
+from optimiser.tables import INDENT, Ink, bullets, number, paragraph, table
 
 
 def jar_text(data: Mapping[str, Any], ink: Ink) -> str:
@@ -109,3 +109,19 @@ def _fit(fit: Mapping[str, Any]) -> list[str]:
         str(fit["jars"]), number(fit["factor"]), number(fit["low"]), number(fit["high"]),
         scatter + assumed,
     ]  # fmt: skip
+
+
+def theory_lines(limits: Sequence[Mapping[str, Any]]) -> list[str]:
+    """Residuals of a plan by theory alone, where factors of jar tests changed them."""
+    theory = {
+        str(limit["parameter"]): f"{number(limit['residual_by_theory'])} {limit['unit']}"
+        for limit in reversed(limits)
+        if limit.get("residual_by_theory", limit["residual"]) != limit["residual"]
+    }
+    if not theory:
+        return []
+    text = ", ".join(f"{name} {value}" for name, value in reversed(theory.items()))
+    return paragraph(
+        f"Residuals hold the factors of the jar tests; by theory alone they would be: {text}.",
+        indent=INDENT * 2, first=INDENT,
+    )  # fmt: skip

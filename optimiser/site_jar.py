@@ -64,11 +64,7 @@ def with_jar(
     A dose factor of the site file wins over the tests; a fitted one counts at least 1, because
     what was not fed cannot react. A floor falls to what the tests reached and never rises.
     """
-    factors = {
-        name: min(max(fit.factor, 1.0), LARGEST_DOSE_FACTOR)
-        for name, fit in jar.dose_factors.items()
-        if name in (*treatment.reagents, *treatment.trim_reagents)
-    }
+    factors = fitted_dose_factors(jar, treatment)
     own = treatment.dose_factors
     notes = [_first_note(jar)]
     notes += [
@@ -85,13 +81,26 @@ def with_jar(
             floors[metal] = lowered
             notes.append(f"jar tests lower the floor of {metal} to {shown:.3g} mg/L")
     if jar.residual_factors:
+        fits = ", ".join(
+            f"{metal} {fit.factor:.3g} ({fit.low:.3g} to {fit.high:.3g})"
+            for metal, fit in jar.residual_factors.items()
+        )
         notes.append(
-            "residual factors of the jar tests are kept with the site and not yet in predictions"
+            f"residual factors of the jar tests multiply what theory leaves dissolved: {fits}"
         )
     return JarChanges(
         treatment=replace(treatment, dose_factors={**factors, **own}),
         floors_mg_per_l=floors, notes=tuple(notes),
     )  # fmt: skip
+
+
+def fitted_dose_factors(jar: JarCalibration, treatment: Treatment) -> dict[str, float]:
+    """Dose factors of jar tests as plans take them, for the reagents that the site allows."""
+    return {
+        name: min(max(fit.factor, 1.0), LARGEST_DOSE_FACTOR)
+        for name, fit in jar.dose_factors.items()
+        if name in (*treatment.reagents, *treatment.trim_reagents)
+    }
 
 
 def jar_cautions(
@@ -120,5 +129,6 @@ def _first_note(jar: JarCalibration) -> str:
     days = jar.first_day if jar.first_day == jar.last_day else f"{jar.first_day} to {jar.last_day}"
     plural = "" if jar.jars == 1 else "s"
     return (
-        f"jar tests of {days} ({jar.results}, {jar.jars} jar{plural}) set dose factors and floors"
+        f"jar tests of {days} ({jar.results}, {jar.jars} jar{plural}) set dose factors, residual"
+        " factors and floors"
     )

@@ -13,9 +13,11 @@ import yaml
 from numpy.typing import NDArray
 
 from chemistry import System, equilibrate
+from chemistry.calibration import FactorFit
 from chemistry.feed import feed_water
 from chemistry.state import EquilibriumState
 from optimiser import load_site
+from optimiser.jar_file import JarCalibration, Span
 from optimiser.outcome import Outcome
 from optimiser.site import Site
 
@@ -190,6 +192,19 @@ def price_book(offers: tuple[tuple[Any, ...], ...]) -> str:
 def own(*limits: Mapping[str, Any]) -> Tree:
     """Return the change that gives a site these limits and no others."""
     return {"limits": {"own": [{"source": "invented", **limit} for limit in limits]}}
+
+
+def with_factors(site: Site, **factors: float | tuple[float, float, float]) -> Site:
+    """The site as if jar tests had found residual factors for some metals."""
+    fits = {}
+    for metal, found in factors.items():
+        factor, low, high = found if isinstance(found, tuple) else (found, found / 2, found * 2)
+        fits[metal] = FactorFit(factor=factor, low=low, high=high, scatter_ln=0.2, jars=5)
+    calibration = JarCalibration(
+        results="bench.csv", first_day="2026-03-02", last_day="2026-03-02", jars=5, confidence=0.9,
+        ph=Span(low=7.0, high=11.0), residual_factors=fits,
+    )  # fmt: skip
+    return replace(site, jar=calibration)
 
 
 # -- chemistry by hand --------------------------------------------------------------------------

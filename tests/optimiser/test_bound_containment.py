@@ -27,6 +27,7 @@ from tests.optimiser.small_sites import (
     SULFATE,
     SULFIDE,
     small_site,
+    with_factors,
 )
 
 FloatArray = NDArray[np.float64]
@@ -138,6 +139,10 @@ def test_random_points_of_small_sites_lie_in_their_cells(
     changes: tuple[dict[str, object], ...], least: int
 ) -> None:
     assert contained(small_site(*changes), 8, 7) >= least
+
+
+def test_random_points_of_a_site_with_factors_of_jar_tests_lie_in_their_cells() -> None:
+    assert contained(with_factors(small_site(), Cu=0.2, Zn=4.0), 8, 7) >= 5
 
 
 FINE_FILTER: dict[str, object] = {"treatment": {"separator": {"tss_mg_per_l": 0.05}}}
