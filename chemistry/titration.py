@@ -43,11 +43,13 @@ class Titration:
     """Doses (n,) in units of the reagent per litre, and the states of the dosed waters.
 
     ``reached`` tells which waters hold the pH; a dose is 0 where no positive dose brings it there.
+    ``failed`` tells where that is not known, because a state on the way could not be solved.
     """
 
     dose: FloatArray
     state: EquilibriumState
     reached: BoolArray
+    failed: BoolArray
 
 
 @dataclass(slots=True)
@@ -150,6 +152,7 @@ class _Work:
         self.dose = np.zeros(n)
         self.reached = np.zeros(n, dtype=bool)
         self.hopeless = np.zeros(n, dtype=bool)
+        self.failed = np.zeros(n, dtype=bool)
         self.orient = np.zeros(n)
         self.iterate = StartValues(
             totals, np.zeros((n, count)), np.zeros((n, system.activity_model.width)),
@@ -279,6 +282,7 @@ class _Work:
         near = (size <= BALANCE_TOLERANCE) | (same & (size < 1e-9))
         self.reached[rows] = near & ~(lost & ~near)
         self.hopeless[rows] = lost & ~near
+        self.failed[rows] = ~state.converged & ~near & ~beyond
         self.dose[rows] = np.where(near | lost, dose, new)
 
     def result(self) -> Titration:
@@ -287,7 +291,11 @@ class _Work:
         dosed = self.totals + dose[:, None] * self.vectors
         known = self.reached | self.iterate.resting
         state = certified_or_solved(self.system, dosed, self.iterate, known)
-        return Titration(dose / self.size, state, self.reached & state.converged)
+        open_rows = ~self.reached & ~self.hopeless
+        return Titration(
+            dose / self.size, state, self.reached & state.converged,
+            failed=self.failed | open_rows | ~state.converged,
+        )  # fmt: skip
 
 
 def _inside(

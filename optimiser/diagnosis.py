@@ -38,6 +38,8 @@ def explain_no_plan(evaluator: Evaluator, findings: Findings, solver: SolverPort
     the least misses are polished to the nearest miss, where the largest miss is as small as can be:
     the checks that stand at it there are the ones that clash.
     """
+    failed = evaluator.plant.states_failed
+    solved = evaluator.plant.states_solved
     if not findings.best:
         return _nothing_to_try(evaluator, findings, solver)
     checks = evaluator.judge.checks
@@ -66,13 +68,25 @@ def explain_no_plan(evaluator: Evaluator, findings: Findings, solver: SolverPort
     message = (
         f"no plan: none of the {len(findings.recipes_examined)} recipes examined meets every limit"
     )
-    reasons = _reasons(evaluator, clashes, seen, point)
+    reasons = []
+    if failed:
+        message = message.replace("no plan:", "no plan was found:")
+        reasons.append(unsolved(failed, solved))
+    reasons += _reasons(evaluator, clashes, seen, point)
     reasons += _broken_where_lowest(evaluator, findings, missed)
     return NoPlan(
         message, reasons=reasons, clashes=clashes,
         relaxations=lambda: _quietly(lambda: relaxations(evaluator, findings, solver, clashing)),
         openers=lambda: _quietly(lambda: openers(evaluator, findings, solver)),
     )  # fmt: skip
+
+
+def unsolved(failed: int, solved: int) -> str:
+    """Say that states could not be solved, so that a plan is not ruled out."""
+    return (
+        f"{failed:,} of {solved:,} equilibrium states could not be solved and counted as misses, "
+        "so that a plan is not ruled out"
+    )
 
 
 def _quietly(look: Callable[[], list[dict[str, Any]]]) -> list[dict[str, Any]]:
@@ -118,6 +132,10 @@ def _nothing_to_try(evaluator: Evaluator, findings: Findings, solver: SolverPort
     if tried:
         reasons.append(f"none of the {tried} recipes reaches a set point in there")
     message = "no plan: no set point and doses are left inside the site's windows and rules"
+    plant = evaluator.plant
+    if plant.states_failed:
+        message = message.replace("no plan:", "no plan was found:")
+        reasons.insert(0, unsolved(plant.states_failed, plant.states_solved))
     return NoPlan(
         message, reasons=reasons,
         openers=lambda: _quietly(lambda: openers(evaluator, findings, solver)),

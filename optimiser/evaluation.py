@@ -146,6 +146,7 @@ class _Before:
         state = equilibrate(plant.system, mixed, on_failure="flag", start=start)
         self.seen.before[label] = (some, state)
         plant.states_solved += some.size
+        plant.states_failed += int(np.count_nonzero(~state.converged))
         ph = np.where(state.converged, state.ph, np.nan)
         slope = np.zeros((some.size, 1 + len(plant.names)))
         used = np.flatnonzero((kept > 0.0).any(axis=0))

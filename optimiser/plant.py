@@ -59,7 +59,7 @@ class Plant:
         excess = np.where(self.slurry, 0.0, 1.0 - 1.0 / self.factors)
         self.surplus = self.vectors * excess[:, None]
         self.surplus[:, self.system.index["H+"]] = 0.0
-        self.states_solved = 0
+        self.states_solved = self.states_failed = 0
 
     def dose_factor(self, reagent: Reagent) -> float:
         """Fed over reacting: the site's own factor, else the reagent's."""
@@ -225,10 +225,12 @@ class Plant:
     ) -> tuple[EquilibriumState, FloatArray, BoolArray, BoolArray]:  # fmt: skip
         """States, controller doses, which rows it holds, and which are as they should be."""
         controlled = (vectors != 0.0).any(axis=1)
-        dose, held = np.zeros(totals.shape[0]), np.zeros(totals.shape[0], dtype=bool)
+        dose = np.zeros(totals.shape[0])
+        held, failed = np.zeros((2, totals.shape[0]), dtype=bool)
         if controlled.all():
             result = titrate(system, totals, ph, vectors, start=start, upward=upward)
             state, dose, held = result.state, result.dose, result.reached
+            failed = result.failed
         else:
             if controlled.any():
                 begin = start.rows(controlled) if start is not None else None
@@ -237,8 +239,10 @@ class Plant:
                     upward=upward[controlled],
                 )  # fmt: skip
                 dose[controlled], held[controlled] = part.dose, part.reached
+                failed[controlled] = part.failed
             dosed = totals + dose[:, None] * vectors
             state = equilibrate(system, dosed, on_failure="flag", start=start)
+        self.states_failed += int(np.count_nonzero(failed | ~state.converged))
         overshot = np.where(upward, state.ph > ph, state.ph < ph)
         return state, dose, held, state.converged & (held | ~controlled | overshot)
 
@@ -278,6 +282,7 @@ class Plant:
             self.liquid_system, mixed, pco2_atm=self.treatment.vent_pco2_atm, on_failure="flag"
         )
         unknown[dosed] = ~state.converged
+        self.states_failed += int(np.count_nonzero(unknown))
         gone = mixed[:, carbonate] - state.totals[:, carbonate]
         lost[dosed] = np.where(state.converged, np.clip(gone, 0.0, mixed[:, carbonate]), 0.0)
         share = np.clip(lost[dosed] / np.maximum(added[:, carbonate], 1e-12), 0.0, 1.0)
@@ -319,6 +324,7 @@ class Plant:
             )  # fmt: skip
             dose[work] = result.dose
             missing[work] |= ~result.reached
+            self.states_failed += int(np.count_nonzero(result.failed))
         trimmed = (dose > 0.0) & ~missing & block.reached
         some = np.flatnonzero(trimmed)
         if not some.size:
@@ -331,6 +337,7 @@ class Plant:
             start=StartValues.of(block.state).rows(some).without_solids(),
         )  # fmt: skip
         missing[some] |= ~state.converged
+        self.states_failed += int(np.count_nonzero(~state.converged))
         block = replace(
             block, trim_dose=np.where(trimmed, dose, 0.0), effluent=effluent, trimmed=trimmed,
             trim_state=state, trim_missing=missing,

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from optimiser.errors import SolverFault
 from optimiser.evaluation import Evaluator, Place
 from optimiser.points import Points
 from optimiser.polish_step import (
@@ -22,7 +23,7 @@ from optimiser.polish_step import (
     cost_unit,
     in_cost_units,
 )
-from optimiser.solver import SolverPort
+from optimiser.solver import SolverPort, Termination
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -213,15 +214,23 @@ def _rest_dear(tracks: list[Track], rival: float) -> None:
 def step(
     evaluator: Evaluator, track: Track, solver: SolverPort, bounds: Bounds, *, inward: float = 0.0
 ) -> Points | None:
-    """Solve one linearised step from a track's point; None where the model has no solution.
+    """Solve one linearised step from a track's point; None where the time limit leaves none.
 
     ``inward`` asks the checks to hold by that much more than the usual back-off.
+
+    Raises
+    ------
+    SolverFault
+        The solver finds no solution: staying at the point is always one.
     """
     seen, row = track.place.seen, track.place.point
     model = build_step(
         evaluator, seen, row, track.radius, bounds, inward=inward, miss_only=track.patient
     )
     report = solver.solve(in_cost_units(model, cost_unit(seen, row)))
+    if report.termination in {Termination.INFEASIBLE, Termination.UNBOUNDED}:
+        said = "found no best solution where staying at the point is a solution of finite cost"
+        raise SolverFault(report.solver, model.name, said)
     if not report.termination.has_solution:
         return None
     point = seen.points.take([row])

@@ -25,6 +25,7 @@ BACK_OFF = 2e-6  # ratios are brought to minus this, so that rounding does not b
 ROWS_PER_STEP = 40
 NEAR_RATIO = -1.5
 NEAR_WORST = 0.7  # rows of a check further than this below its worst are left out
+MOST_MISSED = 60.0
 PENALTY = 20.0  # cost of a unit of ratio, as a multiple of the point's cost
 SET_POINT_STEP = 0.6  # pH per unit of radius
 
@@ -55,7 +56,7 @@ def build_step(
     """
     model = Model("polish step")
     moves = _add_moves(model, evaluator, seen.points, row, radius, bounds)
-    model.add_variable("miss", high=60.0)
+    model.add_variable("miss", high=MOST_MISSED)
     _add_checks(model, seen, row, moves, BACK_OFF + inward)
     if miss_only:
         model.add_cost("miss", Expression({"miss": 1.0}))
@@ -150,7 +151,7 @@ def _add_checks(
             f"{labels[k]} row {number}",
             terms,
             Sense.AT_MOST,
-            -back_off - float(ratio[k]) - constant,
+            -back_off - min(float(ratio[k]), MOST_MISSED - back_off) - constant,
         )
 
 
