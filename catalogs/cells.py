@@ -17,6 +17,7 @@ class Cell:
 
     ``stamp`` is the date that a workbook stores behind it; ``trouble`` says why the cell holds no
     value that can be read (a formula without a stored value, a cell inside a merged block).
+    ``is_percent`` marks a number that its workbook shows times 100 with a per cent sign.
     """
 
     text: str
@@ -25,6 +26,7 @@ class Cell:
     stamp: datetime.datetime | None = None
     is_number: bool = False
     trouble: str = ""
+    is_percent: bool = False
 
     @property
     def is_blank(self) -> bool:

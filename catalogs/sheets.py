@@ -22,7 +22,14 @@ _WORKBOOKS = (".xlsx", ".xlsm")
 _OTHER_WORKBOOKS = (".xls", ".xlsb", ".ods", ".numbers")
 
 
-def load_sheet(path: Path, log: ProblemLog, *, sheet: str = "", name: str = "") -> Sheet | None:
+def is_workbook(path: Path) -> bool:
+    """Tell by its ending whether a file is a workbook, of a kind that can be read or not."""
+    return path.suffix.lower() in (*_WORKBOOKS, *_OTHER_WORKBOOKS)
+
+
+def load_sheet(
+    path: Path, log: ProblemLog, *, sheet: str = "", name: str = "", usual: str = ""
+) -> Sheet | None:
     """Read one table from a CSV file or an XLSX workbook.
 
     Parameters
@@ -35,6 +42,8 @@ def load_sheet(path: Path, log: ProblemLog, *, sheet: str = "", name: str = "") 
         Sheet of a workbook; may be left out where only one holds anything.
     name
         How messages call the file; the path when empty.
+    usual
+        Sheet of a workbook that is read where none is named and it is there.
 
     Returns
     -------
@@ -50,7 +59,7 @@ def load_sheet(path: Path, log: ProblemLog, *, sheet: str = "", name: str = "") 
     if ending in _WORKBOOKS:
         from catalogs.workbooks import load_workbook_sheet
 
-        return load_workbook_sheet(path, spot, sheet)
+        return load_workbook_sheet(path, spot, sheet, usual)
     if sheet:
         spot.problem(f"sheet {sheet!r} of a plain file", "a workbook", "Leave out `sheet`.")
     return _load_csv_sheet(path, log, shown)

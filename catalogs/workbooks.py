@@ -33,7 +33,7 @@ _DAMAGE = (
 )  # fmt: skip
 
 
-def load_workbook_sheet(path: Path, spot: Spot, sheet: str) -> Sheet | None:
+def load_workbook_sheet(path: Path, spot: Spot, sheet: str, usual: str = "") -> Sheet | None:
     """Read one sheet of a workbook; None when a problem was recorded.
 
     Parameters
@@ -44,6 +44,8 @@ def load_workbook_sheet(path: Path, spot: Spot, sheet: str) -> Sheet | None:
         The file's place, with the log that takes the problems.
     sheet
         Name of the sheet; may be empty where only one sheet holds anything.
+    usual
+        Sheet that is read where none is named and it is there.
     """
     if not _may_be_opened(path, spot):
         return None
@@ -51,7 +53,7 @@ def load_workbook_sheet(path: Path, spot: Spot, sheet: str) -> Sheet | None:
     if opened is None:
         return None
     values, formulas = opened
-    name = _choose(values, sheet, spot)
+    name = _choose(values, sheet, usual, spot)
     if not name:
         return None
     stored, written = values[name], formulas[name]
@@ -118,9 +120,10 @@ def _open(path: Path, spot: Spot) -> tuple[Workbook, Workbook] | None:
         return None
 
 
-def _choose(book: Workbook, wanted: str, spot: Spot) -> str:
+def _choose(book: Workbook, wanted: str, usual: str, spot: Spot) -> str:
     """Name of the sheet to read; empty when a problem was recorded."""
     names = [sheet.title for sheet in book.worksheets]
+    wanted = wanted or (usual if usual in names else "")
     if wanted:
         if wanted in names:
             if _is_empty(book[wanted]):
@@ -141,7 +144,9 @@ def _choose(book: Workbook, wanted: str, spot: Spot) -> str:
         spot.problem(
             f"{len(filled)} sheets with content ({listed(filled)})",
             "one sheet, or the name of the one to read",
-            f"Write `sheet: {filled[0]}` under `samples`.",
+            f"Name the sheet to read `{usual}`."
+            if usual
+            else f"Write `sheet: {filled[0]}` under `samples`.",
         )
     else:
         spot.problem("only empty sheets", "a header row and samples", "Check the file.")
@@ -159,9 +164,7 @@ def _is_empty(sheet: Worksheet) -> bool:
 def _sheet(name: str, stored: Worksheet, written: Worksheet, spot: Spot) -> Sheet:
     merged = _merged_cells(written)
     rows: list[tuple[Cell, ...]] = []
-    for values, texts in zip(
-        stored.iter_rows(values_only=True), written.iter_rows(values_only=True), strict=True
-    ):
+    for values, texts in zip(stored.iter_rows(values_only=True), written.iter_rows(), strict=True):
         number = len(rows) + 1
         cells = [
             _cell(value, text, number, column, is_merged=(number, column) in merged)
@@ -188,7 +191,7 @@ def _merged_cells(sheet: Worksheet) -> dict[tuple[int, int], str]:
 
 
 def _cell(value: Any, written: Any, row: int, column: int, *, is_merged: bool) -> Cell:
-    is_formula = isinstance(written, str) and written.startswith("=")
+    is_formula = isinstance(written.value, str) and written.value.startswith("=")
     trouble = MERGED if is_merged else ""
     if value is None:
         if is_formula:
@@ -199,7 +202,9 @@ def _cell(value: Any, written: Any, row: int, column: int, *, is_merged: bool) -
     if isinstance(value, bool):
         return Cell(str(value).upper(), row, column, trouble=trouble)
     if isinstance(value, (int, float)):
-        return Cell(f"{value:.15g}", row, column, is_number=True, trouble=trouble)
+        percent = "%" in written.number_format
+        text = f"{value:.15g}"
+        return Cell(text, row, column, is_number=True, trouble=trouble, is_percent=percent)
     return Cell(_printable(str(value)), row, column, trouble=trouble)
 
 

@@ -298,6 +298,8 @@ def _offers(options: argparse.Namespace) -> int:
     from optimiser.site_comparison import compare_site_offers
 
     site = _load(options, use_expired=options.expired)
+    if options.write is not None:
+        return _write_book(site, options)
     demand = given_doses(options.demand)
     for key in demand:
         if key.partition("@")[0] not in site.reagents:
@@ -307,6 +309,15 @@ def _offers(options: argparse.Namespace) -> int:
     if options.csv is not None:
         found.to_frame().to_csv(options.csv, index=False, lineterminator="\n")
     _print(found.to_dict(), options.json, offers_text)
+    return DONE
+
+
+def _write_book(site: Site, options: argparse.Namespace) -> int:
+    from optimiser.book_writer import book_of_site, load_rows, write_book
+
+    book = load_rows(book_of_site(site.path), currency=site.currency)
+    write_book(options.write, book, force=options.force)
+    sys.stdout.write(f"{options.write}\n")
     return DONE
 
 
@@ -322,9 +333,10 @@ def _print(
 def _jar(options: argparse.Namespace) -> int:
     from catalogs import load_reagents
     from optimiser.bench_sheet import load_bench_sheet
-    from optimiser.jar_file import calibration_text, refuse_to_overwrite, write_calibration
+    from optimiser.jar_file import calibration_text, write_calibration
     from optimiser.jar_tests import compare_jars
     from optimiser.render_jar import jar_table, jar_text
+    from optimiser.whole_files import refuse_to_overwrite
 
     site = _load(options)
     target = site.path.parent / options.out
@@ -349,7 +361,7 @@ def _check(options: argparse.Namespace) -> int:
 def _new(options: argparse.Namespace) -> int:
     from optimiser.starter import write_starter
 
-    for path in write_starter(options.directory):
+    for path in write_starter(options.directory, workbook=options.xlsx):
         sys.stdout.write(f"{path}\n")
     return DONE
 

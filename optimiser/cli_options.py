@@ -145,6 +145,9 @@ def build_parser() -> argparse.ArgumentParser:
         site=False,
     )  # fmt: skip
     new.add_argument("directory", metavar="DIR", type=Path, help="folder to write; made if absent")
+    new.add_argument(
+        "--xlsx", action="store_true", help="write the price book as a workbook with drop-downs"
+    )
     return parser
 
 
@@ -336,6 +339,12 @@ def _add_offers(commands: _Commands) -> None:
     parser.add_argument(
         "--csv", metavar="FILE", type=Path, help="write the ranking to FILE as well"
     )
+    parser.add_argument(
+        "--write", metavar="BOOK", type=_book_name,
+        help="write the site's price book to BOOK (.xlsx or .csv) and leave: a workbook has "
+        "drop-downs and tells what each column means",
+    )  # fmt: skip
+    parser.add_argument("--force", action="store_true", help="replace BOOK if it is there")
     _add_json(parser)
 
 
@@ -355,6 +364,12 @@ def _add_jar(commands: _Commands) -> None:
     )  # fmt: skip
     parser.add_argument("--force", action="store_true", help="replace that file if it is there")
     _add_json(parser)
+
+
+def _book_name(text: str) -> Path:
+    if Path(text).suffix.lower() not in (".xlsx", ".csv"):
+        raise argparse.ArgumentTypeError(f"expected a name ending in .xlsx or .csv, found {text!r}")
+    return Path(text)
 
 
 def _file_name(text: str) -> str:

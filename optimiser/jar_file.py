@@ -6,9 +6,6 @@ them `optimiser.site_jar`.
 
 from __future__ import annotations
 
-import errno
-import os
-import tempfile
 from collections.abc import Collection, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -17,6 +14,7 @@ from catalogs.entries import NON_NEGATIVE, PH, POSITIVE, Entry, Range
 from catalogs.positions import load_yaml
 from catalogs.problems import ProblemLog
 from chemistry.calibration import FactorFit
+from optimiser.whole_files import write_whole
 
 JAR_FILE = "jar.yaml"
 _RATE = Range(above=0.0, high=1.0)
@@ -171,26 +169,7 @@ def write_calibration(path: Path, text: str, *, force: bool = False) -> None:
     OSError
         The folder cannot be written to; nothing was left behind.
     """
-    refuse_to_overwrite(path, force=force)
-    handle, name = tempfile.mkstemp(prefix=f".{path.name}.", dir=path.parent)
-    staged = Path(name)
-    try:
-        with os.fdopen(handle, "w", encoding="utf-8", newline="\n") as stream:
-            stream.write(text)
-        staged.chmod(0o644)
-        staged.replace(path)
-    except BaseException:
-        staged.unlink(missing_ok=True)
-        raise
-
-
-def refuse_to_overwrite(path: Path, *, force: bool) -> None:
-    """Raise FileExistsError where a file would be overwritten without being asked to."""
-    if path.exists() and not force:
-        raise FileExistsError(
-            errno.EEXIST, "is already there; nothing was written. Use --force to replace it",
-            str(path),
-        )  # fmt: skip
+    write_whole(path, text.encode(), force=force)
 
 
 def read_calibration(

@@ -1,4 +1,4 @@
-"""The price book: reading ``offers.csv`` into offers, every row checked.
+"""The price book: reading a CSV file or a workbook into offers, every row checked.
 
 Owns how rows make offers: one row each, further rows of the same offer for its further tiers. A row
 is read by `optimiser.offer_rows`, whatever kind of table it stands in.
@@ -12,7 +12,7 @@ from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 from catalogs.entries import Entry
-from catalogs.positions import Table, load_csv
+from catalogs.positions import load_csv
 from catalogs.problems import ProblemLog, Spot, echo
 from catalogs.reagents import Reagent, load_reagents
 from optimiser.offer import Offer, Tier
@@ -36,8 +36,8 @@ def load_offers(path: str | Path, *, currency: str = "") -> tuple[Offer, ...]:
     Parameters
     ----------
     path
-        A comma-separated file with the columns `OFFER_COLUMNS`, and of `TERM_COLUMNS` those that
-        some offer needs.
+        A comma-separated file or a workbook (``.xlsx``, sheet ``offers``) with the columns
+        `OFFER_COLUMNS`, and of `TERM_COLUMNS` those that some offer needs.
     currency
         The currency that costs are wanted in; offers in another one need a dated rate.
 
@@ -66,12 +66,24 @@ def read_offers(
     tuple
         The sound offers, and every reagent that some row offers, sound or not.
     """
+    return offers_of_rows(book_entries(path, log), reagents, log, currency=currency)
+
+
+def book_entries(path: Path, log: ProblemLog) -> Iterable[Entry]:
+    """Rows of a price book, a CSV file or a workbook, each with the places of its cells."""
+    if path.suffix.lower() != ".csv":
+        from catalogs.sheets import is_workbook
+
+        if is_workbook(path):
+            from optimiser.book_reader import sheet_entries
+
+            return sheet_entries(path, log)
     rows = load_csv(path, OFFER_COLUMNS, log, optional=TERM_COLUMNS)
-    return offers_of_rows(rows, str(path), reagents, log, currency=currency)
+    return [Entry.top(row, str(path), log) for row in rows]
 
 
 def offers_of_rows(
-    rows: Iterable[Table], file: str, reagents: Mapping[str, Reagent], log: ProblemLog,
+    entries: Iterable[Entry], reagents: Mapping[str, Reagent], log: ProblemLog,
     *, currency: str = "",
 ) -> tuple[tuple[Offer, ...], frozenset[str]]:  # fmt: skip
     """Make offers of the rows of a table, recording problems in a log.
@@ -83,16 +95,15 @@ def offers_of_rows(
     """
     drafts: dict[str, _Draft] = {}
     sold: set[str] = set()
-    for row in rows:
+    for entry in entries:
         before = len(log.problems)
-        entry = Entry.top(row, file, log)
         name = entry.text_or("offer")
         if name in drafts and not entry.has("reagent") and entry.has("tier_from_t"):
             _add_tier(drafts[name], entry)
             drafts[name].sound &= len(log.problems) == before
             continue
         offer = read_offer(entry, reagents, currency)
-        draft = _Draft(offer, row.line, entry.spot, tier_cells(entry))
+        draft = _Draft(offer, entry.spot.line, entry.spot, tier_cells(entry))
         entry.finish()
         sold.add(offer.reagent)
         if offer.offer in drafts:
