@@ -23,15 +23,14 @@ from chemistry.kernel import Kernel
 from chemistry.newton import finish
 from chemistry.system import LN10
 
-CHUNK_STATES = 1024
-
 
 def solve(kernel: Kernel, batch: Batch) -> None:
     """Solve a batch in place: cold start, then slower settings for the rows that failed."""
     # a row that overflows is caught by its certificate, so numpy need not warn of it
     with np.errstate(all="ignore"):
-        for begin in range(0, batch.totals.shape[0], CHUNK_STATES):
-            rows = np.arange(begin, min(begin + CHUNK_STATES, batch.totals.shape[0]))
+        count, at_once = batch.totals.shape[0], kernel.rows_at_once
+        for begin in range(0, count, at_once):
+            rows = np.arange(begin, min(begin + at_once, count))
             part = batch.take(rows)
             start(kernel, part)
             interior(kernel, part)
@@ -94,11 +93,7 @@ def _finish_by_scarcest(kernel: Kernel, batch: Batch) -> None:
 def solve_warm(kernel: Kernel, batch: Batch) -> None:
     """Solve from the iterate already in the batch; rows that fail start cold."""
     with np.errstate(all="ignore"):
-        for begin in range(0, batch.totals.shape[0], CHUNK_STATES):
-            rows = np.arange(begin, min(begin + CHUNK_STATES, batch.totals.shape[0]))
-            part = batch.take(rows)
-            finish(kernel, part)
-            batch.put(rows, part)
+        finish(kernel, batch)
     rows = np.flatnonzero(~batch.converged)
     if rows.size:
         cold = _afresh(kernel, batch, rows)

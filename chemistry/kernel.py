@@ -14,6 +14,7 @@ from chemistry.gas import CO2_SPECIES
 from chemistry.system import System
 
 LN_MOLALITY_CAP = 30.0
+BYTES_AT_ONCE = 4_000_000  # of a batch's matrices, so that any number of waters fits in memory
 
 
 class Kernel:
@@ -30,6 +31,8 @@ class Kernel:
         self.functionals = self.model.functionals
         self.solid_water = system.solid_water
         count = len(system.components)
+        size = count + 0.5 * min(count, len(system.solids))  # of a matrix with its present solids
+        self.rows_at_once = max(8, int(BYTES_AT_ONCE / (8.0 * size**2)))
         self.upper = np.triu_indices(count)
         self.pairs, self.pair_cells = _pairs(self.formation, self.upper)
         self.solid_pairs, self.solid_cells = _pairs(self.solid_formation, self.upper)

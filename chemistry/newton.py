@@ -61,6 +61,15 @@ def finish(
     exchange_rounds: int = EXCHANGE_ROUNDS,
 ) -> None:  # fmt: skip
     """Exact state by Newton steps with exchange of solids, in place."""
+    count = batch.totals.shape[0]
+    for begin in range(0, count, kernel.rows_at_once):
+        rows = np.arange(begin, min(begin + kernel.rows_at_once, count))
+        part = batch.take(rows)
+        _finish(kernel, part, newton_rounds, exchange_rounds)
+        batch.put(rows, part)
+
+
+def _finish(kernel: Kernel, batch: Batch, newton_rounds: int, exchange_rounds: int) -> None:
     keep_independent(kernel, batch)
     batch.converged[:] = False
     work = _Work(kernel, batch)

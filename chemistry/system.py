@@ -281,6 +281,11 @@ class System:
             water=self.water, interactions=self.interactions,
         )  # fmt: skip
 
+    @cached_property
+    def liquid(self) -> System:
+        """The same system without candidate solids."""
+        return self.narrowed(solids=())
+
     def _row(self, stoichiometry: Mapping[str, float]) -> FloatArray:
         row = np.zeros(len(self.components))
         for name, count in stoichiometry.items():

@@ -250,14 +250,18 @@ class _Work:
         rows = self.open_rows
         if not rows.size:
             return
-        bare = self.system.narrowed(solids=())
-        others = self.vectors[rows].copy()
+        kinds, same = np.unique(
+            np.concatenate([self.ph[rows, None], self.vectors[rows]], axis=1),
+            axis=0, return_inverse=True,
+        )  # fmt: skip
+        others = kinds[:, 1:].copy()
         others[:, self.proton] = 0.0
-        ph = np.concatenate([self.ph[rows], self.ph[rows]])
+        ph = np.concatenate([kinds[:, 0], kinds[:, 0]])
         amounts = np.concatenate([PROBE_MOL_PER_L * others, 2.0 * PROBE_MOL_PER_L * others])
-        held = equilibrate(bare, amounts, ph, on_failure="flag").totals[:, self.proton]
-        taken = (held[rows.size :] - held[: rows.size]) / PROBE_MOL_PER_L
-        effect = taken - self.vectors[rows, self.proton]
+        held = equilibrate(self.system.liquid, amounts, ph, on_failure="flag")
+        needed = held.totals[:, self.proton]
+        taken = (needed[len(kinds) :] - needed[: len(kinds)]) / PROBE_MOL_PER_L
+        effect = (taken - kinds[:, 1 + self.proton])[same.ravel()]
         self.orient[rows] = np.where(effect < 0.0, -1.0, 1.0)
         self.hopeless[rows] |= np.abs(effect) < 1e-6
 

@@ -85,7 +85,7 @@ class Plant:
     @cached_property
     def liquid_system(self) -> System:
         """The system without solids: the separated water."""
-        return self.system.narrowed(solids=())
+        return self.system.liquid
 
     @cached_property
     def co2(self) -> FloatArray:

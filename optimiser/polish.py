@@ -82,24 +82,25 @@ class Track:
 
 
 def polish(
-    evaluator: Evaluator, starts: Points, solver: SolverPort, *, bounds: Bounds,
+    evaluator: Evaluator, starts: Points | Sequence[Place], solver: SolverPort, *, bounds: Bounds,
     steps: int = MOST_STEPS, radius: float = FIRST_RADIUS, rival: float | None = np.inf,
     near: Sequence[Place] | None = None,
 ) -> list[Track]:  # fmt: skip
     """Polish all starts side by side; returns a track for each.
 
+    Starts that are places have been evaluated in full with slopes. Once it is late by ``bounds``,
+    every track stays at the best point it has verified.
     Candidates that stay dearer than the best feasible one, or than the plan of cost ``rival`` that
     is known already, are rested early. With ``rival`` None the largest ratio counts before any cost
     and nobody is rested: the end is the nearest miss, where the checks that clash are all at it.
     """
-    seen = evaluator.evaluate(starts, slopes=True, near=near)
+    if isinstance(starts, Points):
+        seen = evaluator.evaluate(starts, slopes=True, near=near)
+        starts = [Place(seen, i) for i in range(len(starts))]
     penalty = MISS_FIRST if rival is None else PENALTY
-    tracks = [
-        Track(Place(seen, i), radius, penalty=penalty, patient=rival is None)
-        for i in range(len(starts))
-    ]
+    tracks = [Track(place, radius, penalty=penalty, patient=rival is None) for place in starts]
     for _ in range(steps):
-        if not _advance(evaluator, tracks, solver, bounds):
+        if bounds.late or not _advance(evaluator, tracks, solver, bounds):
             break
         if rival is not None:
             _rest_dear(tracks, rival)
@@ -153,7 +154,7 @@ def _restore(
         near = [t for t in tracks if not t.feasible and t.violation < HOPELESS_RATIO]
         pairs = [(t, _inward(evaluator, t, solver, bounds)) for t in near]
         moving = [(track, trial) for track, trial in pairs if trial is not None]
-        if not moving:
+        if not moving or bounds.late:
             return
         tried = evaluator.evaluate(
             Points.join([trial for _, trial in moving]), slopes=True,

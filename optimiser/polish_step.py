@@ -5,6 +5,7 @@ Owns the rows and costs of the model; moving along its solutions is `optimiser.p
 
 from __future__ import annotations
 
+import time
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
@@ -32,12 +33,18 @@ SET_POINT_STEP = 0.6  # pH per unit of radius
 
 @dataclass(frozen=True, eq=False)
 class Bounds:
-    """Where set points and doses may lie."""
+    """Where set points and doses may lie, and until when they may move (`time.perf_counter`)."""
 
     ph_low: Callable[[int, FloatArray], float]
     ph_high: Callable[[int, FloatArray], float]
     dose_low: FloatArray
     dose_high: FloatArray
+    deadline: float = np.inf
+
+    @property
+    def late(self) -> bool:
+        """Whether the time is over."""
+        return time.perf_counter() > self.deadline
 
 
 def build_step(
@@ -120,7 +127,28 @@ def _linear(
 def _add_checks(
     model: Model, seen: Evaluation, row: int, moves: dict[int, tuple[str, float]], back_off: float
 ) -> None:
-    ratios, slopes, labels = [], [], []
+    ratio, slope, labels = _near_checks(seen, row)
+    order = np.argsort(-ratio, kind="stable")[:ROWS_PER_STEP]
+    finite = np.asarray(np.isfinite(slope).all(axis=1), dtype=bool)
+    # what no move inside the trust region brings to its limit is left out
+    highest = ratio + np.abs(np.where(finite[:, None], slope, 0.0)) @ _reach(model, moves, slope)
+    for number, k in enumerate(order):
+        if ratio[k] < NEAR_RATIO or not finite[k] or highest[k] < -back_off:
+            continue
+        terms, constant = _linear(np.clip(slope[k], -1e6, 1e6), moves)
+        terms["miss"] = -1.0
+        model.add_row(
+            f"{labels[k]} row {number}",
+            terms,
+            Sense.AT_MOST,
+            -back_off - min(float(ratio[k]), MOST_MISSED - back_off) - constant,
+        )
+
+
+def _near_checks(seen: Evaluation, row: int) -> tuple[FloatArray, FloatArray, list[str]]:
+    """Ratios, slopes and names of what a point comes near to, every corner and end apart."""
+    width = 1 + seen.points.doses.shape[1]
+    ratios, slopes, labels = [np.zeros(0)], [np.zeros((0, width))], []
     parts = []
     for part in seen.judged:
         mine = np.flatnonzero((seen.rows.point[part.block.rows] == row) & part.block.reached)
@@ -138,21 +166,16 @@ def _add_checks(
             labels.append(f"rule {number}")
             ratios.append(rule.ratio[row : row + 1])
             slopes.append(rule.slope[row : row + 1])
-    if not ratios:
-        return
-    ratio, slope = np.concatenate(ratios), np.concatenate(slopes)
-    order = np.argsort(-ratio, kind="stable")[:ROWS_PER_STEP]
-    for number, k in enumerate(order):
-        if ratio[k] < NEAR_RATIO or not np.all(np.isfinite(slope[k])):
-            continue
-        terms, constant = _linear(np.clip(slope[k], -1e6, 1e6), moves)
-        terms["miss"] = -1.0
-        model.add_row(
-            f"{labels[k]} row {number}",
-            terms,
-            Sense.AT_MOST,
-            -back_off - min(float(ratio[k]), MOST_MISSED - back_off) - constant,
-        )
+    return np.concatenate(ratios), np.concatenate(slopes), labels
+
+
+def _reach(model: Model, moves: dict[int, tuple[str, float]], slope: FloatArray) -> FloatArray:
+    """Farthest move of each column that the variables' ranges allow, (1 + reagents,)."""
+    reach = np.zeros(slope.shape[1])
+    for column, (key, here) in moves.items():
+        variable = model.variables[key]
+        reach[column] = max(here - variable.low, variable.high - here)
+    return reach
 
 
 def _add_amounts(

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -116,10 +116,10 @@ class Search:
     ) -> None:  # fmt: skip
         self.evaluator = evaluator
         self.solver = solver
-        self.bounds: Bounds = set_point_bounds(evaluator)
+        deadline = time.perf_counter() + time_limit_s
+        self.bounds: Bounds = replace(set_point_bounds(evaluator), deadline=deadline)
         self.findings = Findings()
         self.progress = progress or (lambda _text: None)
-        self.deadline = time.perf_counter() + time_limit_s
 
     def run(self) -> Findings:
         """Propose, polish and settle; see the module."""
@@ -144,7 +144,7 @@ class Search:
         return self.findings
 
     def _late(self) -> bool:
-        late = time.perf_counter() > self.deadline
+        late = self.bounds.late
         self.findings.stopped_early |= late
         return late
 
@@ -162,6 +162,8 @@ class Search:
         """Evaluate grids at the nominal state and return each recipe's best starts."""
         starts: list[Place] = []
         for chunk in _chunks(grids, GRID_CHUNK):
+            if self._late():
+                break
             joined = Points.join([g for _, g in chunk])
             seen = self.evaluator.evaluate(joined, full=False)
             self.findings.cells_examined += len(joined)
@@ -189,9 +191,11 @@ class Search:
         if not starts:
             return
         joined = Points.join([place.seen.points.take([place.point]) for place in starts])
-        seen = self.evaluator.evaluate(joined, near=starts)
+        seen = self.evaluator.evaluate(joined, near=starts, slopes=True)
         self.findings.cells_examined += len(joined)
         self.findings.note_values(seen)
+        for row in range(len(joined)):
+            self._keep(Track(Place(seen, row)))
         order = self._worth_polishing(seen, np.argsort(self._merit(seen), kind="stable"))
         for begin in range(0, order.size, POLISHED_AT_ONCE):
             if self._late():
@@ -201,21 +205,23 @@ class Search:
                 return
             self.progress(f"polishing {batch.size} starts")
             tracks = polish(
-                self.evaluator, joined.take(batch), self.solver, bounds=self.bounds,
-                rival=self._best_total(), near=[Place(seen, int(i)) for i in batch],
+                self.evaluator, [Place(seen, int(i)) for i in batch], self.solver,
+                bounds=self.bounds, rival=self._best_total(),
             )  # fmt: skip
             for track in tracks:
                 self.findings.cells_examined += track.steps
-                self.findings.keep(recipe_of(self.evaluator.plant, track.point, 0), track)
+                self._keep(track)
+            if self._late():
+                return
+
+    def _keep(self, track: Track) -> None:
+        self.findings.keep(recipe_of(self.evaluator.plant, track.point, 0), track)
 
     def _worth_polishing(self, seen: Evaluation, order: IntArray) -> IntArray:
-        """Leave starts that miss by far where enough others are near; they are kept as they are."""
+        """Leave starts that miss by far where enough others are near."""
         far = seen.violation[order] > FAR_RATIO
         if np.count_nonzero(seen.violation < NEAR_RATIO) < ENOUGH_NEAR or not far.any():
             return order
-        for row in order[far]:
-            recipe = recipe_of(self.evaluator.plant, seen.points, int(row))
-            self.findings.keep(recipe, Track(Place(seen, int(row))))
         return order[~far]
 
     def _best_total(self) -> float:
@@ -311,7 +317,11 @@ class Search:
             starts = Points.join(
                 [Points(point.doses, point.controller, point.ph, np.array([i])) for i in others]
             )
-            for other in polish(self.evaluator, starts, self.solver, bounds=self.bounds, steps=6):
+            tried = polish(
+                self.evaluator, starts, self.solver, bounds=self.bounds, steps=6,
+                near=[track.place] * len(others),
+            )  # fmt: skip
+            for other in tried:
                 if other.feasible and other.total < best.total:
                     best = other
         return best
