@@ -10,7 +10,13 @@ from dataclasses import dataclass, field
 from enum import Enum
 from typing import Protocol
 
+import numpy as np
+from numpy.typing import NDArray
+
 from optimiser.linear_model import Model
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int32]
 
 
 class Claim(Enum):
@@ -58,4 +64,25 @@ class Backend(Protocol):
 
     def run(self, model: Model, request: SolveRequest) -> RawOutcome:
         """Solve a model with at least one variable."""
+        ...
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class LinearProgram:
+    """Ranges of variables and of rows; row ``i`` has ``column[start[i]:start[i + 1]]``."""
+
+    low: FloatArray
+    high: FloatArray
+    row_low: FloatArray
+    row_high: FloatArray
+    start: IntArray
+    column: IntArray
+    value: FloatArray
+
+
+class WarmLinear(Protocol):
+    """A linear program that is kept and solved again and again; what it says is not trusted."""
+
+    def row_prices(self, column: int, cost: float) -> FloatArray | None:
+        """Prices of the rows where ``cost`` times one variable is least, None where unsolved."""
         ...

@@ -1,6 +1,6 @@
 """Tighter intervals of a cell from its own linear relaxation: the ends of one variable at a time.
 
-Owns the linear models behind it, solved by one warm HiGHS, and the proof of every end.
+Owns the linear models behind it, kept warm by one solver, and the proof of every end.
 
 Notes
 -----
@@ -20,7 +20,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from optimiser.backend import LinearProgram
 from optimiser.linear_model import Model, Sense
+from optimiser.solver import open_warm_linear
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -47,7 +49,12 @@ class Ends:
              (most_cost - total.constant) / size)
         )  # fmt: skip
         self._matrix(rows)
-        self.solver = self._open()
+        self.solver = open_warm_linear(
+            LinearProgram(
+                low=self.low, high=self.high, row_low=self.row_low, row_high=self.row_high,
+                start=self.start, column=self.column, value=self.value,
+            )
+        )  # fmt: skip
         self.solves = 0
 
     def _least_cost(self, terms: Any) -> float:
@@ -66,24 +73,6 @@ class Ends:
         self.row_low = np.array([b if s is not Sense.AT_MOST else -np.inf for _, s, b in rows])
         self.row_high = np.array([b if s is not Sense.AT_LEAST else np.inf for _, s, b in rows])
 
-    def _open(self) -> Any:
-        import highspy
-
-        lp = highspy.HighsLp()
-        lp.num_col_, lp.num_row_ = self.low.size, self.row_low.size
-        lp.col_cost_ = np.zeros(self.low.size)
-        lp.col_lower_, lp.col_upper_ = self.low, self.high
-        lp.row_lower_, lp.row_upper_ = self.row_low, self.row_high
-        lp.a_matrix_.format_ = highspy.MatrixFormat.kRowwise
-        lp.a_matrix_.start_, lp.a_matrix_.index_ = self.start, self.column
-        lp.a_matrix_.value_ = self.value
-        solver = highspy.Highs()
-        solver.setOptionValue("output_flag", False)
-        solver.setOptionValue("threads", 1)
-        solver.setOptionValue("presolve", "off")
-        solver.passModel(lp)
-        return solver
-
     def ends(self, key: str) -> tuple[float, float]:
         """Least and largest value of a variable that the relaxation allows."""
         j = self.index[key]
@@ -92,16 +81,9 @@ class Ends:
 
     def _least(self, column: int, cost: float) -> float:
         """Proven least value of ``cost x_j``."""
-        import highspy
-
         self.solves += 1
-        solver = self.solver
-        solver.changeColCost(column, cost)
-        solver.run()
-        status = solver.getModelStatus()
-        prices = np.array(solver.getSolution().row_dual)
-        solver.changeColCost(column, 0.0)
-        if status != highspy.HighsModelStatus.kOptimal or prices.size != self.row_low.size:
+        prices = self.solver.row_prices(column, cost)
+        if prices is None:
             return -math.inf
         c = np.zeros(self.low.size)
         c[column] = cost

@@ -20,7 +20,7 @@ from optimiser.search import SETTLE_STEP, Findings, Search
 from optimiser.separators import choose_separator, separator_sites
 from optimiser.site import Site
 from optimiser.site_salt import MODEL_TEXT
-from optimiser.solver import solver_from
+from optimiser.solver import require_warm_linear, solver_from
 
 RUNNERS_UP = 5
 # Largest ionic strength planned on unless the site says otherwise, by activity model. [mol/L]
@@ -56,9 +56,13 @@ def plan(
         The water is too salty for the activity model and the site does not say to go on.
     Interrupted
         The time limit came before a verified plan was found.
+    SolverUnavailable
+        A package that the site's solver or the proof needs is missing.
     VerificationFault
         No find holds when its states are solved afresh.
     """
+    if prove_s is not None:
+        require_warm_linear()
     begun = time.perf_counter()
     evaluator, findings = find(site, progress)
     with findings.timed("runners-up"):

@@ -27,7 +27,7 @@ from optimiser.backend import Claim, RawOutcome, SolveRequest
 from optimiser.errors import SolverFault, SolverUnavailable
 from optimiser.linear_model import Model, Row, Sense
 
-_INSTALL = "Install it with: python -m pip install 'pulp[highs]>=3.3.2,<4'"
+INSTALL = "Install it with: python -m pip install 'pulp[highs]>=3.3.2,<4'"
 _THREADS = 1
 """One thread repeats to the last bit; HiGHS also keeps the number for the whole process."""
 
@@ -54,7 +54,7 @@ class HighsBackend:
         """Solve a model; see `optimiser.backend.Backend`."""
         pulp = _load_pulp(self.name)
         if not pulp.HiGHS.hscb:
-            raise SolverUnavailable("highs", "the package highspy is missing", _INSTALL)
+            raise SolverUnavailable("highs", "the package highspy is missing", INSTALL)
         translated = _Translation(pulp, model)
         program = pulp.HiGHS(
             msg=False,
@@ -127,7 +127,7 @@ class CbcBackend:
             folder = Path(name)
             program = pulp.COIN_CMD(path=path, msg=False)
             if not program.available():
-                raise SolverUnavailable("cbc", f"no program at {path}", _INSTALL)
+                raise SolverUnavailable("cbc", f"no program at {path}", INSTALL)
             program.solve_CBC = lambda problem: _run_cbc(program, problem, folder, request)
             started = time.perf_counter()
             try:
@@ -375,8 +375,8 @@ def _load_pulp(solver: str) -> Any:
     try:
         import pulp
     except ImportError as error:
-        raise SolverUnavailable(solver, "the package pulp is missing", _INSTALL) from error
+        raise SolverUnavailable(solver, "the package pulp is missing", INSTALL) from error
     if int(pulp.__version__.split(".", maxsplit=1)[0]) >= 4:
         why = f"PuLP {pulp.__version__} is installed, and 4 and later work otherwise"
-        raise SolverUnavailable(solver, why, _INSTALL)
+        raise SolverUnavailable(solver, why, INSTALL)
     return pulp

@@ -13,7 +13,14 @@ from dataclasses import dataclass, field
 from enum import Enum
 from typing import TYPE_CHECKING, Protocol
 
-from optimiser.backend import Backend, Claim, RawOutcome, SolveRequest
+from optimiser.backend import (
+    Backend,
+    Claim,
+    LinearProgram,
+    RawOutcome,
+    SolveRequest,
+    WarmLinear,
+)
 from optimiser.errors import SolverFault, SolverUnavailable, unknown_solver
 from optimiser.linear_model import FEASIBILITY_TOLERANCE, Model
 from optimiser.solution_check import (
@@ -275,6 +282,32 @@ def open_solver(
         )
     request = SolveRequest(time_limit_s=time_limit_s, relative_gap=relative_gap, seed=seed)
     return Solver(backends[name], request)
+
+
+def open_warm_linear(program: LinearProgram) -> WarmLinear:
+    """Keep a linear program ready to be solved again and again.
+
+    Raises
+    ------
+    SolverUnavailable
+        The package that does it is not installed.
+    """
+    from optimiser.highs_linear import HighsLinear
+
+    return HighsLinear(program)
+
+
+def require_warm_linear() -> None:
+    """Make sure that `open_warm_linear` can work, before long work that ends in it.
+
+    Raises
+    ------
+    SolverUnavailable
+        The package that does it is not installed.
+    """
+    from optimiser.highs_linear import require_highspy
+
+    require_highspy()
 
 
 def solver_from(settings: SolverSettings) -> Solver:

@@ -35,6 +35,17 @@ def test_a_missing_highs_is_named_with_what_to_install(site: Path) -> None:
     )
 
 
+def test_a_proof_without_highspy_is_refused_before_anything_is_searched(site: Path) -> None:
+    arranged = "sys.modules['highspy'] = None\nimport optimiser.search as s\ndel s.Search.run\n"
+    done = run("plan", site, "--solver", "cbc", "--prove", "1", "--json", arranged=arranged)
+    assert (done.returncode, done.stdout) == (2, "")
+    assert done.stderr == (
+        "dosewright: solver highs cannot be used: the package highspy is missing, and a proof "
+        "needs it whatever solver plans\n"
+        "    Install it with: python -m pip install 'pulp[highs]>=3.3.2,<4'\n"
+    )
+
+
 def test_a_missing_cbc_is_named_with_its_path(site: Path, tmp_path: Path) -> None:
     nowhere = tmp_path / "nowhere" / "cbc"
     done = run("plan", site, "--solver", "cbc", arranged=with_cbc(nowhere))

@@ -12,12 +12,15 @@ import tempfile
 import textwrap
 import time
 from pathlib import Path
+from typing import cast
 
 import pytest
 
 from optimiser import pulp_backends
 from optimiser.backend import Backend, SolveRequest
+from optimiser.bound_tighten import Ends
 from optimiser.errors import SolverFault, SolverUnavailable
+from optimiser.highs_linear import HighsLinear
 from optimiser.linear_model import Expression, Model, Sense
 from optimiser.pulp_backends import CbcBackend, HighsBackend, native_output_on_stderr
 from optimiser.site import SolverSettings
@@ -219,16 +222,32 @@ def test_two_hundred_small_models_take_less_than_two_seconds() -> None:
     assert time.process_time() - started < 2.0
 
 
-def test_only_one_module_imports_pulp() -> None:
+def test_pulp_and_highspy_are_imported_behind_the_port_alone() -> None:
     importers = set()
     for package in ("optimiser", "catalogs", "chemistry"):
         for path in (ROOT / package).rglob("*.py"):
             for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
                 names = [alias.name for alias in node.names] if isinstance(node, ast.Import) else []
                 names += [node.module or ""] if isinstance(node, ast.ImportFrom) else []
-                if any(found.split(".")[0] in {"pulp", "highspy"} for found in names):
-                    importers.add(path.name)
-    assert importers == {"pulp_backends.py"}
+                roots = {found.split(".")[0] for found in names}
+                importers |= {(path.name, root) for root in roots & {"pulp", "highspy"}}
+    assert importers == {("pulp_backends.py", "pulp"), ("highs_linear.py", "highspy")}
+
+
+def test_what_a_kept_program_writes_stays_off_the_standard_output(
+    capfd: pytest.CaptureFixture[str],
+) -> None:
+    model = Model("one")
+    x = model.add_variable("x", high=4.0)
+    model.add_row("half", {x: 2.0}, Sense.AT_LEAST, 3.0)
+    model.add_cost("goods", Expression({x: 1.0}))
+    ends = Ends(model, 3.0)
+    kept = cast(HighsLinear, ends.solver)
+    kept._solver.setOptionValue("output_flag", True)
+    assert ends.ends(x) == pytest.approx((1.5, 3.0))
+    out, err = capfd.readouterr()
+    assert out == ""
+    assert err
 
 
 def test_backends_answer_to_the_protocol() -> None:
