@@ -8,7 +8,6 @@ import re
 import shutil
 import subprocess
 import sys
-import time
 from pathlib import Path
 from typing import Any
 
@@ -80,15 +79,6 @@ def test_help_loads_no_heavy_library(arguments: list[str]) -> None:
     assert done.returncode == 0
     assert done.stderr == ""
     assert done.stdout.startswith("usage: dosewright")
-
-
-def test_help_answers_in_under_a_third_of_a_second() -> None:
-    seconds = []
-    for _ in range(3):
-        begin = time.perf_counter()
-        run("--help")
-        seconds.append(time.perf_counter() - begin)
-    assert min(seconds) < 0.3
 
 
 @pytest.mark.parametrize("name", COMMANDS)
