@@ -18,7 +18,7 @@ from optimiser.chances import DRAWS, Chances, chances_of
 from optimiser.errors import NoPlan
 from optimiser.evaluation import Evaluator, Place
 from optimiser.outcome import Plan
-from optimiser.planning import find, plan_of
+from optimiser.planning import find, finished, plan_of
 from optimiser.site import Site
 
 ROUNDS = 6
@@ -95,10 +95,11 @@ def plan_with_confidence(
 
     begun = time.perf_counter()
     trial, stopped_by = site, ""
-    evaluator, findings = find(trial, progress)
+    plain = evaluator, findings = find(trial, progress)
+    finished(evaluator, findings)
     best = findings.feasible[0][1]
     base_total, base = best.total, judged(evaluator, best.place, seed)
-    found, kept = base, (evaluator, findings)
+    found, kept = base, plain
     level = wanted
     for _ in range(ROUNDS):
         if found.probability[0] >= wanted:
@@ -112,6 +113,8 @@ def plan_with_confidence(
             break
         kept = (evaluator, findings)
         found = judged(evaluator, findings.feasible[0][1].place, seed)
+    if kept is not plain:
+        finished(*kept)
     evaluator, findings = kept
     fresh = judged(evaluator, findings.feasible[0][1].place, seed + 1)
     reached = fresh.probability[0] >= wanted

@@ -65,15 +65,20 @@ def plan(
         require_warm_linear()
     begun = time.perf_counter()
     evaluator, findings = find(site, progress)
-    with findings.timed("runners-up"):
-        finish(evaluator, findings, solver_from(site.solver), runners_up)
-    price_exactly(evaluator, findings)
+    finished(evaluator, findings, runners_up)
     bound: Bound | None = None
     refuted: list[str] = []
     if prove_s is not None:
         _, refuted = _verified(evaluator, findings)
         bound = _proven(site, evaluator, findings, prove_s, progress)
     return plan_of(evaluator, findings, begun, bound, runners_up=runners_up, refuted=refuted)
+
+
+def finished(evaluator: Evaluator, findings: Findings, runners_up: int = RUNNERS_UP) -> None:
+    """Polish the runners-up of a search to the end and price the best recipes exactly."""
+    with findings.timed("runners-up"):
+        finish(evaluator, findings, solver_from(evaluator.site.solver), runners_up)
+    price_exactly(evaluator, findings)
 
 
 def _proven(

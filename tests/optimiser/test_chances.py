@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from catalogs.constant_ranges import constant_spreads
-from optimiser import load_site, plan_with_confidence
+from optimiser import load_site, plan, plan_with_confidence
 from optimiser.chances import chances_of, estimate, without_margin
 from optimiser.draws import draw_sites
 from optimiser.evaluation import Evaluator
@@ -115,6 +115,15 @@ def test_confidence_tightens_targets_and_costs_money(silver):
     assert sure.reached == (sure.chances.probability[0] >= 0.9)
     assert sure.plan.cost["total"] >= sure.base_total * (1.0 - 1e-6)
     assert sure.chances.probability[0] > sure.base_chances.probability[0]
+
+
+def test_where_the_plan_is_sure_enough_it_is_the_plan_with_the_same_runners_up(silver):
+    sure = plan_with_confidence(silver, 0.5, draws=10, seed=1)
+    assert sure.reached
+    made = plan(silver)
+    assert sure.plan.cost == made.cost
+    assert sure.base_total == pytest.approx(made.cost["total"], rel=1e-9)
+    assert sure.plan.data["runners_up"] == made.data["runners_up"] != []
 
 
 def test_limits_are_judged_without_margin(silver):
