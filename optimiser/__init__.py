@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     from optimiser.assessment import assess as assess
     from optimiser.chances import explain_chances as explain_chances
     from optimiser.confidence import plan_with_confidence as plan_with_confidence
+    from optimiser.contracts import compare_contracts as compare_contracts
     from optimiser.errors import NoPlan as NoPlan
     from optimiser.explain import explain_plan as explain_plan
     from optimiser.floors import explain_floors as explain_floors
@@ -24,6 +25,7 @@ if TYPE_CHECKING:
 _HOMES = {
     "NoPlan": "optimiser.errors",
     "assess": "optimiser.assessment",
+    "compare_contracts": "optimiser.contracts",
     "explain_chances": "optimiser.chances",
     "explain_floors": "optimiser.floors",
     "explain_plan": "optimiser.explain",
@@ -37,6 +39,7 @@ _HOMES = {
 __all__ = [
     "NoPlan",
     "assess",
+    "compare_contracts",
     "explain_chances",
     "explain_floors",
     "explain_plan",

@@ -9,6 +9,8 @@ import argparse
 from pathlib import Path
 from typing import Any, NoReturn
 
+from optimiser.cli_buying_options import add_buying
+
 BAD_USAGE = 2
 PROGRAM = "dosewright"
 DEFAULT_PROVE_S = 60.0
@@ -137,6 +139,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_curves(commands)
     _add_floors(commands)
     _add_offers(commands)
+    add_buying(commands, _add_command)
     _add_chances(commands)
     _add_jar(commands)
     _add_command(commands, "check", "read a site and report every problem found", "check site.yaml")

@@ -78,6 +78,19 @@ class NoPurchase(OptimiserError):  # noqa: N818 - a public name that says what h
         super().__init__(_with_reasons("no purchase covers this demand:", self.reasons))
 
 
+class UnknownOffer(OptimiserError):  # noqa: N818 - says what happened
+    """An offer was named that cannot be signed."""
+
+    exit_code: ClassVar[int] = 2
+
+    def __init__(self, name: str, known: Sequence[str]) -> None:
+        listing = ", ".join(known)
+        super().__init__(
+            f"{name}: no offer that could be signed\n    Offers that hold and are not signed yet: "
+            f"{listing or 'none'}."
+        )
+
+
 class TradeOffError(OptimiserError):
     """A trade-off that was asked for wrongly."""
 

@@ -205,6 +205,20 @@ class Uncertainty:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Procurement:
+    """What contracts are held against; money in the site's currency.
+
+    ``switching_costs`` are spent once for a reagent that is not dosed today (tank, pump, silo);
+    ``term_years`` are the years that costs are added up over, where empty the longest term among
+    the offers compared; ``last_year_bill`` is what reagents cost, delivered, last year.
+    """
+
+    switching_costs: Mapping[str, float] = field(default_factory=dict)
+    term_years: float | None = None
+    last_year_bill: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class SolverSettings:
     """Choice and limits of the mixed-integer solver."""
 
@@ -244,6 +258,7 @@ class Site:
     notes: tuple[str, ...] = ()
     today: Mapping[str, float] = field(default_factory=dict)
     """Doses of today's practice, mg/L pure fed, if the site file gives them."""
+    procurement: Procurement = Procurement()
     own_constants: tuple[OwnConstant, ...] = ()
     solid_switches: tuple[SolidSwitch, ...] = ()
     samples: Samples | None = None

@@ -23,13 +23,14 @@ from chemistry.feed import ANALYTES, BURDENS, FeedWater, WaterAnalysis, feed_wat
 from chemistry.sample_waters import SampleWaters, close_samples, mean_analysis
 from chemistry.system import System
 from optimiser.jar_file import JarCalibration
-from optimiser.site import Disposal, Dosing, Site, SolverSettings, Uncertainty
+from optimiser.site import Disposal, Dosing, Procurement, Site, SolverSettings, Uncertainty
 from optimiser.site_constants import OwnBlock, read_own
 from optimiser.site_dosing import read_dosing
 from optimiser.site_feed import FeedBlock, read_feed
 from optimiser.site_jar import JarChanges, read_site_jar, with_jar
 from optimiser.site_limits import Foreseen, LimitsBlock, read_limits
 from optimiser.site_offers import SiteOffers, read_site_offers
+from optimiser.site_procurement import read_procurement
 from optimiser.site_salt import ACTIVITY_CHOICES, AUTO, activity_notes, saltiest_mol_per_l
 from optimiser.site_samples import SampleBlock
 from optimiser.site_treatment import (
@@ -60,6 +61,7 @@ class _Blocks:
     dosing: Mapping[str, Dosing]
     uncertainty: Uncertainty
     doses_today: Mapping[str, float]
+    procurement: Procurement
     own: OwnBlock
     activity: str
     jar: JarCalibration | None = None
@@ -141,6 +143,7 @@ def _read_blocks(
         dosing=read_dosing(entry.block_or_none("dosing"), known),
         uncertainty=read_uncertainty(entry.block_or_none("uncertainty")),
         doses_today=entry.numbers("today", known, "reagents allowed in treatment", NON_NEGATIVE),
+        procurement=read_procurement(entry.block_or_none("procurement"), known),
         own=read_own(entry),
         activity=entry.choice_or("activity", AUTO, ACTIVITY_CHOICES, "activity models"),
         jar=jar,
@@ -290,6 +293,7 @@ def _site(
         uncertainty=blocks.uncertainty, dosing=blocks.dosing,
         peak_flow_m3_per_d=feed.peak_flow_m3_per_d,
         pretreated=feed.pretreated, today=blocks.doses_today,
+        procurement=blocks.procurement,
         own_constants=blocks.own.constants, solid_switches=blocks.own.switches,
         samples=feed.sampled.samples if feed.sampled else None,
         sample_waters=chemistry.sample_waters,

@@ -1,0 +1,46 @@
+"""The options of the commands of buyers: contracts compared, and the sheet for negotiations.
+
+Owns what can be typed; how a command is added is handed in by `optimiser.cli_options`.
+"""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+from typing import Any, Protocol
+
+
+class AddCommand(Protocol):
+    """How a command is added to the parser."""
+
+    def __call__(
+        self, commands: Any, name: str, what: str, example: str
+    ) -> argparse.ArgumentParser:
+        """Add a command with its site."""
+
+
+def add_buying(commands: Any, add_command: AddCommand) -> None:
+    """Add the commands of buyers to the parser."""
+    parser = add_command(
+        commands, "contracts", "compare contracts by the cheapest plan if each were signed",
+        "contracts site.yaml --candidate AC-50 --candidate BH-25+BH-LB --csv contracts.csv",
+    )  # fmt: skip
+    parser.add_argument(
+        "--candidate", metavar="OFFER", type=_offers_named, action="append", default=[],
+        help="id of an offer, or of several signed together joined by +; repeat it for more "
+        "(default: every offer that is not signed yet)",
+    )  # fmt: skip
+    parser.add_argument(
+        "--expired", action="store_true", help="compare offers that do not hold today as well"
+    )
+    parser.add_argument("--csv", metavar="FILE", type=Path, help="write the table to FILE as well")
+    parser.add_argument(
+        "--json", action="store_true", help="print the result as JSON, nothing else"
+    )
+
+
+def _offers_named(text: str) -> tuple[str, ...]:
+    names = tuple(name.strip() for name in text.split("+"))
+    if not all(names):
+        raise argparse.ArgumentTypeError(f"expected OFFER or OFFER+OFFER, found {text!r}")
+    return names
