@@ -10,7 +10,8 @@ where another end may set it (carbonate in the recipe), the cake of class ``k`` 
 as much as this one weighs at least ``(disposal - fee_k) / rate_k``, and the least over the classes
 is charged. A rule holds only if no earlier rule does, which is linear in the solids; its own
 condition is used where it names one metal. The trim dose is charged nothing, except that a trim
-reagent is set up and bought where every plan of the cell has to trim.
+reagent is set up and bought where every plan of the cell has to trim. Surcharges per kilogram are
+charged nothing: they are never negative, so the bound stays one.
 """
 
 from __future__ import annotations

@@ -18,7 +18,7 @@ from chemistry.errors import ChemistryError
 from optimiser.draws import ANALYSIS, CARRY_OVER, CONSTANTS, JAR, Draw, draw_sites
 from optimiser.evaluation import DOSE_RULE, FEASIBLE_RATIO, Evaluation, Evaluator, Place
 from optimiser.points import Points
-from optimiser.quality import LOAD
+from optimiser.quality import LOADS
 from optimiser.quality_slopes import RULE
 from optimiser.site import Site
 
@@ -216,7 +216,7 @@ def _label(evaluator: Evaluator, number: int) -> str:
 
 def _unit(evaluator: Evaluator, number: int) -> str:
     check = evaluator.judge.checks[number]
-    return "kg/d" if check.averaging == LOAD else check.unit
+    return "kg/d" if check.averaging in LOADS else check.unit
 
 
 def without_margin(site: Site) -> Site:

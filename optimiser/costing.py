@@ -1,4 +1,4 @@
-"""Yearly cost of operating points by cause: goods, freight, disposal, equipment, burden.
+"""Yearly cost of operating points by cause: goods, freight, disposal, equipment, charges.
 
 Owns what a plan costs once doses, solids and effluent are known; offers themselves are bought in
 `optimiser.purchasing`.
@@ -19,12 +19,14 @@ from optimiser.points import CLOSED_FORMED, VENTED_FORMED, Block, Points, Rows
 from optimiser.price_book import PriceBook
 from optimiser.quality import Judged
 from optimiser.site import DisposalRule
+from optimiser.surcharges import Surcharge, surcharge_per_year
 
 FloatArray = NDArray[np.float64]
 
 TOTAL = "total"
 FREIGHT, DISPOSAL, FEES = "freight", "disposal", "disposal fees"
 EQUIPMENT, SEPARATOR, POLYMER, BURDEN = "equipment", "separator", "polymer", "burden charges"
+SURCHARGES = "surcharges"
 
 
 @dataclass(frozen=True, eq=False)
@@ -46,8 +48,9 @@ class Priced:
 class Pricing:
     """A site's prices as arrays."""
 
-    def __init__(self, plant: Plant) -> None:
+    def __init__(self, plant: Plant, surcharges: Sequence[Surcharge]) -> None:
         self.plant = plant
+        self.surcharges = tuple(surcharges)
         site = plant.site
         self.book = PriceBook(site.offers)
         self.equipment = np.array(
@@ -84,6 +87,7 @@ class Pricing:
             len(points), plant.treatment.separator.cost_per_year, dtype=float
         )
         by_cause[BURDEN] = self._burden(points, rows, judged)
+        by_cause[SURCHARGES] = self._surcharges(points, rows, judged)
         total = np.sum(list(by_cause.values()), axis=0)
         return Priced(by_cause, total, doses, trim, sludges)
 
@@ -169,6 +173,16 @@ class Pricing:
                     here += rate * self.kg_per_mg_per_l * np.maximum(part.burden[name], 0.0)
             point = rows.point[part.block.rows[nominal]]
             np.maximum.at(cost, point, here[nominal])
+        return cost
+
+    def _surcharges(self, points: Points, rows: Rows, judged: Sequence[Judged]) -> FloatArray:
+        cost = np.zeros(len(points))
+        if not self.surcharges:
+            return cost
+        for part in judged:
+            nominal = rows.nominal[part.block.rows]
+            here = surcharge_per_year(self.surcharges, part, self.kg_per_mg_per_l)
+            np.maximum.at(cost, rows.point[part.block.rows[nominal]], here[nominal])
         return cost
 
 

@@ -17,7 +17,7 @@ from chemistry.feed import feed_water
 from chemistry.response import Response, linearise, response
 from optimiser.curves import Curve
 from optimiser.plant import Plant
-from optimiser.quality import LOAD, SUMMED_STATES, Judge
+from optimiser.quality import LOADS, SUMMED_STATES, Judge
 from optimiser.site import Site
 
 FloatArray = NDArray[np.float64]
@@ -55,7 +55,7 @@ def ceilings(site: Site) -> dict[str, Ceiling]:
     for check in Judge(Plant(site)).checks:
         if len(check.metals) != 1:
             continue
-        unit = check.unit if check.averaging == LOAD else "mg/L"
+        unit = check.unit if check.averaging in LOADS else "mg/L"
         text = f"{check.averaging} limit {check.limit:g} {unit}"
         for metal in SUMMED_STATES.get(check.label, (check.label,)):
             known = found.get(metal)

@@ -23,11 +23,12 @@ from optimiser.gas_figures import gas_figures
 from optimiser.held_up import HeldUp, held_up_by
 from optimiser.plan_purchases import deal_of_point, exact_costs, purchase_rows
 from optimiser.points import END_TEXT
-from optimiser.quality import LOAD
+from optimiser.quality import LOADS
 from optimiser.quality_slopes import RULE
 from optimiser.site_jar import jar_cautions
 from optimiser.site_salt import MODEL_TEXT
 from optimiser.sludge_figures import sludge_data
+from optimiser.surcharges import surcharge_rows
 
 FloatArray = NDArray[np.float64]
 Data = dict[str, Any]
@@ -125,7 +126,7 @@ class Describer:
                 continue
             part, k = self._worst(number)
             value = float(part.value[k, number])
-            scale = self.site.flow_m3_per_d / 1000.0 if check.averaging == LOAD else 1.0
+            scale = self.site.flow_m3_per_d / 1000.0 if check.averaging in LOADS else 1.0
             metals = list(check.metals)
             residual = part.residual[k, metals].sum() if metals else value
             theory = part.theory[k, metals].sum() if metals else value
@@ -375,7 +376,8 @@ def describe(
         "compliant": bool(seen.feasible[point]) and one.ph()["meets"],
         "set_points": one.set_points(), "doses": one.dose_map(), "feeding": one.feeding(),
         "purchases": one.purchases(), "capacities": capacities(site, one.feeding()),
-        "cost": cost, "limits": one.limits(), "ph": one.ph(),
+        "cost": cost, "surcharges": surcharge_rows(evaluator, seen, point),
+        "limits": one.limits(), "ph": one.ph(),
         "rules_missed": one.missed_rules(), "water": one.water(), "gas": one.gas(),
         "burden": one.burden(),
         "sludge": sludge_data(evaluator, seen, point), "cautions": one.cautions(),

@@ -183,7 +183,7 @@ class Evaluator:
         self.site = site
         self.plant = Plant(site)
         self.judge = Judge(self.plant)
-        self.pricing = Pricing(self.plant)
+        self.pricing = Pricing(self.plant, self.judge.surcharges)
         treatment = site.treatment
         names = self.plant.names
         self.least = np.array(

@@ -13,7 +13,16 @@ from dataclasses import dataclass, field
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
-from optimiser.costing import BURDEN, DISPOSAL, EQUIPMENT, FEES, FREIGHT, POLYMER, SEPARATOR
+from optimiser.costing import (
+    BURDEN,
+    DISPOSAL,
+    EQUIPMENT,
+    FEES,
+    FREIGHT,
+    POLYMER,
+    SEPARATOR,
+    SURCHARGES,
+)
 from optimiser.entry_prices import entry_prices
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluator, Place
 from optimiser.ledger import dose_ledger
@@ -45,6 +54,7 @@ PH_WINDOW = "pH window"
 _CAUSES = {
     FREIGHT: "price of reagents", DISPOSAL: "sludge", FEES: "sludge", POLYMER: "sludge",
     EQUIPMENT: "equipment", SEPARATOR: "equipment", BURDEN: "burden charges",
+    SURCHARGES: "surcharges",
 }  # fmt: skip
 
 

@@ -15,10 +15,11 @@ import numpy as np
 from optimiser.costing import DISPOSAL
 from optimiser.nearby import Standing, changed, repolish, worst_ratios
 from optimiser.polish_step import build_step, cost_unit, in_cost_units
-from optimiser.quality import DAILY, LOAD, MONTHLY
+from optimiser.quality import DAILY, LOAD, MONTHLY, MONTHLY_LOAD
 from optimiser.quality_slopes import RULE
 from optimiser.recipes import set_point_bounds
 from optimiser.site import Limit, Site
+from optimiser.surcharges import surcharge_rows
 
 Data = dict[str, Any]
 
@@ -31,6 +32,7 @@ LEAST_PRICE = 1e-9
 
 _FIELDS = {
     DAILY: "daily_mg_per_l", MONTHLY: "monthly_mg_per_l", LOAD: "daily_load_kg_per_d",
+    MONTHLY_LOAD: "monthly_load_kg_per_d",
 }  # fmt: skip
 
 
@@ -58,7 +60,7 @@ def marginal_costs(plan: Standing) -> list[Data]:
         for number in np.flatnonzero(checks >= -BINDING_RATIO)
         if plan.evaluator.judge.checks[number].averaging != RULE
     ]
-    return [*rows, *_margin_row(plan, prices), *_tariff_row(plan)]
+    return [*rows, *_margin_row(plan, prices), *_tariff_row(plan), *_surcharge_rows(plan)]
 
 
 def slack_limits(plan: Standing) -> list[Data]:
@@ -179,6 +181,32 @@ def _tariff_row(plan: Standing) -> list[Data]:
     ]  # fmt: skip
 
 
+def _surcharge_rows(plan: Standing) -> list[Data]:
+    """Rates per kilogram that the plan pays, each a little dearer."""
+    site = plan.evaluator.site
+    charged = surcharge_rows(plan.evaluator, plan.place.seen, plan.place.point)
+    numbers = [n for n, limit in enumerate(site.limits) if limit.surcharge_per_kg is not None]
+    return [
+        {
+            "kind": "surcharge", "parameter": f"surcharge on {row['parameter']}", "averaging": "",
+            "value": row["rate_per_kg"], "unit": f"{site.currency}/kg", "change": "10 % dearer",
+            "first_order_per_year": TARIFF_RISE * row["cost_per_year"],
+            "resolved_per_year": _difference(plan, _with_rate(site, number, 1.0 + TARIFF_RISE)),
+            "looser_per_year": _difference(plan, _with_rate(site, number, 1.0 - TARIFF_RISE)),
+        }
+        for number, row in zip(numbers, charged, strict=True)
+        if row["cost_per_year"] > 0.0
+    ]  # fmt: skip
+
+
+def _with_rate(site: Site, number: int, factor: float) -> Site:
+    limits = list(site.limits)
+    rate = limits[number].surcharge_per_kg
+    assert rate is not None, "only limits with a rate are charged"
+    limits[number] = replace(limits[number], surcharge_per_kg=factor * rate)
+    return replace(site, limits=tuple(limits))
+
+
 def _first_order(price: float, step: float) -> float:
     change = float(price * step)
     return change if abs(change) > LEAST_PRICE else 0.0
@@ -220,4 +248,6 @@ def _replaced(limit: Limit, name: str, value: float) -> Limit:
         return replace(limit, daily_mg_per_l=value)
     if name == "monthly_mg_per_l":
         return replace(limit, monthly_mg_per_l=value)
+    if name == "monthly_load_kg_per_d":
+        return replace(limit, monthly_load_kg_per_d=value)
     return replace(limit, daily_load_kg_per_d=value)

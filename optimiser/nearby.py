@@ -72,7 +72,8 @@ def changed(evaluator: Evaluator, site: Site) -> Evaluator:
     plant.site, plant.treatment = site, site.treatment
     result = copy.copy(evaluator)
     result.site, result.plant = site, plant
-    result.judge, result.pricing = Judge(plant), Pricing(plant)
+    result.judge = Judge(plant)
+    result.pricing = Pricing(plant, result.judge.surcharges)
     return result
 
 

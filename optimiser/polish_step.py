@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from chemistry.sludge import dry_masses_mg_per_l
-from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER
+from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER, SURCHARGES
 from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.linear_model import Expression, Model, Sense
 from optimiser.local_purchase import add_local_purchase
@@ -58,7 +58,7 @@ def build_step(
     With moves ``v`` of set point and paced doses, every near check asks
     ``ratio + slope . v <= -back-off + miss``; the controller's, the trim's and the sludge's amounts
     are at least their linearised values at every end. Costs are the purchasing block, disposal by
-    the tariff of the point's sludge class, burden charges and a penalty on ``miss``; with
+    the tariff of the point's sludge class, charges per kilogram and a penalty on ``miss``; with
     ``miss_only`` nothing but the miss counts.
     """
     model = Model("polish step")
@@ -75,6 +75,7 @@ def build_step(
     _add_purchases(model, evaluator, seen, row, radius, demand)
     _add_disposal(model, evaluator, seen, row, moves)
     _add_burden(model, evaluator, seen, row, moves)
+    _add_surcharges(model, evaluator, seen, row, moves)
     return model
 
 
@@ -300,3 +301,31 @@ def _add_burden(
         terms[key] = 1.0
         model.add_row(f"burden at end {number}", terms, Sense.AT_LEAST, per * here + constant)
     model.add_cost(BURDEN, Expression({key: 1.0}))
+
+
+def _add_surcharges(
+    model: Model, evaluator: Evaluator, seen: Evaluation, row: int,
+    moves: dict[int, tuple[str, float]],
+) -> None:  # fmt: skip
+    """Each surcharge at each end at least 0 and its linearised value; the dearest end counts."""
+    known, per = evaluator.judge.surcharges, evaluator.pricing.kg_per_mg_per_l
+    if not known:
+        return
+    total = model.add_variable("surcharges", high=1e12)
+    for number, part in enumerate(seen.judged):
+        k = seen.nominal_row(part.block, row)
+        if k is None or not part.block.reached[k]:
+            continue
+        spent = {total: 1.0}
+        for i, one in enumerate(known):
+            scale = per * one.rate_per_kg
+            key = model.add_variable(f"surcharge {i} at end {number}", high=1e12)
+            spent[key] = -1.0
+            slope = scale * one.slope(evaluator.judge, part, k)
+            terms, constant = _linear(slope, moves)
+            terms = {name: -value for name, value in terms.items()}
+            terms[key] = 1.0
+            here = scale * (float(one.value(part)[k]) - one.free_mg_per_l)
+            model.add_row(f"{key} charged", terms, Sense.AT_LEAST, here + constant)
+        model.add_row(f"surcharges at end {number}", spent, Sense.AT_LEAST, 0.0)
+    model.add_cost(SURCHARGES, Expression({total: 1.0}))

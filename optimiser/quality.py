@@ -21,6 +21,7 @@ from optimiser.points import Block, Points, Rows
 from optimiser.quality_slopes import RULE, SMALLEST_MG_PER_L, fill_slopes
 from optimiser.residual_factors import ResidualFactors
 from optimiser.site import Limit
+from optimiser.surcharges import Surcharge, surcharges_of
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -29,7 +30,8 @@ IntArray = NDArray[np.int64]
 UNREACHED_RATIO = 50.0  # ratio of every check of a state whose set point no dose reaches
 LN10 = float(np.log(10.0))
 
-DAILY, MONTHLY, LOAD = "daily", "monthly", "daily load"
+DAILY, MONTHLY, LOAD, MONTHLY_LOAD = "daily", "monthly", "daily load", "monthly load"
+LOADS = (LOAD, MONTHLY_LOAD)
 SUMMED_STATES = {"Fe": ("Fe(II)", "Fe(III)"), "Cr": ("Cr(III)", "Cr(VI)")}
 
 
@@ -60,6 +62,7 @@ class Judged:
     ``value`` and ``ratio`` are (rows, checks); ``slope`` (rows, checks, 1 + reagents) the change of
     ``ratio``; ``residual``, ``carried`` and ``floor`` (rows, metals) in mg/L, ``theory`` the
     residual without factors of jar tests, ``at_most`` where all in the tank dissolves;
+    ``metal_slope`` (rows, metals, 1 + reagents) the change of residual plus carried;
     ``dose_slope`` (rows, 1 + reagents) the change of the controller's dose, ``trim_slope`` of the
     trim dose, ``solid_slope`` (rows, solids, 1 + reagents) of the amounts of solids,
     ``effluent_slope`` of the discharged totals.
@@ -75,6 +78,7 @@ class Judged:
     floor: FloatArray
     burden: dict[str, FloatArray]
     slope: FloatArray
+    metal_slope: FloatArray
     dose_slope: FloatArray
     trim_slope: FloatArray
     solid_slope: FloatArray
@@ -106,6 +110,7 @@ class Judge:
         self.families = self._families()
         self.burden_weights = burden_weights(plant.system)
         self.checks: tuple[Check, ...] = tuple(self._compile())
+        self.surcharges: tuple[Surcharge, ...] = surcharges_of(site.limits, names)
 
     # -- compile -------------------------------------------------------------------------------
 
@@ -192,6 +197,7 @@ class Judge:
             (DAILY, limit.daily_mg_per_l, daily, 1.0, "mg/L"),
             (MONTHLY, limit.monthly_mg_per_l, monthly, 1.0, "mg/L"),
             (LOAD, limit.daily_load_kg_per_d, daily, per_flow, "kg/d"),
+            (MONTHLY_LOAD, limit.monthly_load_kg_per_d, monthly, per_flow, "kg/d"),
         ):
             if value is None:
                 continue
@@ -247,7 +253,8 @@ class Judge:
         n, count = value.shape
         judged = Judged(
             block, value, ratio, residual, theory, at_most, carried, floor, burden,
-            np.zeros((n, count, width if slopes else 0)), np.zeros((n, width)),
+            np.zeros((n, count, width if slopes else 0)),
+            np.zeros((n, residual.shape[1], width if slopes else 0)), np.zeros((n, width)),
             np.zeros((n, width)), np.zeros((n, solids.shape[1], width if slopes else 0)),
             np.zeros((n, block.effluent.shape[1], width if slopes else 0)),
         )  # fmt: skip

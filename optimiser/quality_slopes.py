@@ -81,6 +81,7 @@ def fill_slopes(
     slope = _check_slopes(judge, judged, total, metal, effluent, activity, trim_activity)
     slope[~block.reached] = 0.0
     judged.slope[:, :, columns] = slope
+    judged.metal_slope[:, :, columns] = metal
     judged.dose_slope[:, columns] = dose
     judged.trim_slope[:, columns] = trim
     judged.solid_slope[:, :, columns] = solids

@@ -14,6 +14,7 @@ from optimiser.render_jar import theory_lines
 from optimiser.render_proof import proof_lines
 from optimiser.render_runners_up import runners_up_lines
 from optimiser.render_separators import separator_lines
+from optimiser.render_surcharges import surcharge_lines
 from optimiser.tables import INDENT, PLAIN, Ink, bullets, given, money, number, paragraph, table
 
 Data = Mapping[str, Any]
@@ -58,6 +59,7 @@ def _document(title: str, data: Data, ink: Ink) -> str:
         ("Pumps, feeders and stores", capacity_lines(data, ink)),
         ("What is bought", _purchases(data)),
         (f"Cost, {data['site']['currency']} a year", _cost(data)),
+        ("Surcharges by the kilogram", surcharge_lines(data)),
         ("Limits", _limits(data, ink)),
         ("pH through the train", _ph(data, ink)),
         ("Gas over the water", gas_lines(data)),

@@ -11,7 +11,16 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from optimiser.costing import BURDEN, DISPOSAL, EQUIPMENT, FEES, FREIGHT, POLYMER, SEPARATOR
+from optimiser.costing import (
+    BURDEN,
+    DISPOSAL,
+    EQUIPMENT,
+    FEES,
+    FREIGHT,
+    POLYMER,
+    SEPARATOR,
+    SURCHARGES,
+)
 from optimiser.evaluation import Evaluator, Place
 from optimiser.marginal import BINDING_RATIO, binding_otherwise
 from optimiser.nearby import Standing, point_data, worst_ratios
@@ -34,6 +43,7 @@ SLUDGE, EQUIPMENT_GROUP = "sludge", "equipment"
 GROUPS = {
     DISPOSAL: SLUDGE, FEES: SLUDGE, POLYMER: SLUDGE, EQUIPMENT: EQUIPMENT_GROUP,
     SEPARATOR: EQUIPMENT_GROUP, BURDEN: BURDEN, FREIGHT: FREIGHT,
+    SURCHARGES: SURCHARGES,
 }  # fmt: skip
 LEAST_SHOWN, LEAST_SHARE = 0.5, 0.005  # currency a year; of the whole difference
 

@@ -39,7 +39,8 @@ class Limit:
     ``parameter`` is an analyte (``Cu``), a burden (``SO4``, ``TDS``, ``hardness``, ``sulfide``), or
     ``sum``, in which case ``of`` lists the analytes that are added up. Concentrations in mg/L of
     the total (dissolved and carried), loads in kg per day; ``None`` where none is written.
-    ``design_margin`` replaces the site's for this limit.
+    ``design_margin`` replaces the site's for this limit. ``surcharge_per_kg`` is charged on the
+    mean discharge above ``free_mg_per_l``, beside the ceilings or instead of them.
     """
 
     parameter: str
@@ -47,7 +48,10 @@ class Limit:
     daily_mg_per_l: float | None = None
     monthly_mg_per_l: float | None = None
     daily_load_kg_per_d: float | None = None
+    monthly_load_kg_per_d: float | None = None
     design_margin: float | None = None
+    surcharge_per_kg: float | None = None
+    free_mg_per_l: float = 0.0
     source: str = ""
 
     @property

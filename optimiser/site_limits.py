@@ -8,7 +8,7 @@ from __future__ import annotations
 from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 
-from catalogs.entries import POSITIVE, POSITIVE_FRACTION, Entry, Range
+from catalogs.entries import NON_NEGATIVE, POSITIVE, POSITIVE_FRACTION, Entry, Range
 from catalogs.limit_sets import LimitSet, SetLimit, load_limit_sets
 from catalogs.practice_data import LIGAND_FAMILIES, floors_mg_per_l, variability_of
 from catalogs.problems import Spot, echo, listed
@@ -22,6 +22,9 @@ LIMITED_METALS = (*METALS, *STATES_OF_ELEMENT)
 LIMITED = (*LIMITED_METALS, *BURDENS, SUM)
 """Parameters that a limit may be written for."""
 
+CEILINGS = (
+    "daily_mg_per_l", "monthly_mg_per_l", "daily_load_kg_per_d", "monthly_load_kg_per_d",
+)  # fmt: skip
 DESIGN_MARGIN = 0.8
 _RATIO = Range(low=1.0, high=50.0)
 _NOT_PLANNED: Mapping[str, str] = {
@@ -173,17 +176,22 @@ def _own_limit(entry: Entry, foreseen: Foreseen | None) -> Limit | None:
     before = len(entry.spot.log.problems)
     parameter = entry.choice("parameter", LIMITED, "limited parameters")
     of = entry.names("of", LIMITED_METALS, "metals", required=parameter == SUM)
-    values = {
-        key: entry.number_or(key, None, POSITIVE)
-        for key in ("daily_mg_per_l", "monthly_mg_per_l", "daily_load_kg_per_d")
-    }
+    values = {key: entry.number_or(key, None, POSITIVE) for key in CEILINGS}
+    rate = entry.number_or("surcharge_per_kg", None, POSITIVE)
+    free = entry.number_or("free_mg_per_l", 0.0, NON_NEGATIVE)
     margin = entry.number_or("design_margin", None, POSITIVE_FRACTION)
     source = entry.text_or("source", f"{entry.spot.file}, line {entry.spot.line}")
-    if not any(entry.has(key) for key in values):
+    if not any(entry.has(key) for key in (*values, "surcharge_per_kg")):
         entry.spot.problem(
             "a limit without a value",
-            listed(values),
+            listed((*values, "surcharge_per_kg")),
             "Add at least one of them.",
+        )
+    if entry.has("free_mg_per_l") and not entry.has("surcharge_per_kg"):
+        entry.at("free_mg_per_l").problem(
+            "a free concentration without a surcharge",
+            "`free_mg_per_l` beside `surcharge_per_kg`",
+            "Add the rate, or delete this key.",
         )
     entry.finish()
     if len(entry.spot.log.problems) > before:
@@ -191,20 +199,25 @@ def _own_limit(entry: Entry, foreseen: Foreseen | None) -> Limit | None:
     limit = Limit(
         parameter=parameter, of=of, daily_mg_per_l=values["daily_mg_per_l"],
         monthly_mg_per_l=values["monthly_mg_per_l"],
-        daily_load_kg_per_d=values["daily_load_kg_per_d"], design_margin=margin, source=source,
+        daily_load_kg_per_d=values["daily_load_kg_per_d"],
+        monthly_load_kg_per_d=values["monthly_load_kg_per_d"], design_margin=margin,
+        surcharge_per_kg=rate, free_mg_per_l=free, source=source,
     )  # fmt: skip
     _check_own(limit, entry, foreseen)
     return limit
 
 
 def _check_own(limit: Limit, entry: Entry, foreseen: Foreseen | None) -> None:
-    daily, monthly = limit.daily_mg_per_l, limit.monthly_mg_per_l
-    if daily is not None and monthly is not None and monthly > daily:
-        entry.at("monthly_mg_per_l").problem(
-            f"monthly {monthly:g} above daily {daily:g}",
-            "the monthly average at most the daily maximum",
-            "Correct or swap the two values.",
-        )
+    for key, daily, monthly in (
+        ("monthly_mg_per_l", limit.daily_mg_per_l, limit.monthly_mg_per_l),
+        ("monthly_load_kg_per_d", limit.daily_load_kg_per_d, limit.monthly_load_kg_per_d),
+    ):
+        if daily is not None and monthly is not None and monthly > daily:
+            entry.at(key).problem(
+                f"monthly {monthly:g} above daily {daily:g}",
+                "the monthly average at most the daily maximum",
+                "Correct or swap the two values.",
+            )
     if limit.parameter == SUM and len(limit.of) < 2:
         entry.at("of").problem("a sum of one", "at least two metals", "List what is added up.")
     if limit.parameter != SUM and limit.of:

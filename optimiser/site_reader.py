@@ -300,7 +300,8 @@ def _site(
         jar=blocks.jar,
         notes=(
             *blocks.own.notes(system), *chemistry.notes, *feed.notes, *limits.notes,
-            *_closing_notes(feed, limits), *blocks.offers.notes, *_sample_notes(feed),
+            *_closing_notes(feed, limits),
+            *_surcharge_notes(feed, limits), *blocks.offers.notes, *_sample_notes(feed),
             *changes.notes, *_jar_notes(blocks.jar, chemistry.analysis),
         ),
     )  # fmt: skip
@@ -313,6 +314,16 @@ def _closing_notes(feed: FeedBlock, limits: LimitsBlock) -> list[str]:
     return [
         f"the charge is closed with {ion}, which has a limit: whether it is met leans on the"
         " charge balance of the analysis"
+    ]
+
+
+def _surcharge_notes(feed: FeedBlock, limits: LimitsBlock) -> list[str]:
+    charged = [limit.label for limit in limits.limits if limit.surcharge_per_kg is not None]
+    if not charged or feed.stands_for != "peak":
+        return []
+    return [
+        f"surcharges on {', '.join(charged)} are counted as if every day were the peak that the"
+        " analysis stands for: a year costs less"
     ]
 
 

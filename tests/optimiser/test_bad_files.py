@@ -282,7 +282,19 @@ def test_an_analysis_that_cannot_be_electroneutral_is_refused_at_its_line() -> N
          "    Correct or swap the two values."),
         ("daily_mg_per_l: 1, monthly_mg_per_l: 0.5, ", "", "17: limits.own[1]",
          "found a limit without a value, expected daily_mg_per_l, monthly_mg_per_l,"
-         " daily_load_kg_per_d\n    Add at least one of them."),
+         " daily_load_kg_per_d, monthly_load_kg_per_d, surcharge_per_kg\n    Add at least one of"
+         " them."),
+        ("monthly_mg_per_l: 0.5", "daily_load_kg_per_d: 0.5, monthly_load_kg_per_d: 0.6",
+         "17: limits.own[1].monthly_load_kg_per_d",
+         "found monthly 0.6 above daily 0.5, expected the monthly average at most the daily maximum"
+         "\n    Correct or swap the two values."),
+        ("monthly_mg_per_l: 0.5", "free_mg_per_l: 0.5", "17: limits.own[1].free_mg_per_l",
+         "found a free concentration without a surcharge, expected `free_mg_per_l` beside"
+         " `surcharge_per_kg`\n    Add the rate, or delete this key."),
+        ("monthly_mg_per_l: 0.5", "surcharge_per_kg: 0", "17: limits.own[1].surcharge_per_kg",
+         f"found 0, expected a number above 0\n{RANGE}"),
+        ("monthly_mg_per_l: 0.5", "surcharge_per_kg: 5, free_mg_per_l: -1",
+         "17: limits.own[1].free_mg_per_l", f"found -1, expected a number of 0 or more\n{RANGE}"),
         ("{parameter: Cu,", "{parameter: sum, of: [Cu],", "17: limits.own[1].of",
          "found a sum of one, expected at least two metals\n    List what is added up."),
         ("{parameter: Cu,", "{parameter: Cu, of: [Cu, Zn],", "17: limits.own[1].of",
