@@ -14,6 +14,7 @@ from catalogs.practice_data import LIGAND_FAMILIES, floors_mg_per_l, variability
 from catalogs.problems import Spot, echo, listed
 from chemistry.feed import ANALYTES, BURDENS, METALS
 from optimiser.site import Limit, PhWindow
+from optimiser.site_combined_flow import read_combined_flow
 from optimiser.site_feed import STATES_OF_ELEMENT
 from optimiser.site_treatment import read_ph_window
 
@@ -41,6 +42,7 @@ class Foreseen:
     analysed: Collection[str]
     brought_components: Collection[str]
     cyanide_mg_per_l: float = 0.0
+    flow_m3_per_d: float = 0.0
 
     def holds(self, parameter: str) -> bool:
         """Tell whether anything of a parameter can be in the treated water."""
@@ -95,6 +97,8 @@ def read_limits(entry: Entry, foreseen: Foreseen | None) -> LimitsBlock:
     sets = load_limit_sets()
     chosen = [sets[name] for name in entry.names("sets", sets, "limit sets")]
     limits, notes = _from_sets(chosen, foreseen)
+    limits, flow_notes = _combined(entry, chosen, limits, foreseen)
+    notes += flow_notes
     if foreseen is not None:
         _check_cyanide(chosen, foreseen.cyanide_mg_per_l, entry.at("sets"))
     own: list[Limit] = []
@@ -145,6 +149,23 @@ def _from_sets(
             f"limit set {limit_set.limit_set} leaves out: {text}" for text in limit_set.not_covered
         ]
     return limits, notes
+
+
+def _combined(
+    entry: Entry, chosen: Collection[LimitSet], limits: list[Limit], foreseen: Foreseen | None
+) -> tuple[list[Limit], list[str]]:
+    """Limits of the sets by the combined wastestream formula, where the site has one."""
+    block = entry.block_or_none("combined_flow")
+    if block is None or foreseen is None:
+        return limits, []
+    if not chosen:
+        entry.at("combined_flow").problem(
+            "a combined flow without a limit set",
+            "`sets`: the formula is for categorical limits",
+            "Name the set that regulates the process, or delete the block.",
+        )
+    found = read_combined_flow(block, foreseen.flow_m3_per_d)
+    return (limits, []) if found is None else found.applied(limits)
 
 
 def _check_cyanide(chosen: Collection[LimitSet], cyanide_mg_per_l: float, spot: Spot) -> None:

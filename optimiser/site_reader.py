@@ -164,6 +164,7 @@ def _foreseen(
     return Foreseen(
         analysed=tuple(feed.analysed),
         brought_components=brought,
+        flow_m3_per_d=feed.flow_m3_per_d,
         cyanide_mg_per_l=cyanide.total_mg_per_l if cyanide else 0.0,
     )
 

@@ -291,6 +291,11 @@ def test_an_analysis_that_cannot_be_electroneutral_is_refused_at_its_line() -> N
         ("monthly_mg_per_l: 0.5", "free_mg_per_l: 0.5", "17: limits.own[1].free_mg_per_l",
          "found a free concentration without a surcharge, expected `free_mg_per_l` beside"
          " `surcharge_per_kg`\n    Add the rate, or delete this key."),
+        ("  ph: {low: 6.5,", "  sets: [metal_finishing_existing]\n  combined_flow: {mixed: later,"
+         " streams: [{stream: roof, kind: dilute, flow_m3_per_d: 5}]}\n  ph: {low: 6.5,",
+         "19: limits.combined_flow.mixed",
+         "found 'later', expected one of the places where the streams mix\n    The places where the"
+         " streams mix known here: after_treatment, before_treatment."),
         ("monthly_mg_per_l: 0.5", "surcharge_per_kg: 0", "17: limits.own[1].surcharge_per_kg",
          f"found 0, expected a number above 0\n{RANGE}"),
         ("monthly_mg_per_l: 0.5", "surcharge_per_kg: 5, free_mg_per_l: -1",
