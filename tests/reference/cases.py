@@ -25,6 +25,7 @@ FILES = (
     "sludge.yaml",
     "reagents.yaml",
     "practice.yaml",
+    "effluents.yaml",
 )
 TOLERANCES = ("relative", "factor", "absolute", "within")
 USES = ("hard", "soft", "info")

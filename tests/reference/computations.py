@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from tests.reference import (
     acid_and_base,
+    effluents,
     hydroxide_ph,
     ligands_and_salts,
     practice,
@@ -14,6 +15,7 @@ from tests.reference import (
 
 __all__ = [
     "acid_and_base",
+    "effluents",
     "hydroxide_ph",
     "ligands_and_salts",
     "practice",

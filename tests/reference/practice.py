@@ -8,6 +8,7 @@ from catalogs.limit_sets import SetLimit, load_limit_sets
 from catalogs.practice_data import practical_floor, variability_of
 from chemistry.feed import charge_balance_error_percent
 from optimiser import assess
+from optimiser.combined_flow import alternative_limit_mg_per_l, treated_ceiling_mg_per_l
 from tests.optimiser.small_sites import Tree, own, small_site
 from tests.reference.cases import Case, computes
 
@@ -64,4 +65,20 @@ def charge_balance(case: Case) -> Mapping[str, float]:
         "error": charge_balance_error_percent(
             case.inputs["cations_meq_per_l"], case.inputs["anions_meq_per_l"]
         )
+    }
+
+
+@computes("I02")
+def combined_wastestreams(case: Case) -> Mapping[str, float]:
+    given = case.inputs
+    (treated, _), (partner, _) = given["treated"], given["partner"]
+    alternative = alternative_limit_mg_per_l(
+        [tuple(given["treated"]), tuple(given["partner"])], total_m3_per_d=given["total"],
+        dilute_m3_per_d=given["dilute"],
+    )  # fmt: skip
+    others = [(partner, given["partner_mg_per_l"]), tuple(given["unregulated"]),
+              (given["dilute"], 0.0)]  # fmt: skip
+    return {
+        "alternative": alternative,
+        "ceiling": treated_ceiling_mg_per_l(alternative, treated, others),
     }
