@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from optimiser.errors import NoPlan as NoPlan
     from optimiser.explain import explain_plan as explain_plan
     from optimiser.floors import explain_floors as explain_floors
+    from optimiser.negotiation import negotiate as negotiate
     from optimiser.planning import plan as plan
     from optimiser.purchasing import purchase as purchase
     from optimiser.site_reader import load_site as load_site
@@ -30,6 +31,7 @@ _HOMES = {
     "explain_floors": "optimiser.floors",
     "explain_plan": "optimiser.explain",
     "load_site": "optimiser.site_reader",
+    "negotiate": "optimiser.negotiation",
     "plan": "optimiser.planning",
     "plan_with_confidence": "optimiser.confidence",
     "purchase": "optimiser.purchasing",
@@ -44,6 +46,7 @@ __all__ = [
     "explain_floors",
     "explain_plan",
     "load_site",
+    "negotiate",
     "plan",
     "plan_with_confidence",
     "purchase",

@@ -13,7 +13,7 @@ from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from optimiser.cli_buying import run_contracts
+from optimiser.cli_buying import run_contracts, run_negotiate
 from optimiser.cli_doses import dose_problem, given_doses, unknown_reagent
 from optimiser.cli_options import PROGRAM, build_parser
 from optimiser.cli_process import (
@@ -376,6 +376,7 @@ _COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
     "floors": _floors,
     "offers": _offers,
     "contracts": lambda options: run_contracts(options, _load, _print),
+    "negotiate": lambda options: run_negotiate(options, _load, _print),
     "chances": _chances,
     "jar": _jar,
     "check": _check,

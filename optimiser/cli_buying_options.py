@@ -37,6 +37,15 @@ def add_buying(commands: Any, add_command: AddCommand) -> None:
     parser.add_argument(
         "--json", action="store_true", help="print the result as JSON, nothing else"
     )
+    sheet = add_command(
+        commands, "negotiate", "tell what to ask each supplier: prices and terms, one page",
+        "negotiate site.yaml",
+    )  # fmt: skip
+    sheet.add_argument(
+        "--expired", action="store_true", help="count offers that do not hold today as well"
+    )
+    sheet.add_argument("--csv", metavar="FILE", type=Path, help="write the prices to FILE as well")
+    sheet.add_argument("--json", action="store_true", help="print the result as JSON, nothing else")
 
 
 def _offers_named(text: str) -> tuple[str, ...]:

@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from optimiser.deal import Deal
 from optimiser.errors import NoPurchase, UnknownOffer, VerificationFault
 from optimiser.evaluation import Evaluator, Place
 from optimiser.nearby import RADIUS, Standing, changed, point_data, stand
@@ -280,10 +281,9 @@ def _row(pool: Pool, group: Group, signing: Signing) -> Data:
         return {**row, **_EMPTY, "why": why}
     forced, track = found
     try:
-        deal = deal_of_point(forced, track.place.seen.priced, track.place.point)
+        cost, deal = exactly(forced, track.place)
     except NoPurchase as none:
         return {**row, **_EMPTY, "why": "; ".join(none.reasons)}
-    cost = exact_costs(forced, track.place.seen.priced, track.place.point, deal)
     fees = signing.fees_per_year
     if fees:
         cost = {**cost, "mobilisation": fees, "total": cost.pop("total") + fees}
@@ -293,6 +293,18 @@ def _row(pool: Pool, group: Group, signing: Signing) -> Data:
         "purchases": purchase_rows(forced, deal), "bill_per_year": deal.cost["total"] + fees,
         "bought_t_per_year": math.fsum(buy.bought_t_per_year for buy in mine), "verified": True,
     }  # fmt: skip
+
+
+def exactly(evaluator: Evaluator, place: Place) -> tuple[dict[str, float], Deal]:
+    """Cost of a point by cause with the total last, and its purchases.
+
+    Raises
+    ------
+    NoPurchase
+        Terms that tie offers together leave no way to buy its doses.
+    """
+    deal = deal_of_point(evaluator, place.seen.priced, place.point)
+    return exact_costs(evaluator, place.seen.priced, place.point, deal), deal
 
 
 def _today(site: Site) -> Data | None:

@@ -66,10 +66,11 @@ def entry_prices(plan: Standing, known: Sequence[Track], bought: Sequence[str]) 
     freight.
     """
     losing = [o for o in plan.evaluator.site.offers if o.offer not in set(bought)]
-    return [_entry(plan, offer, known) for offer in losing]
+    return [entry_price(plan, offer, known) for offer in losing]
 
 
-def _entry(plan: Standing, offer: Offer, known: Sequence[Track]) -> Data:
+def entry_price(plan: Standing, offer: Offer, known: Sequence[Track]) -> Data:
+    """Entry price of one offer against a plan; see `entry_prices`."""
     evaluator = plan.evaluator
     row: Data = {
         "offer": offer.offer, "supplier": offer.supplier, "reagent": offer.reagent,
@@ -197,3 +198,9 @@ def _forced(plan: Standing, offer: Offer, price_per_t: float) -> Evaluator:
 def _recipe(plan: Standing, doses: Any, controller: int) -> list[str]:
     names = plan.evaluator.plant.names
     return [n for i, n in enumerate(names) if doses[i] > 0.0 or i == controller]
+
+
+def recipe_at(plan: Standing, place: Place) -> list[str]:
+    """Reagents of a point, its controller among them."""
+    point = place.seen.points.take([place.point])
+    return _recipe(plan, point.doses[0], int(point.controller[0]))
