@@ -18,6 +18,8 @@ if TYPE_CHECKING:
     from optimiser.explain import explain_plan as explain_plan
     from optimiser.floors import explain_floors as explain_floors
     from optimiser.negotiation import negotiate as negotiate
+    from optimiser.order_plan import plan_orders as plan_orders
+    from optimiser.order_size import steady_order as steady_order
     from optimiser.planning import plan as plan
     from optimiser.purchasing import purchase as purchase
     from optimiser.site_reader import load_site as load_site
@@ -33,8 +35,10 @@ _HOMES = {
     "load_site": "optimiser.site_reader",
     "negotiate": "optimiser.negotiation",
     "plan": "optimiser.planning",
+    "plan_orders": "optimiser.order_plan",
     "plan_with_confidence": "optimiser.confidence",
     "purchase": "optimiser.purchasing",
+    "steady_order": "optimiser.order_size",
     "trade_off": "optimiser.trade_curve",
 }
 
@@ -48,8 +52,10 @@ __all__ = [
     "load_site",
     "negotiate",
     "plan",
+    "plan_orders",
     "plan_with_confidence",
     "purchase",
+    "steady_order",
     "trade_off",
 ]
 

@@ -16,6 +16,7 @@ from typing import TYPE_CHECKING, Any
 from optimiser.cli_buying import run_contracts, run_negotiate
 from optimiser.cli_doses import dose_problem, given_doses, unknown_reagent
 from optimiser.cli_options import PROGRAM, build_parser
+from optimiser.cli_orders import run_orders
 from optimiser.cli_process import (
     BAD_INPUT,
     DONE,
@@ -377,6 +378,7 @@ _COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
     "offers": _offers,
     "contracts": lambda options: run_contracts(options, _load, _print),
     "negotiate": lambda options: run_negotiate(options, _load, _print),
+    "orders": lambda options: run_orders(options, _load, _print),
     "chances": _chances,
     "jar": _jar,
     "check": _check,

@@ -1,4 +1,4 @@
-"""The options of the commands of buyers: contracts compared, and the sheet for negotiations.
+"""The options of the commands of buyers: contracts compared, orders over a year.
 
 Owns what can be typed; how a command is added is handed in by `optimiser.cli_options`.
 """
@@ -6,6 +6,8 @@ Owns what can be typed; how a command is added is handed in by `optimiser.cli_op
 from __future__ import annotations
 
 import argparse
+import datetime
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any, Protocol
 
@@ -46,6 +48,43 @@ def add_buying(commands: Any, add_command: AddCommand) -> None:
     )
     sheet.add_argument("--csv", metavar="FILE", type=Path, help="write the prices to FILE as well")
     sheet.add_argument("--json", action="store_true", help="print the result as JSON, nothing else")
+
+
+def add_orders(
+    commands: Any,
+    add_command: AddCommand,
+    *,
+    demand: Callable[[str], tuple[str, float]],
+    add_chart: Callable[[argparse.ArgumentParser], None],
+) -> None:
+    """Add the command of orders; how a demand is read and a chart asked for is handed in."""
+    parser = add_command(
+        commands, "orders", "tell when to order how much over a year, and draw the stock",
+        "orders site.yaml --from 2027-01-04 --chart stock.svg",
+    )  # fmt: skip
+    parser.add_argument(
+        "--demand", metavar="REAGENT=KG_PER_YEAR", type=demand, action="extend", nargs="+",
+        default=[], help="kg of the pure compound needed in a year; repeat it for more (default: "
+        "what the plan buys)",
+    )  # fmt: skip
+    parser.add_argument(
+        "--from", metavar="DATE", type=_day, dest="first_day",
+        help="first day of the year (default: the first of next month)",
+    )  # fmt: skip
+    parser.add_argument("--csv", metavar="FILE", type=Path, help="write the orders to FILE as well")
+    add_chart(parser)
+    parser.add_argument(
+        "--json", action="store_true", help="print the result as JSON, nothing else"
+    )
+
+
+def _day(text: str) -> datetime.date:
+    try:
+        return datetime.date.fromisoformat(text)
+    except ValueError:
+        raise argparse.ArgumentTypeError(
+            f"expected a date such as 2027-01-04, found {text!r}"
+        ) from None
 
 
 def _offers_named(text: str) -> tuple[str, ...]:

@@ -9,7 +9,7 @@ import argparse
 from pathlib import Path
 from typing import Any, NoReturn
 
-from optimiser.cli_buying_options import add_buying
+from optimiser.cli_buying_options import add_buying, add_orders
 
 BAD_USAGE = 2
 PROGRAM = "dosewright"
@@ -140,6 +140,7 @@ def build_parser() -> argparse.ArgumentParser:
     _add_floors(commands)
     _add_offers(commands)
     add_buying(commands, _add_command)
+    add_orders(commands, _add_command, demand=_demand, add_chart=_add_chart)
     _add_chances(commands)
     _add_jar(commands)
     _add_command(commands, "check", "read a site and report every problem found", "check site.yaml")

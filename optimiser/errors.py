@@ -3,6 +3,7 @@
 OptimiserError
 ├── NoPlan              no doses meet every limit with what the site allows      (exit code 3)
 ├── NoPurchase          the offers cannot cover the demand                       (exit code 3)
+├── NoOrderPlan         no orders keep stock within store, floor and shelf life  (exit code 3)
 ├── TradeOffError       a trade-off that was asked for wrongly                   (exit code 2)
 ├── ChartError          a chart that cannot be drawn as it was asked for         (exit code 2)
 ├── FeedRefused         a feed that must not be planned on as it stands          (exit code 2)
@@ -89,6 +90,16 @@ class UnknownOffer(OptimiserError):  # noqa: N818 - says what happened
             f"{name}: no offer that could be signed\n    Offers that hold and are not signed yet: "
             f"{listing or 'none'}."
         )
+
+
+class NoOrderPlan(OptimiserError):  # noqa: N818 - named after what happened, like its siblings
+    """No dates and sizes of orders keep the stock as it must be; ``reasons`` says why."""
+
+    exit_code: ClassVar[int] = 3
+
+    def __init__(self, reasons: Iterable[str]) -> None:
+        self.reasons: tuple[str, ...] = tuple(reasons)
+        super().__init__(_with_reasons("no orders keep the stock as it must be:", self.reasons))
 
 
 class TradeOffError(OptimiserError):

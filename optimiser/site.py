@@ -28,6 +28,7 @@ __all__ = [
     "Site",
     "SolidSwitch",
     "SolverSettings",
+    "StockKeeping",
     "Treatment",
 ]
 
@@ -137,6 +138,23 @@ class Dosing:
     store_m3: float | None = None
     store_t: float | None = None
     lowest_degc: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class StockKeeping:
+    """What ordering and keeping stock cost, and how the use is spread over the year.
+
+    ``order_fee`` is what an order costs beside its freight (placing, receiving, checking), in the
+    site's currency; ``holding_percent_per_year`` is of the goods' price. Both defaults are common
+    practice without a source. ``least_stock_d`` days of use are always there, or the offer's lead
+    time where that is longer. ``monthly_flow_m3_per_d`` has twelve flows from January on, whose
+    ratios spread the year's use; empty: those of the samples, or an even year.
+    """
+
+    order_fee: float = 50.0
+    holding_percent_per_year: float = 10.0
+    least_stock_d: float = 0.0
+    monthly_flow_m3_per_d: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -258,6 +276,7 @@ class Site:
     uncertainty: Uncertainty = Uncertainty()
     peak_flow_m3_per_d: float | None = None
     dosing: Mapping[str, Dosing] = field(default_factory=dict)
+    stock: StockKeeping = StockKeeping()
     pretreated: Mapping[str, str] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
     today: Mapping[str, float] = field(default_factory=dict)

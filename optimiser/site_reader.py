@@ -23,7 +23,15 @@ from chemistry.feed import ANALYTES, BURDENS, FeedWater, WaterAnalysis, feed_wat
 from chemistry.sample_waters import SampleWaters, close_samples, mean_analysis
 from chemistry.system import System
 from optimiser.jar_file import JarCalibration
-from optimiser.site import Disposal, Dosing, Procurement, Site, SolverSettings, Uncertainty
+from optimiser.site import (
+    Disposal,
+    Dosing,
+    Procurement,
+    Site,
+    SolverSettings,
+    StockKeeping,
+    Uncertainty,
+)
 from optimiser.site_constants import OwnBlock, read_own
 from optimiser.site_dosing import read_dosing
 from optimiser.site_feed import FeedBlock, read_feed
@@ -33,6 +41,7 @@ from optimiser.site_offers import SiteOffers, read_site_offers
 from optimiser.site_procurement import read_procurement
 from optimiser.site_salt import ACTIVITY_CHOICES, AUTO, activity_notes, saltiest_mol_per_l
 from optimiser.site_samples import SampleBlock
+from optimiser.site_stock import read_stock
 from optimiser.site_treatment import (
     TreatmentBlock,
     read_disposal,
@@ -59,6 +68,7 @@ class _Blocks:
     offers: SiteOffers
     solver: SolverSettings
     dosing: Mapping[str, Dosing]
+    stock: StockKeeping
     uncertainty: Uncertainty
     doses_today: Mapping[str, float]
     procurement: Procurement
@@ -141,6 +151,7 @@ def _read_blocks(
         ),
         solver=read_solver(entry.block_or_none("solver")),
         dosing=read_dosing(entry.block_or_none("dosing"), known),
+        stock=read_stock(entry.block_or_none("stock")),
         uncertainty=read_uncertainty(entry.block_or_none("uncertainty")),
         doses_today=entry.numbers("today", known, "reagents allowed in treatment", NON_NEGATIVE),
         procurement=read_procurement(entry.block_or_none("procurement"), known),
@@ -291,7 +302,7 @@ def _site(
         variability=limits.variability, floors_mg_per_l=changes.floors_mg_per_l,
         treatment=changes.treatment, disposal=disposal,
         burden_charges_per_kg=blocks.charges, offers=blocks.offers.offers, solver=blocks.solver,
-        uncertainty=blocks.uncertainty, dosing=blocks.dosing,
+        uncertainty=blocks.uncertainty, dosing=blocks.dosing, stock=blocks.stock,
         peak_flow_m3_per_d=feed.peak_flow_m3_per_d,
         pretreated=feed.pretreated, today=blocks.doses_today,
         procurement=blocks.procurement,

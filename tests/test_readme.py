@@ -127,7 +127,8 @@ def test_the_python_of_the_page_runs() -> None:
 
 
 @pytest.mark.parametrize(
-    "name", ["plan", "assess", "explain", "tradeoff", "curves", "floors", "jar", "check", "new"]
+    "name",
+    ["plan", "assess", "explain", "tradeoff", "curves", "floors", "orders", "jar", "check", "new"],
 )
 def test_every_command_is_on_the_page(name: str) -> None:
     assert re.search(rf"`dosewright {name} ", README)

@@ -352,6 +352,14 @@ def test_an_analysis_that_cannot_be_electroneutral_is_refused_at_its_line() -> N
          "27: dosing.caustic_soda.pump_l_per_h.low",
          "found low 5 is not below high 2, expected the least and the greatest rate\n"
          "    Exchange or correct them."),
+        ("offers: offers.csv",
+         "offers: offers.csv\nstock: {monthly_flow_m3_per_d: [60, 50, 70]}",
+         "27: stock.monthly_flow_m3_per_d",
+         "found 3 flows, expected twelve flows in m3/d, from January to December\n"
+         "    Write one for every month, 0 where the plant rests."),
+        ("offers: offers.csv", "offers: offers.csv\nstock: {holding_percent_per_year: 0}",
+         "27: stock.holding_percent_per_year",
+         "found 0, expected a number above 0 and at most 100\n" + RANGE),
     ],
 )  # fmt: skip
 def test_one_slip_gives_one_message(old: str, new: str, place: str, text: str) -> None:

@@ -20,7 +20,7 @@ ROOT = Path(__file__).resolve().parents[2]
 DEMO = ROOT / "catalogs" / "sites" / "plating_rinse"
 QUICK = ROOT / "catalogs" / "sites" / "mercury_lab"
 PLAN_QUICK = ("plan", QUICK / "site.yaml", "--most-reagents", "2", "--time-limit", "600")
-COMMANDS = ("plan", "assess", "tradeoff", "curves", "floors", "jar", "check", "new")
+COMMANDS = ("plan", "assess", "tradeoff", "curves", "floors", "orders", "jar", "check", "new")
 HEAVY = ("numpy", "scipy", "pandas", "pulp", "highspy", "yaml", "matplotlib")
 
 
