@@ -19,7 +19,7 @@ from optimiser.errors import NoPurchase, UnknownOffer, VerificationFault
 from optimiser.evaluation import Evaluator, Place
 from optimiser.nearby import RADIUS, Standing, changed, point_data, stand
 from optimiser.offer import Offer
-from optimiser.plan_purchases import deal_of_point, exact_costs, purchase_rows
+from optimiser.plan_purchases import deal_of_point, exact_costs, exact_place, purchase_rows
 from optimiser.planning import find
 from optimiser.polish import Track, polish_each
 from optimiser.recipes import set_point_bounds
@@ -223,10 +223,19 @@ class Pool:
             forced, [track.place for _, _, track in ranked[:RECIPES_TRIED]], self.plan.solver,
             bounds=set_point_bounds(forced), steps=STEPS, radius=RADIUS,
         )  # fmt: skip
-        for track in sorted((t for t in tracks if t.feasible), key=lambda t: t.total):
+        bought = [b for t in tracks if t.feasible and (b := _exact(forced, t.place)) is not None]
+        for track in sorted(bought, key=lambda t: t.total):
             seen = forced.evaluate(track.point, slopes=False)
             if seen.feasible[0]:
-                return forced, Track(Place(seen, 0))
+                return forced, _exact(forced, Place(seen, 0)) or track
+        return None
+
+
+def _exact(evaluator: Evaluator, place: Place) -> Track | None:
+    """The place with its exact cost; None where it cannot be bought."""
+    try:
+        return Track(exact_place(evaluator, place))
+    except NoPurchase:
         return None
 
 

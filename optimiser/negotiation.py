@@ -15,11 +15,12 @@ from typing import TYPE_CHECKING, Any
 from optimiser.contracts import Pool, Signing, exactly
 from optimiser.deal import Buy
 from optimiser.entry_prices import entry_price, recipe_at
-from optimiser.errors import NoPurchase
+from optimiser.errors import NoPurchase, VerificationFault
 from optimiser.evaluation import Evaluator
 from optimiser.nearby import RESOLUTION, Standing
 from optimiser.offer import Offer, Tier
 from optimiser.polish import Track
+from optimiser.price_book import PriceBook
 from optimiser.site import Site
 
 if TYPE_CHECKING:
@@ -83,6 +84,11 @@ def negotiate(site: Site, progress: Callable[[str], None] | None = None) -> Nego
     begun = time.perf_counter()
     say = progress or (lambda _text: None)
     pool = Pool.of(site, progress)
+    found = pool.cheapest(_as_offered(pool.plan.evaluator.site))
+    if found is None:
+        raise VerificationFault(1 + len(pool.others))
+    others = (pool.plan.track, *pool.others)
+    pool = Pool(plan=replace(pool.plan, track=found[1]), others=others)
     plan = pool.plan
     cost, deal = exactly(plan.evaluator, plan.place)
     buys = {buy.offer: buy for buy in deal.buys if buy.bought_t_per_year > 0.0}
@@ -93,7 +99,8 @@ def negotiate(site: Site, progress: Callable[[str], None] | None = None) -> Nego
         if offer.offer in buys:
             bought.append({**drop_out_price(pool, offer), **_volume(buys[offer.offer])})
         elif not offer.signed:
-            lost.append(_with_percent(entry_price(plan, offer, pool.others)))
+            row = entry_price(plan, offer, pool.others)
+            lost.append(_with_percent({**row, **_exactness(site, offer, row)}))
     lost.sort(key=lambda row: (row["change_percent"] is None, -(row["change_percent"] or 0.0)))
     terms = []
     for offer in (one for one in offers if not one.signed):
@@ -140,7 +147,7 @@ def drop_out_price(pool: Pool, offer: Offer) -> Data:
         "price_per_t": offer.price_per_t, "freight_per_t": offer.freight_per_t,
         "drop_out_price_per_t": None, "bracket_low": None, "bracket_high": None,
         "verified": False, "room_percent": None, "without_total": None, "without_recipe": [],
-        "without_dearer_by": None, "without_offers": [], "signed": offer.signed,
+        "without_dearer_by": None, "without_offers": [], "signed": offer.signed, "exact": True,
     }  # fmt: skip
     if offer.signed:
         return row  # owed whatever its price
@@ -151,15 +158,28 @@ def drop_out_price(pool: Pool, offer: Offer) -> Data:
         return row
     rival = Standing(evaluator=plan.evaluator, solver=plan.solver, track=found[1])
     entry = entry_price(rival, offer, (plan.track, *pool.others))
+    entry |= _exactness(site, offer, entry)
     price = entry["entry_price_per_t"]
     return {
         **row, "drop_out_price_per_t": price, "bracket_low": entry["bracket_low"],
         "bracket_high": entry["bracket_high"], "verified": entry["verified"],
+        "exact": entry["exact"],
         "room_percent": _percent(offer.price_per_t, price), "without_total": rival.total,
         "without_recipe": recipe_at(rival, found[1].place),
         "without_dearer_by": rival.total - plan.total,
         "without_offers": _offers_bought(*found),
     }  # fmt: skip
+
+
+def _exactness(site: Site, offer: Offer, entry: Data) -> Data:
+    """Whether the price counts every term of what is bought at it; else it is not verified.
+
+    Packs, bundles, frameworks and shares of the offer itself, or of what is bought beside it, are
+    left aside where the price is looked for: such an offer may have to be cheaper still.
+    """
+    beside = [o for o in site.offers if o.reagent != offer.reagent]
+    tied = PriceBook((offer, *beside)).inexact & {offer.reagent, *(entry["recipe"] or ())}
+    return {"exact": not tied, "verified": entry["verified"] and not tied}
 
 
 def _offers_bought(evaluator: Evaluator, track: Track) -> list[str]:

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from optimiser.costing import FREIGHT, Priced
 from optimiser.deal import GOODS, Deal
 from optimiser.errors import NoPurchase
-from optimiser.evaluation import Evaluator
+from optimiser.evaluation import Evaluator, Place
 from optimiser.purchasing import best_deal
 from optimiser.search import Findings
 
@@ -26,7 +26,10 @@ Data = dict[str, Any]
 FloatArray = NDArray[np.float64]
 
 AGREEMENTS = "framework agreements"
-"""Cause of what belongs to no single reagent: fees and rebates of frameworks."""
+"""Cause of what belongs to no reagent of the site: fees and rebates of frameworks, and what a
+bundle's other members cost."""
+
+_ROUNDING = 1e-12
 
 
 def deal_of_point(evaluator: Evaluator, priced: Priced, point: int) -> Deal:
@@ -45,8 +48,9 @@ def exact_costs(evaluator: Evaluator, priced: Priced, point: int, deal: Deal) ->
             mine = [buy for buy in deal.buys if buy.reagent == name]
             found[name] = math.fsum(buy.cost_per_year - buy.freight_per_year for buy in mine)
         found[FREIGHT] = deal.cost[FREIGHT]
-        bought = math.fsum(buy.cost_per_year for buy in deal.buys)
-        found[AGREEMENTS] = deal.cost["total"] - bought
+        shown = math.fsum(found[name] for name in (*evaluator.plant.names, FREIGHT))
+        rest = deal.cost["total"] - shown
+        found[AGREEMENTS] = rest if abs(rest) > _ROUNDING * abs(shown) else 0.0
         found["total"] = math.fsum(found.values())
     else:
         found["total"] = float(priced.total[point])
@@ -89,18 +93,29 @@ def price_exactly(evaluator: Evaluator, findings: Findings) -> None:
         return
     reasons: dict[str, None] = {}
     for recipe, track in findings.feasible:
-        place = track.place
         try:
-            deal = deal_of_point(evaluator, place.seen.priced, place.point)
+            findings.best[recipe] = replace(track, place=exact_place(evaluator, track.place))
         except NoPurchase as none:
             reasons |= dict.fromkeys(none.reasons)
             del findings.best[recipe]
-            continue
-        costs = exact_costs(evaluator, place.seen.priced, place.point, deal)
-        seen = replace(place.seen, priced=_with_costs(place.seen.priced, place.point, costs))
-        findings.best[recipe] = replace(track, place=replace(place, seen=seen))
     if not findings.feasible:
         raise NoPurchase(reasons)
+
+
+def exact_place(evaluator: Evaluator, place: Place) -> Place:
+    """The place with its exact cost.
+
+    Raises
+    ------
+    NoPurchase
+        Its doses cannot be bought under the terms that tie offers together.
+    """
+    if not evaluator.pricing.book.inexact:
+        return place
+    deal = deal_of_point(evaluator, place.seen.priced, place.point)
+    costs = exact_costs(evaluator, place.seen.priced, place.point, deal)
+    seen = replace(place.seen, priced=_with_costs(place.seen.priced, place.point, costs))
+    return replace(place, seen=seen)
 
 
 def _with_costs(priced: Priced, point: int, costs: Mapping[str, float]) -> Priced:

@@ -10,6 +10,10 @@ from optimiser.tables import PLAIN, Ink, bullets, money, number, paragraph, tabl
 Data = Mapping[str, Any]
 
 MOST_ROWS = 12  # offers outside the plan, and terms, that a page has room for
+NOT_EXACT = (
+    "Not verified where packs, bundles, frameworks or shares tie what is bought at that price: it "
+    "leaves them aside, and such an offer may have to be cheaper still."
+)
 FAR_PERCENT = -60.0  # an offer that would have to fall further is not worth a call
 
 
@@ -34,6 +38,8 @@ def negotiation_text(data: Data, ink: Ink = PLAIN) -> str:
     lines += _bought(data["bought"], plan["reagents"])
     lines += ["", ink.heading("Not bought: the price at which they would come in")]
     lines += _not_bought(data["not_bought"])
+    if not all(row["exact"] for row in (*data["bought"], *data["not_bought"])):
+        lines += ["", *paragraph(NOT_EXACT)]
     if data["terms"]:
         lines += ["", ink.heading("What other terms are worth")]
         lines += _terms(data["terms"])

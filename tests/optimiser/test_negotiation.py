@@ -183,3 +183,18 @@ def test_the_command_prints_the_sheet_or_the_data(
     assert target.read_text(encoding="utf-8").count("\n") >= 2
     assert cli.main(["negotiate", site, "--json"]) == 0
     assert json.loads(capsys.readouterr().out)["bought"]
+
+
+def test_a_rival_in_a_bundle_costs_what_the_whole_bundle_costs() -> None:
+    """The second seller comes with a fee for a partner that stays idle: 600 over two years."""
+    fee = {"bundle": "both", "mobilisation_fee": 600.0, "term_years": 2.0}
+    site = with_terms(with_terms(single(), "NA-30", bundle="both"), "SA-99", **fee)
+    found = optimiser.negotiate(site)
+    mine, free = row(found, "bought", offer="NA-50"), row(told("single"), "bought", offer="NA-50")
+    assert mine["without_dearer_by"] == pytest.approx(free["without_dearer_by"] + 300.0, rel=2e-3)
+    more = mine["drop_out_price_per_t"] - free["drop_out_price_per_t"]
+    assert more == pytest.approx(300.0 / mine["bought_t_per_year"], rel=2e-2)
+    assert mine["verified"]
+    tied = row(found, "not_bought", offer="NA-30")
+    assert not tied["verified"]
+    assert "Not verified where packs, bundles" in negotiation_text(found.data)
