@@ -6,7 +6,8 @@ Owns what is drawn where; it reads the dictionary that ``--json`` prints and com
 from __future__ import annotations
 
 import datetime
-from collections.abc import Mapping
+import itertools
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -66,8 +67,7 @@ def _day(text: str) -> int:
 
 
 def _panel(axes: Axes, data: Data, store: Data) -> None:
-    name = store["reagent"].replace("_", " ")
-    axes.set_title(f"{name} ({', '.join(store['offers'])})", fontsize=9.0, fontweight="normal")
+    axes.set_title(_title(store), fontsize=9.0, fontweight="normal")
     axes.set_ylabel(f"stock, {store['unit']}")
     thousands(axes.yaxis)
     first, last = _day(data["first_day"]), _day(data["year_ends"])
@@ -122,22 +122,43 @@ def _beside(axes: Axes, last: int, height: float, text: str) -> None:
     )  # fmt: skip
 
 
-def _deliveries(axes: Axes, store: Data) -> None:
-    """A mark on every delivery, with its size where there is room."""
-    before, last_named = store["opening"], -LABEL_WEEKS
-    top = axes.get_ylim()[1]
+def _rises(store: Data) -> list[tuple[int, float]]:
+    """Weeks with a delivery, and what it brings."""
+    before, found = store["opening"], []
     for k, week in enumerate(store["weeks"]):
-        day, level = _day(week["from"]), week["after_delivery"]
-        rise, before = level - before, week["end"]
-        if rise <= NOTHING * top:
-            continue
+        rise, before = week["after_delivery"] - before, week["end"]
+        if rise > NOTHING * max(week["after_delivery"], NOTHING):
+            found.append((k, rise))
+    return found
+
+
+def _have_room(rises: Sequence[tuple[int, float]]) -> bool:
+    """Whether every delivery can be labelled before the next one comes."""
+    weeks = [week for week, _ in rises]
+    return all(after - week >= LABEL_WEEKS for week, after in itertools.pairwise(weeks))
+
+
+def _title(store: Data) -> str:
+    name, rises = store["reagent"].replace("_", " "), _rises(store)
+    text = f"{name} ({', '.join(store['offers'])}): {len(rises)} "
+    text += "delivery" if len(rises) == 1 else "deliveries"
+    if not _have_room(rises):
+        sizes = [rise for _, rise in rises]
+        text += f" of {number(min(sizes))} to {number(max(sizes))} {store['unit']}"
+    return text
+
+
+def _deliveries(axes: Axes, store: Data) -> None:
+    """A mark on every delivery, with its size where there is room for all sizes."""
+    top, size, rises = axes.get_ylim()[1], store["store"], _rises(store)
+    named = _have_room(rises)
+    for k, rise in rises:
+        day, level = _day(store["weeks"][k]["from"]), store["weeks"][k]["after_delivery"]
         axes.plot(
             day, level, marker="v", color=pen(2).colour, markersize=5.0, zorder=5, clip_on=False,
         )  # fmt: skip
-        if k - last_named < LABEL_WEEKS:
+        if not named:
             continue
-        last_named = k
-        size = store["store"]
         at_store = size is not None and 0.0 <= size - level < 0.12 * top
         axes.annotate(
             f"+{number(rise)}", (day, size if at_store else level), (3, 3 if at_store else 6),

@@ -288,10 +288,16 @@ def _notes(plan: OrderPlan, totals: Sequence[Data]) -> list[str]:
     notes = []
     for row in totals:
         more = row["ordered_t_per_year"] - row["plan_bought_t_per_year"]
+        kept = row["closing_t"] - row["opening_t"]
         if more > _SHOWN_T:
             notes.append(
                 f"{row['offer']}: whole orders bring {more:.3g} t more than the plan's year buys; "
-                f"{max(row['closing_t'] - row['opening_t'], 0.0):.3g} t of stock go into next year"
+                f"{max(kept, 0.0):.3g} t of stock go into next year"
+            )
+        elif kept > _SHOWN_T:
+            notes.append(
+                f"{row['offer']}: {kept:.3g} t that are bought beyond the year's use go into next "
+                "year's stock"
             )
         if row["written_off_t_per_year"] > _SHOWN_T:
             notes.append(

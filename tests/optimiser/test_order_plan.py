@@ -14,6 +14,7 @@ from typing import Any
 import pytest
 
 import optimiser
+from chemistry.samples import Sample, Samples
 from optimiser import cli
 from optimiser.chart_orders import draw_orders
 from optimiser.errors import NoOrderPlan
@@ -136,6 +137,33 @@ def test_weeks_cover_the_year_and_follow_the_months() -> None:
     assert leap.end == datetime.date(2029, 3, 1)
 
 
+def test_without_monthly_flows_those_of_the_samples_count() -> None:
+    analysis = base().analysis
+    taken = [
+        Sample(day=datetime.date(2026, month, 10), time="", label="", flow_m3_per_d=flow,
+               analysis=analysis)
+        for month, flow in ((1, 50.0), (1, 70.0), (2, 120.0))
+    ]  # fmt: skip
+    sampled = replace(
+        base(), stock=StockKeeping(), samples=Samples(source="lab.csv", samples=tuple(taken))
+    )
+    year = order_year(sampled, FIRST)
+    assert year.shares[4] / year.shares[0] == pytest.approx(120.0 / 60.0)
+    assert year.shares[20] / year.shares[0] == pytest.approx(90.0 / 60.0)
+    assert "know 2 of twelve months" in year.basis
+    given = order_year(replace(sampled, stock=STOCK), FIRST)
+    assert given.basis == "the monthly flows of the site file"
+
+
+def test_a_surplus_of_the_purchase_stays_in_stock() -> None:
+    site = site_of(replace(CAUSTIC, lead_time_d=0.0))
+    data = plan_orders(site, {"caustic_soda": 1500.0}, first_day=FIRST).to_dict()
+    (row,) = data["offers"]
+    assert (row["ordered_t_per_year"], row["used_t_per_year"]) == pytest.approx((4.0, 3.0))
+    assert row["closing_t"] - row["opening_t"] == pytest.approx(1.0)
+    assert any("1 t that are bought beyond the year's use" in note for note in data["notes"])
+
+
 def test_a_store_too_small_for_the_least_order_is_refused() -> None:
     site = site_of(CAUSTIC, dosing={"caustic_soda": Dosing(store_m3=2.9)})
     with pytest.raises(NoOrderPlan) as caught:
@@ -241,6 +269,8 @@ def test_the_chart_carries_the_stock_it_claims(tmp_path: Path) -> None:
             claimed += [week["after_delivery"], week["end"]]
         assert [up(y) for _, y in points] == pytest.approx(claimed, abs=0.02)
     words = texts(root)
+    count = len(rows_of(planned(), "LI"))
+    assert any(f"hydrated lime (LI): {count} deliveries" in word for word in words)
     assert "store takes 9 m3" in words
     assert "must be there" in words
 
