@@ -241,13 +241,14 @@ def feed_water(analysis: WaterAnalysis, system: System) -> FeedWater:
         state = equilibrate(bare, totals[None, :])
     acid = _compare_acid(analysis, system, measured, ion, rule, closed, float(sampled.ph[0]))
     above = _supersaturation(system, state)
+    particulate, unmodelled = carried_by(analysis)
     water = FeedWater(
         analysis=analysis, system=system, totals_mol_per_l=totals, state=state,
         ph_as_sampled=float(sampled.ph[0]),
         charge_balance_error_percent=charge_balance_error_percent(cations, anions),
         cations_meq_per_l=cations, anions_meq_per_l=anions, closing_ion=ion,
         closing_mol_per_l=closed.added_mol_per_l,
-        particulate_mg_per_l=_particulate(analysis), unmodelled_mg_per_l=_unmodelled(analysis),
+        particulate_mg_per_l=particulate, unmodelled_mg_per_l=unmodelled,
         below_reporting_limit=tuple(
             a for a, m in analysis.measurements.items() if m.below_reporting_limit
         ),
@@ -371,20 +372,12 @@ def _compare_acid(
     )  # fmt: skip
 
 
-def _particulate(analysis: WaterAnalysis) -> dict[str, float]:
-    return {
-        name: value.particulate_mg_per_l
-        for name, value in analysis.measurements.items()
-        if value.particulate_mg_per_l > 0.0
-    }
-
-
-def _unmodelled(analysis: WaterAnalysis) -> dict[str, float]:
-    return {
-        name: value.dissolved_mg_per_l
-        for name, value in analysis.measurements.items()
-        if not ANALYTES[name].is_modelled
-    }
+def carried_by(analysis: WaterAnalysis) -> tuple[dict[str, float], dict[str, float]]:
+    """Analytes as solids of the feed, and those dissolved without a component. [mg/L]"""
+    found = analysis.measurements.items()
+    particulate = {n: v.particulate_mg_per_l for n, v in found if v.particulate_mg_per_l > 0.0}
+    unmodelled = {n: v.dissolved_mg_per_l for n, v in found if not ANALYTES[n].is_modelled}
+    return particulate, unmodelled
 
 
 def _supersaturation(system: System, state: EquilibriumState) -> dict[str, float]:

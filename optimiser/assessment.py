@@ -15,6 +15,7 @@ from optimiser.outcome import Assessment
 from optimiser.planning import refuse_salty
 from optimiser.points import Points
 from optimiser.recipes import make_recipe, trim_for
+from optimiser.sample_search import on_every_sample
 from optimiser.separators import separator_sites
 from optimiser.site import Offer, Site
 
@@ -23,6 +24,8 @@ if TYPE_CHECKING:
 
 TRIMS = ("auto", "none")
 TRIM_STAGE = "trim"
+SECANT_STEPS = 20
+SAME_DOSE = 1e-10  # relative; a mean dose is the one given when it is this close
 
 
 def assess(
@@ -57,7 +60,8 @@ def assess(
     Of the reagents that can control a pH the one of best rank is taken to do so. Its dose brings
     the water at the dearest end (gypsum and calcite formed or not, CO2 kept or vented) to a pH:
     that is the set point, around which every corner is checked. Where the site may choose its
-    separator, the doses are assessed with the cheapest one that complies.
+    separator, the doses are assessed with the cheapest one that complies. Where the feed is many
+    samples the doses are means of the volume, and every sample is judged at that set point.
     """
     if trim not in TRIMS:
         raise ValueError(f"trim is {trim!r}: use 'auto' or 'none'")
@@ -78,6 +82,9 @@ def _assess(site: Site, doses: Mapping[str, float], trim: str) -> Assessment:
     tank, trimmed = _read_doses(evaluator, doses)
     refuse_salty(site, evaluator.plant.feed.ionic_strength, "the feed")
     points = _points(evaluator, tank, trimmed, trim)
+    evaluator = on_every_sample(evaluator)
+    if evaluator.plant.feeds.many:
+        points = _at_mean_dose(evaluator, points, tank)
     seen = evaluator.evaluate(points)
     strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)
     refuse_salty(site, strength, "the dosed water")
@@ -180,6 +187,29 @@ def _as_controlled(evaluator: Evaluator, point: Points) -> Points:
     would = float(seen.priced.trim_doses[0, point.trim[0]])
     given = float(point.trim_dose[0])
     return driven if abs(would - given) <= 1e-6 * max(given, 1e-9) else point
+
+
+def _at_mean_dose(evaluator: Evaluator, point: Points, tank: np.ndarray) -> Points:
+    """The set point at which the controller's mean dose over the samples is the one given."""
+    controller = int(point.controller[0])
+    if controller < 0:
+        return point
+    given = float(tank[controller])
+
+    def miss(ph: float) -> float:
+        tried = replace(point, ph=np.array([ph]))
+        seen = evaluator.evaluate(tried, full=False)
+        return float(seen.priced.doses[0, controller]) / given - 1.0
+
+    before, here = float(point.ph[0]), float(point.ph[0]) + 0.01
+    value_before, value = miss(before), miss(here)
+    for _ in range(SECANT_STEPS):
+        if abs(value) <= SAME_DOSE or value == value_before:
+            break
+        move = float(np.clip(value * (here - before) / (value - value_before), -0.5, 0.5))
+        before, value_before, here = here, value, here - move
+        value = miss(here)
+    return replace(point, ph=np.array([here]))
 
 
 def _ph_range(seen: Evaluation) -> tuple[float, float]:

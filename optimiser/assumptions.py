@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from catalogs.constants import enthalpy_unknown
 from optimiser.evaluation import Evaluator
+from optimiser.sample_figures import shrunk_factors
 
 
 def assumptions(evaluator: Evaluator) -> list[str]:
@@ -29,7 +30,7 @@ def assumptions(evaluator: Evaluator) -> list[str]:
                 f"{len(kept)} constants without a known enthalpy keep their 25 C value: "
                 f"{', '.join(sorted(kept)[:6])}{' and others' if len(kept) > 6 else ''}"
             )
-    return [*texts, *evaluator.plant.feed.notes, *site.notes]
+    return [*texts, *shrunk_factors(evaluator), *evaluator.plant.feed.notes, *site.notes]
 
 
 def versions(solver: str) -> dict[str, str]:

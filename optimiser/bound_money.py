@@ -25,8 +25,8 @@ from chemistry.sludge import dry_masses_mg_per_l, metal_weights_mg_per_mol, meta
 from optimiser.bound_intervals import Ranges, Water
 from optimiser.bound_rows import LOOSENED, StateRows
 from optimiser.evaluation import Evaluator
+from optimiser.feeds import SUMMED_STATES
 from optimiser.linear_model import Expression, Model, Sense
-from optimiser.quality import SUMMED_STATES
 from optimiser.site import DisposalRule
 
 FloatArray = NDArray[np.float64]

@@ -14,8 +14,9 @@ from numpy.typing import NDArray
 
 from chemistry.burden import BURDENS
 from chemistry.sludge import Sludge, sludge
+from optimiser.feeds import SUMMED_STATES
 from optimiser.plant import Plant
-from optimiser.points import CLOSED_FORMED, VENTED_FORMED, Block, Points, Rows
+from optimiser.points import CLOSED_FORMED, VENTED_FORMED, Block, NominalRows, Points, Rows
 from optimiser.price_book import PriceBook
 from optimiser.quality import Judged
 from optimiser.site import DisposalRule
@@ -33,15 +34,16 @@ SURCHARGES = "surcharges"
 class Priced:
     """Costs of points: ``by_cause`` arrays (points,) per year, ``total`` their sum.
 
-    ``doses`` and ``trim_doses`` (points, reagents) are fed, mg/L; ``offers`` the offer chosen per
-    reagent (index into the site's offers, -1 none); ``sludges`` the dearest end's sludge per point
-    with the rule that set its class.
+    ``doses`` and ``trim_doses`` (points, reagents) are fed, mg/L, the mean of the volume; ``fed``
+    (points, samples, reagents) what each sample's tank gets; ``sludges`` the dearest end's sludge
+    of each point with the rule that set its class.
     """
 
     by_cause: dict[str, FloatArray]
     total: FloatArray
     doses: FloatArray
     trim_doses: FloatArray
+    fed: FloatArray
     sludges: list[tuple[Sludge, int, DisposalRule] | None]
 
 
@@ -67,8 +69,9 @@ class Pricing:
     ) -> Priced:
         """Cost of every point from its nominal states, the dearest end where ends differ."""
         plant = self.plant
-        doses = plant.fed_doses(points, rows, blocks)
-        trim = self._trim_doses(points, rows, blocks)
+        fed = plant.fed_doses(points, rows, blocks)
+        doses = self.mean(fed)
+        trim = self.mean(self._trim_doses(points, rows, blocks))
         by_cause: dict[str, FloatArray] = {}
         freight = np.zeros(len(points))
         for i, name in enumerate(plant.names):
@@ -89,15 +92,19 @@ class Pricing:
         by_cause[BURDEN] = self._burden(points, rows, judged)
         by_cause[SURCHARGES] = self._surcharges(points, rows, judged)
         total = np.sum(list(by_cause.values()), axis=0)
-        return Priced(by_cause, total, doses, trim, sludges)
+        return Priced(by_cause, total, doses, trim, fed, sludges)
+
+    def mean(self, values: FloatArray) -> FloatArray:
+        """Mean of the volume of values (points, samples, ...), (points, ...)."""
+        return np.asarray(np.tensordot(values, self.plant.feeds.weight, axes=(1, 0)), dtype=float)
 
     def _trim_doses(self, points: Points, rows: Rows, blocks: Sequence[Block]) -> FloatArray:
-        trim = np.zeros((len(points), len(self.plant.names)))
+        trim = np.zeros((len(points), len(self.plant.feeds), len(self.plant.names)))
         for block in blocks:
-            for k in np.flatnonzero(rows.nominal[block.rows] & block.trimmed):
-                point = rows.point[block.rows[k]]
-                reagent = points.trim[point]
-                trim[point, reagent] = max(trim[point, reagent], block.trim_dose[k])
+            some = rows.nominal[block.rows] & block.trimmed
+            point = rows.point[block.rows[some]]
+            place = (point, rows.sample[block.rows[some]], points.trim[point])
+            np.maximum.at(trim, place, block.trim_dose[some])
         return trim
 
     def unreacted_mg_per_l(self, doses: FloatArray) -> FloatArray:
@@ -117,12 +124,12 @@ class Pricing:
                 return rule
         return self.plant.site.disposal.rules[-1]
 
-    def weigh(self, block: Block, picked: NDArray[np.int64], unreacted: FloatArray) -> Sludge:
-        """Sludge of some rows of a block."""
+    def weigh(self, solids_mol_per_l: FloatArray, unreacted: FloatArray) -> Sludge:
+        """Sludge of some waters' mean solids."""
         plant = self.plant
         disposal = plant.site.disposal
         return sludge(
-            block.state.solids_mol_per_l[picked], plant.system,
+            solids_mol_per_l, plant.system,
             cake_solids_fraction=disposal.cake_solids_fraction,
             bound_water_factor=disposal.bound_water_factor,
             unreacted_mg_per_l=unreacted,
@@ -134,18 +141,19 @@ class Pricing:
     def _sludge(
         self, points: Points, rows: Rows, blocks: Sequence[Block], doses: FloatArray
     ) -> tuple[list[tuple[Sludge, int, DisposalRule] | None], FloatArray, FloatArray, FloatArray]:
-        n = len(points)
+        n, plant = len(points), self.plant
         found: list[tuple[Sludge, int, DisposalRule] | None] = [None] * n
         tariff, fees, polymer = np.zeros(n), np.zeros(n), np.zeros(n)
         unreacted = self.unreacted_mg_per_l(doses)
         for block in blocks:
             if block.end not in (CLOSED_FORMED, VENTED_FORMED):
                 continue
-            picked = np.flatnonzero(rows.nominal[block.rows] & block.reached)
-            if not picked.size:
+            nominal = NominalRows.at(block.end, rows, blocks, n)
+            point = np.flatnonzero(nominal.known)
+            if not point.size:
                 continue
-            point = rows.point[block.rows[picked]]
-            made = self.weigh(block, picked, unreacted[point])
+            solids = nominal.mean([b.state.solids_mol_per_l for b in blocks], plant.feeds.weight)
+            made = self.weigh(solids[point], unreacted[point])
             tonnes = made.wet_mg_per_l * self.kg_per_mg_per_l / 1000.0
             for row, i in enumerate(point):
                 rule = self.rule(made, row)
@@ -156,39 +164,38 @@ class Pricing:
                     polymer[i] = (
                         made.polymer_mg_per_l[row]
                         * self.kg_per_mg_per_l
-                        * self.plant.treatment.polymer_price_per_kg
+                        * plant.treatment.polymer_price_per_kg
                     )
         return found, tariff, fees, polymer
 
     def _burden(self, points: Points, rows: Rows, judged: Sequence[Judged]) -> FloatArray:
         charges = self.plant.site.burden_charges_per_kg
-        cost = np.zeros(len(points))
+        cost = np.zeros((len(points), len(self.plant.feeds)))
         if not charges:
-            return cost
+            return cost[:, 0]
         for part in judged:
             nominal = rows.nominal[part.block.rows]
             here = np.zeros(nominal.size)
             for name, rate in charges.items():
                 if name in BURDENS:
                     here += rate * self.kg_per_mg_per_l * np.maximum(part.burden[name], 0.0)
-            point = rows.point[part.block.rows[nominal]]
-            np.maximum.at(cost, point, here[nominal])
-        return cost
+            some = part.block.rows[nominal]
+            np.maximum.at(cost, (rows.point[some], rows.sample[some]), here[nominal])
+        return self.mean(cost)
 
     def _surcharges(self, points: Points, rows: Rows, judged: Sequence[Judged]) -> FloatArray:
-        cost = np.zeros(len(points))
+        cost = np.zeros((len(points), len(self.plant.feeds)))
         if not self.surcharges:
-            return cost
+            return cost[:, 0]
         for part in judged:
             nominal = rows.nominal[part.block.rows]
             here = surcharge_per_year(self.surcharges, part, self.kg_per_mg_per_l)
-            np.maximum.at(cost, rows.point[part.block.rows[nominal]], here[nominal])
-        return cost
+            some = part.block.rows[nominal]
+            np.maximum.at(cost, (rows.point[some], rows.sample[some]), here[nominal])
+        return self.mean(cost)
 
 
 def _content(content: dict[str, float], metal: str) -> float:
-    from optimiser.quality import SUMMED_STATES
-
     return sum(content.get(part, 0.0) for part in SUMMED_STATES.get(metal, (metal,)))
 
 

@@ -16,8 +16,9 @@ from chemistry.analysis import ANALYTES
 from chemistry.feed import feed_water
 from chemistry.response import Response, linearise, response
 from optimiser.curves import Curve
+from optimiser.feeds import SUMMED_STATES
 from optimiser.plant import Plant
-from optimiser.quality import LOADS, SUMMED_STATES, Judge
+from optimiser.quality import LOADS, Judge
 from optimiser.site import Site
 
 FloatArray = NDArray[np.float64]

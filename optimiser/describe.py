@@ -23,8 +23,9 @@ from optimiser.gas_figures import gas_figures
 from optimiser.held_up import HeldUp, held_up_by
 from optimiser.plan_purchases import deal_of_point, exact_costs, purchase_rows
 from optimiser.points import END_TEXT
-from optimiser.quality import LOADS
+from optimiser.quality import LOADS, MONTHLIES
 from optimiser.quality_slopes import RULE
+from optimiser.sample_figures import monthly_limit, sample_figures
 from optimiser.site_jar import jar_cautions
 from optimiser.site_salt import MODEL_TEXT
 from optimiser.sludge_figures import sludge_data
@@ -53,7 +54,8 @@ class Describer:
         )
 
     def _rows(self, rows: NDArray[np.int64]) -> NDArray[np.bool_]:
-        mine: NDArray[np.bool_] = self.seen.rows.point[rows] == self.point
+        all_rows = self.seen.rows
+        mine: NDArray[np.bool_] = (all_rows.point[rows] == self.point) & all_rows.counts[rows]
         return mine
 
     # -- doses and money ---------------------------------------------------------------------------
@@ -124,9 +126,14 @@ class Describer:
         for number, check in enumerate(self.evaluator.judge.checks):
             if check.averaging == RULE:
                 continue
+            if check.averaging in MONTHLIES and self.plant.feeds.many:
+                rows.append(monthly_limit(self.evaluator, self.seen, self.point, number))
+                continue
             part, k = self._worst(number)
             value = float(part.value[k, number])
-            scale = self.site.flow_m3_per_d / 1000.0 if check.averaging in LOADS else 1.0
+            day = self.plant.feeds.flow_ratio[self.seen.rows.sample[part.block.rows[k]]]
+            flow = float(day) * self.site.flow_m3_per_d
+            scale = flow / 1000.0 if check.averaging in LOADS else 1.0
             metals = list(check.metals)
             residual = part.residual[k, metals].sum() if metals else value
             theory = part.theory[k, metals].sum() if metals else value
@@ -161,6 +168,8 @@ class Describer:
         """Say where complexing matter carries more than half of a residual that counts."""
         texts = []
         for number, check in enumerate(self.evaluator.judge.checks):
+            if check.averaging in MONTHLIES and self.plant.feeds.many:
+                continue
             part, k = self._worst(number)
             held = self._held_up(part, k, list(check.metals))
             if held is None or not held.is_complexed:
@@ -187,14 +196,16 @@ class Describer:
 
     def _state_text(self, end: int, row: int) -> str:
         rows = self.seen.rows
-        words = []
+        words = [self.plant.feeds.labels[rows.sample[row]]] if self.plant.feeds.many else []
         if rows.shift[row]:
             words.append(f"set point {rows.shift[row]:+.2f}")
         words += [
             f"{self.plant.names[i]} {100.0 * (rows.factor[row, i] - 1.0):+.0f} %"
             for i in np.flatnonzero(rows.factor[row] != 1.0)
         ]
-        return f"{', '.join(words) or 'nominal'}; {END_TEXT[end]}"
+        if rows.nominal[row]:
+            words.append("nominal")
+        return f"{', '.join(words)}; {END_TEXT[end]}"
 
     def ph(self) -> Data:
         """PH at discharge over every state against the window."""
@@ -348,7 +359,8 @@ class Describer:
     def missed_rules(self) -> list[str]:
         """Safety and practice rules that do not hold."""
         rules = self.seen.rules
-        texts = [r.label for r in rules if r.ratio[self.point] > FEASIBLE_RATIO]
+        missed = [r.label for r in rules if r.ratio[self.point] > FEASIBLE_RATIO]
+        texts = list(dict.fromkeys(missed))
         checks = self.evaluator.judge.checks
         for number, check in enumerate(checks):
             if check.averaging == RULE:
@@ -384,5 +396,6 @@ def describe(
         "assumptions": [*assumptions(evaluator), *extra],
         "proof": {**proof, "certificate": one.certificate()},
         "runners_up": [], "runners_up_left_out": [],
+        "samples": sample_figures(evaluator, seen, point),
         "versions": versions(site.solver.name),
     }  # fmt: skip

@@ -5,7 +5,7 @@ Owns the bundle that search and assessment share, so that a plan and its assessm
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
 
@@ -15,6 +15,8 @@ from numpy.typing import NDArray
 from chemistry.state import EquilibriumState, equilibrate
 from chemistry.titration import StartValues
 from optimiser.costing import Priced, Pricing
+from optimiser.feeds import Feeds
+from optimiser.monthly import monthly_rules
 from optimiser.plant import Plant
 from optimiser.points import Block, Points, Rows
 from optimiser.quality import LN10, Judge, Judged
@@ -63,6 +65,7 @@ class Evaluation:
                 point = self.rows.point[part.block.rows]
                 np.maximum.at(worst, point, part.ratio.max(axis=1))
             missing = part.block.trim_missing | ~part.block.reached
+            missing &= self.rows.counts[part.block.rows]
             np.maximum.at(worst, self.rows.point[part.block.rows[missing]], 5.0)
         for rule in self.rules:
             worst = np.maximum(worst, rule.ratio)
@@ -78,9 +81,11 @@ class Evaluation:
         """Yearly cost of each point."""
         return self.priced.total
 
-    def nominal_row(self, block: Block, point: int) -> int | None:
-        """Position in a block of a point's nominal row."""
-        hit = np.flatnonzero((self.rows.point[block.rows] == point) & self.rows.nominal[block.rows])
+    def nominal_row(self, block: Block, point: int, sample: int = 0) -> int | None:
+        """Position in a block of a sample's nominal row; the first of many is their mean."""
+        rows = self.rows
+        shown = rows.nominal & (rows.sample == sample) & (rows.point == point)
+        hit = np.flatnonzero(shown[block.rows])
         return int(hit[0]) if hit.size else None
 
 
@@ -127,8 +132,8 @@ def _start_of(block: Block, picked: IntArray) -> StartValues:
 class _Before:
     """The feed with some of its doses left out: what it is where a reagent meets it.
 
-    ``moved`` (points, 1 + reagents) is the change of the controller's dose; None where no slopes
-    are wanted.
+    ``moved`` (points, samples, 1 + reagents) is the change of the controller's dose; None where no
+    slopes are wanted.
     """
 
     def __init__(
@@ -137,14 +142,38 @@ class _Before:
     ) -> None:  # fmt: skip
         self.plant, self.seen, self.near, self.moved = plant, seen, near, moved
 
-    def ph(self, label: str, some: IntArray, without: BoolArray) -> tuple[FloatArray, FloatArray]:
-        """PH of the feed with every dose but those of ``without``, and its slope."""
-        plant, doses = self.plant, self.seen.priced.doses
-        kept = np.where(without, 0.0, doses[some])
-        mixed = plant.totals + kept @ plant.reacting
-        start = self._start(label, some)
+    def lowest(
+        self, label: str, some: IntArray, without: BoolArray
+    ) -> tuple[FloatArray, FloatArray]:
+        """Lowest pH of any sample with every dose but those of ``without``, and its slope."""
+        return self._extreme(*self._ph(label, some, without), np.argmin)
+
+    def highest(
+        self, label: str, some: IntArray, without: BoolArray
+    ) -> tuple[FloatArray, FloatArray]:
+        """Highest pH of any sample with every dose but those of ``without``, and its slope."""
+        return self._extreme(*self._ph(label, some, without), np.argmax)
+
+    def _extreme(
+        self, ph: FloatArray, slope: FloatArray, pick: Callable[..., IntArray]
+    ) -> tuple[FloatArray, FloatArray]:
+        samples = np.flatnonzero(self.plant.feeds.counted)
+        ph = ph.reshape(-1, len(self.plant.feeds))[:, samples]
+        slope = slope.reshape(ph.shape[0], -1, slope.shape[1])[:, samples]
+        points = np.arange(ph.shape[0])
+        chosen = pick(ph, axis=1)  # a sample without an answer counts before any other
+        return ph[points, chosen], slope[points, chosen]
+
+    def _ph(
+        self, label: str, points: IntArray, without: BoolArray
+    ) -> tuple[FloatArray, FloatArray]:
+        plant, samples = self.plant, len(self.plant.feeds)
+        some, sample = np.repeat(points, samples), np.tile(np.arange(samples), points.size)
+        kept = np.where(without, 0.0, self.seen.priced.fed[some, sample])
+        mixed = plant.feeds.totals_mol_per_l[sample] + kept @ plant.reacting
+        start = self._start(label, points)
         state = equilibrate(plant.system, mixed, on_failure="flag", start=start)
-        self.seen.before[label] = (some, state)
+        self.seen.before[label] = (points, state)
         plant.states_solved += some.size
         plant.states_failed += int(np.count_nonzero(~state.converged))
         ph = np.where(state.converged, state.ph, np.nan)
@@ -157,21 +186,24 @@ class _Before:
         for k, reagent in enumerate(used):
             slope[:, 1 + reagent] += sens.ph[:, k]
             own = self.seen.points.controller[some] == reagent
-            slope[own] += sens.ph[own, k][:, None] * self.moved[some[own]]
+            slope[own] += sens.ph[own, k][:, None] * self.moved[some[own], sample[own]]
         return ph, slope
 
     def _start(self, label: str, some: IntArray) -> StartValues:
         """The same mixture at the neighbours, else the water that all doses make."""
-        nominal = np.flatnonzero(self.seen.rows.nominal)
+        samples = len(self.plant.feeds)
+        nominal = np.flatnonzero(self.seen.rows.nominal).reshape(-1, samples)
         parts = []
         for point in some:
             place = self.near[int(point)] if self.near is not None else None
             known = place.seen.before.get(label) if place is not None else None
-            if known is not None and place is not None and place.point in known[0]:
-                row = np.flatnonzero(known[0] == place.point)
+            alike = known is not None and known[1].ph.size == known[0].size * samples
+            if alike and known is not None and place is not None and place.point in known[0]:
+                first = int(np.flatnonzero(known[0] == place.point)[0]) * samples
+                row = np.arange(first, first + samples)
                 parts.append(StartValues.of(known[1]).rows(row))
             else:
-                row = nominal[[int(point)]]
+                row = nominal[int(point)]
                 parts.append(StartValues.of(self.seen.blocks[0].state).rows(row))
         return StartValues.join(parts)
 
@@ -179,9 +211,9 @@ class _Before:
 class Evaluator:
     """A site ready to be evaluated: plant, judge and pricing."""
 
-    def __init__(self, site: Site) -> None:
+    def __init__(self, site: Site, feeds: Feeds | None = None) -> None:
         self.site = site
-        self.plant = Plant(site)
+        self.plant = Plant(site, feeds)
         self.judge = Judge(self.plant)
         self.pricing = Pricing(self.plant, self.judge.surcharges)
         treatment = site.treatment
@@ -213,21 +245,27 @@ class Evaluator:
 
     def _rules(self, seen: Evaluation, near: Sequence[Place] | None, *, slopes: bool) -> None:
         seen.rules.append(self._least_rule(seen))
-        feed = _Before(self.plant, seen, near, self._dose_slope(seen) if slopes else None)
+        feed = _Before(self.plant, seen, near, self._dose_slopes(seen) if slopes else None)
         seen.rules.extend(self._sulfide_rules(seen, feed))
         seen.rules.extend(self._ceiling_rules(seen, feed))
         seen.rules.extend(Rule(*one) for one in cap_rules(self, seen))
+        seen.rules.extend(Rule(*one) for one in monthly_rules(self, seen))
 
-    def _dose_slope(self, seen: Evaluation) -> FloatArray:
-        """Change of the controller's nominal dose with set point and paced doses, (points, k)."""
-        slope = np.zeros((len(seen.points), 1 + len(self.plant.names)))
+    def _dose_slopes(self, seen: Evaluation) -> FloatArray:
+        """Change of controllers' nominal doses with set point and paced doses.
+
+        (points, samples, 1 + reagents)
+        """
+        shape = (len(seen.points), len(self.plant.feeds), 1 + len(self.plant.names))
+        slope = np.zeros(shape)
         first = seen.judged[0]
+        some = first.block.rows[seen.rows.nominal[first.block.rows]]
         nominal = seen.rows.nominal[first.block.rows]
-        slope[seen.rows.point[first.block.rows[nominal]]] = first.dose_slope[nominal]
+        slope[seen.rows.point[some], seen.rows.sample[some]] = first.dose_slope[nominal]
         return slope
 
     def _least_rule(self, seen: Evaluation) -> Rule:
-        """The controller's dose stays between its least real dose and its ceiling."""
+        """The controller's mean dose is a real one, and none of its doses is above its ceiling."""
         points, doses = seen.points, seen.priced.doses
         n = len(points)
         slope = np.zeros((n, 1 + len(self.plant.names)))
@@ -237,11 +275,16 @@ class Evaluator:
             own = points.controller[held]
             dose = np.maximum(doses[held, own], 1e-9)
             low = np.log(self.least[own] / dose)
-            high = np.log(dose / np.minimum(self.ceiling[own], 1e12))
+            by_sample = seen.priced.fed[np.flatnonzero(held), :, own] * self.plant.feeds.counted
+            top = np.argmax(by_sample, axis=1)
+            most = np.maximum(by_sample.max(axis=1), 1e-9)
+            high = np.log(most / np.minimum(self.ceiling[own], 1e12))
             ratio[held] = np.maximum(low, high)
-            sign = np.where(low > high, -1.0, 1.0)
-            moved = self._dose_slope(seen)[held]
-            slope[held] = (sign / dose)[:, None] * moved
+            moved = self._dose_slopes(seen)[held]
+            slope[held] = np.where(
+                (low > high)[:, None], -self.pricing.mean(moved) / dose[:, None],
+                moved[np.arange(top.size), top] / most[:, None],
+            )  # fmt: skip
         paced = (points.doses > 0.0) & (points.doses < self.least * (1.0 - 1e-9))
         over = points.doses > self.ceiling * (1.0 + 1e-9)
         ratio = np.where((paced | over).any(axis=1), np.maximum(ratio, 1.0), ratio)
@@ -255,7 +298,7 @@ class Evaluator:
         least = plant.treatment.sulfide_least_ph
         n, width = len(seen.points), 1 + len(plant.names)
         label = "pH before the sulfide dose"
-        ph, moved = feed.ph(label, some, plant.is_sulfide)
+        ph, moved = feed.lowest(label, some, plant.is_sulfide)
         before = np.full(n, -np.inf)
         before[some] = np.where(np.isnan(ph), 5.0, LN10 * (least - ph))
         slope = np.zeros((n, width))
@@ -263,7 +306,9 @@ class Evaluator:
         rules = [Rule(label, before, slope)]
         lowest = np.full(n, np.inf)
         for part in seen.judged:
-            np.minimum.at(lowest, seen.rows.point[part.block.rows], part.block.state.ph)
+            mine = seen.rows.counts[part.block.rows]
+            point = seen.rows.point[part.block.rows[mine]]
+            np.minimum.at(lowest, point, part.block.state.ph[mine])
         after = np.full(n, -np.inf)
         after[some] = LN10 * (least - lowest[some])
         slope = np.zeros((n, width))
@@ -288,7 +333,7 @@ class Evaluator:
             slope[some[own], 0] = LN10
             paced = some[~own]
             if paced.size:
-                ph, moved = feed.ph(label, paced, self.stronger)
+                ph, moved = feed.highest(label, paced, self.stronger)
                 ratio[paced] = np.where(np.isnan(ph), 5.0, LN10 * (ph - ceiling))
                 slope[paced] = LN10 * moved
             rules.append(Rule(label, ratio, slope))

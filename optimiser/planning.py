@@ -16,6 +16,7 @@ from optimiser.outcome import Plan
 from optimiser.plan_purchases import price_exactly
 from optimiser.runners_up import finish
 from optimiser.runners_up import runners_up as others_of
+from optimiser.sample_search import SampleSearch, has_many, no_plan_on_samples
 from optimiser.search import SETTLE_STEP, Findings, Search
 from optimiser.separators import choose_separator, separator_sites
 from optimiser.site import Site
@@ -68,7 +69,7 @@ def plan(
     finished(evaluator, findings, runners_up)
     bound: Bound | None = None
     refuted: list[str] = []
-    if prove_s is not None:
+    if prove_s is not None and findings.whole is None:
         _, refuted = _verified(evaluator, findings)
         bound = _proven(site, evaluator, findings, prove_s, progress)
     return plan_of(evaluator, findings, begun, bound, runners_up=runners_up, refuted=refuted)
@@ -117,16 +118,17 @@ def plan_of(
         No find holds when its states are solved afresh.
     """
     seen, more = _verified(evaluator, findings)
+    runners = others_of(evaluator, findings, solver_from(evaluator.site.solver), runners_up)
+    solved = evaluator
+    evaluator = findings.whole or evaluator
     strength = max(float(b.state.ionic_strength.max()) for b in seen.blocks)
     refuse_salty(evaluator.site, strength, "the plan's water")
-    proof = _proof(evaluator, findings)
+    proof = _proof(solved, findings)
     if bound is not None:
         proof |= bound.to_dict()
         findings.seconds["bound"] = bound.seconds
     data = describe(evaluator, seen, 0, proof=proof, extra=[*refuted, *more])
-    data["runners_up"], data["runners_up_left_out"] = others_of(
-        evaluator, findings, solver_from(evaluator.site.solver), runners_up
-    )
+    data["runners_up"], data["runners_up_left_out"] = runners
     data["separators"] = [dict(row) for row in findings.separators]
     data["proof"]["seconds"] = {
         **findings.seconds, "total": time.perf_counter() - begun,
@@ -144,7 +146,9 @@ def _verified(evaluator: Evaluator, findings: Findings) -> tuple[Evaluation, lis
     """
     refuted: list[str] = []
     for recipe, track in findings.feasible:
-        seen = evaluator.evaluate(track.point, slopes=False)
+        seen = findings.certified.get(recipe)
+        if seen is None:
+            seen = evaluator.evaluate(track.point, slopes=False)
         if seen.feasible[0]:
             return seen, refuted
         del findings.best[recipe]
@@ -181,12 +185,17 @@ def _search(site: Site, progress: Callable[[str], None] | None) -> tuple[Evaluat
         progress=progress,
     )  # fmt: skip
     findings = search.run()
+    if has_many(evaluator) and findings.best:
+        samples = SampleSearch(evaluator, findings, solver, bounds=search.bounds, progress=progress)
+        evaluator, findings = samples.run()
     if not findings.feasible:
         if findings.stopped_early:
             raise Interrupted(
                 f"stopped after {site.solver.time_limit_s:g} s before a verified plan was found: "
                 "raise the time limit or allow fewer reagents"
             )
+        if findings.whole is not None:
+            raise no_plan_on_samples(findings)
         raise explain_no_plan(evaluator, findings, solver)
     return evaluator, findings
 

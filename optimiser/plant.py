@@ -19,6 +19,7 @@ from chemistry.feed import FeedWater, feed_water
 from chemistry.state import EquilibriumState, equilibrate
 from chemistry.system import System
 from chemistry.titration import StartValues, titrate
+from optimiser.feeds import Feeds, mean_feed
 from optimiser.points import (
     CLOSED_FORMED,
     CLOSED_HELD,
@@ -39,12 +40,13 @@ IntArray = NDArray[np.int64]
 class Plant:
     """A site's chemistry ready to be evaluated many times."""
 
-    def __init__(self, site: Site) -> None:
+    def __init__(self, site: Site, feeds: Feeds | None = None) -> None:
         self.site = site
         self.treatment = site.treatment
         self.system = site.system
         self.feed: FeedWater = feed_water(site.analysis, site.system)
         self.totals = np.asarray(self.feed.totals_mol_per_l, dtype=float)
+        self.feeds: Feeds = mean_feed(site, self.feed) if feeds is None else feeds
         wanted = dict.fromkeys((*site.treatment.reagents, *site.treatment.trim_reagents))
         self.names: tuple[str, ...] = tuple(wanted)
         self.reagents: tuple[Reagent, ...] = tuple(site.reagents[name] for name in self.names)
@@ -111,35 +113,44 @@ class Plant:
     # -- corners ---------------------------------------------------------------------------------
 
     def corners(self, points: Points, *, full: bool = True) -> Rows:
-        """Expand points into rows: the nominal one and, if ``full``, every corner."""
-        point, shift, factors, nominal = [], [], [], []
-        tolerance = self.treatment.dose_tolerance_fraction
+        """Expand points into rows: each sample's nominal one and, if ``full``, every corner."""
+        counted = self.feeds.counted
+        point, sample, shift, factors, nominal = [], [], [], [], []
         for i in range(len(points)):
-            one = np.ones(len(self.names))
-            point.append(i)
-            shift.append(0.0)
-            factors.append(one)
-            nominal.append(True)
-            if not full:
-                continue
-            paced = np.flatnonzero(points.doses[i] > 0.0)
-            steps = (-1.0, 1.0) if points.controller[i] >= 0 else (0.0,)
-            for move, signs in product(steps, product((-1.0, 1.0), repeat=paced.size)):
-                if move == 0.0 and not signs:
-                    continue
-                factor = one.copy()
-                factor[paced] += tolerance * np.array(signs)
-                point.append(i)
-                shift.append(move * self.treatment.ph_tolerance)
-                factors.append(factor)
-                nominal.append(False)
-        index = np.array(point, dtype=np.int64)
-        factor_array = np.array(factors).reshape(len(point), len(self.names))
-        shifts = np.array(shift)
+            moves, signs = self._corners_of(points, i, full=full)
+            # a water that is not judged is shown at its nominal state
+            kept = [np.arange(moves.size if counts else 1) for counts in counted]
+            picked = np.concatenate(kept)
+            point.append(np.full(picked.size, i, dtype=np.int64))
+            sample.append(np.repeat(np.arange(counted.size), [k.size for k in kept]))
+            shift.append(moves[picked])
+            factors.append(signs[picked])
+            nominal.append(picked == 0)
+        index, samples = np.concatenate(point), np.concatenate(sample)
+        factor, shifts = np.concatenate(factors), np.concatenate(shift)
         return Rows(
-            point=index, ph=points.ph[index] + shifts, doses=points.doses[index] * factor_array,
-            factor=factor_array, shift=shifts, nominal=np.array(nominal, dtype=bool),
+            point=index, sample=samples, counts=counted[samples], ph=points.ph[index] + shifts,
+            doses=points.doses[index] * factor, factor=factor, shift=shifts,
+            nominal=np.concatenate(nominal),
         )  # fmt: skip
+
+    def _corners_of(
+        self, points: Points, point: int, *, full: bool
+    ) -> tuple[FloatArray, FloatArray]:
+        """Shifts of the set point and factors on the doses of one point, the nominal first."""
+        one = np.ones(len(self.names))
+        shift, factors = [0.0], [one]
+        tolerance = self.treatment.dose_tolerance_fraction
+        paced = np.flatnonzero(points.doses[point] > 0.0)
+        steps = (-1.0, 1.0) if points.controller[point] >= 0 else (0.0,)
+        for move, signs in product(steps, product((-1.0, 1.0), repeat=paced.size)):
+            if not full or (move == 0.0 and not signs):
+                continue
+            factor = one.copy()
+            factor[paced] += tolerance * np.array(signs)
+            shift.append(move * self.treatment.ph_tolerance)
+            factors.append(factor)
+        return np.array(shift), np.array(factors)
 
     # -- states ----------------------------------------------------------------------------------
 
@@ -148,7 +159,7 @@ class Plant:
         warm: WarmStart | None = None,
     ) -> list[Block]:  # fmt: skip
         """States of the rows at every end that differs from the first."""
-        base = self.totals + rows.doses @ self.reacting
+        base = self.feeds.totals_mol_per_l[rows.sample] + rows.doses @ self.reacting
         everything = np.arange(len(rows))
         none_lost = np.zeros(len(self.names))
         start = warm.start(CLOSED_FORMED, everything) if warm else None
@@ -247,15 +258,14 @@ class Plant:
         return state, dose, held, state.converged & (held | ~controlled | overshot)
 
     def fed_doses(self, points: Points, rows: Rows, blocks: Sequence[Block]) -> FloatArray:
-        """Doses fed at each point's nominal row, dearest end, (points, reagents). [mg/L]"""
-        doses = points.doses.copy()
+        """Doses fed at nominal rows, dearest end, (points, samples, reagents). [mg/L]"""
+        doses = np.repeat(points.doses[:, None, :], len(self.feeds), axis=1)
         for block in blocks:
-            nominal = rows.nominal[block.rows] & block.reached
-            for row, dose in zip(block.rows[nominal], block.dose[nominal], strict=True):
-                point = rows.point[row]
-                reagent = points.controller[point]
-                if reagent >= 0:
-                    doses[point, reagent] = max(doses[point, reagent], dose)
+            point = rows.point[block.rows]
+            reagent = points.controller[point]
+            some = rows.nominal[block.rows] & block.reached & (reagent >= 0)
+            place = (point[some], rows.sample[block.rows[some]], reagent[some])
+            np.maximum.at(doses, place, block.dose[some])
         return doses
 
     def _vented(
@@ -264,19 +274,20 @@ class Plant:
         """Carbon dioxide that carbonate dosed into the feed may lose, (rows,) [mol/L].
 
         The feed and all carbonate reagents of a row meet before other alkali and come to rest with
-        air of the site's CO2 pressure; what leaves is lost. ``doses`` (points, reagents) are the
-        nominal ones, from which the controller's is taken. Also returned: the change per mg/L of
-        each carbonate reagent at the mean row, (reagents,) [mol/mg]; and the rows whose vented
-        water could not be solved, (rows,).
+        air of the site's CO2 pressure; what leaves is lost. ``doses`` (points, samples, reagents)
+        are the nominal ones, from which the controller's is taken. Also returned: the change per
+        mg/L of each carbonate reagent at the mean row, (reagents,) [mol/mg]; and the rows whose
+        vented water could not be solved, (rows,).
         """
         lost, unknown = np.zeros(len(rows)), np.zeros(len(rows), dtype=bool)
         slope = np.zeros(len(self.names))
-        fed = np.where(rows.doses > 0.0, rows.doses, doses[rows.point]) * self.is_carbonate
+        nominal = doses[rows.point, rows.sample]
+        fed = np.where(rows.doses > 0.0, rows.doses, nominal) * self.is_carbonate
         dosed = np.flatnonzero(fed.any(axis=1))
         if not dosed.size or "CO2(aq)" not in self.system.species_names:
             return lost, slope, unknown
         added = fed[dosed] @ self.reacting
-        mixed = self.totals + added
+        mixed = self.feeds.totals_mol_per_l[rows.sample[dosed]] + added
         carbonate = self.system.index["CO3-2"]
         state = equilibrate(
             self.liquid_system, mixed, pco2_atm=self.treatment.vent_pco2_atm, on_failure="flag"
@@ -298,8 +309,9 @@ class Plant:
         point = rows.point[some]
         controlled = points.controller[point] >= 0
         set_point = np.where(controlled, points.ph[point], ph)
-        high = set_point + tolerance > window.high + 1e-9
-        low = set_point - tolerance < window.low - 1e-9
+        # where a controller rests the pH may leave the window though its set point lies inside
+        high = np.maximum(set_point + tolerance, ph) > window.high + 1e-9
+        low = np.minimum(set_point - tolerance, ph) < window.low - 1e-9
         target = np.where(high & (ph > window.high - tolerance), window.high - tolerance, target)
         return np.where(low & (ph < window.low + tolerance), window.low + tolerance, target)
 

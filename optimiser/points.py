@@ -76,11 +76,14 @@ class Points:
 class Rows:
     """Corners of points: arrays over rows.
 
-    ``factor`` multiplies the paced doses, ``shift`` moves the set point; the row with factor 1
-    and shift 0 is the nominal one.
+    ``sample`` is the water, ``factor`` multiplies the paced doses, ``shift`` moves the set point;
+    the row of a sample with factor 1 and shift 0 is its nominal one. Rows that do not count belong
+    to a water that is shown and not judged.
     """
 
     point: IntArray
+    sample: IntArray
+    counts: BoolArray
     ph: FloatArray
     doses: FloatArray
     factor: FloatArray
@@ -89,6 +92,47 @@ class Rows:
 
     def __len__(self) -> int:
         return int(self.point.shape[0])
+
+
+@dataclass(frozen=True, eq=False)
+class NominalRows:
+    """Nominal rows of points and samples at one end, (points, samples) each.
+
+    ``block`` and ``row`` are positions in the blocks; rows that the end does not have are those of
+    the first block, and -1 is a row that did not reach its set point. ``known`` (points,) tells
+    which points have rows of their own at the end.
+    """
+
+    block: IntArray
+    row: IntArray
+    known: BoolArray
+
+    @classmethod
+    def at(cls, end: int, rows: Rows, blocks: Sequence[Block], points: int) -> NominalRows:
+        """Find the rows of an end."""
+        samples = int(rows.sample.max()) + 1 if len(rows) else 1
+        found = np.full((2, points, samples), -1, dtype=np.int64)
+        known = np.zeros(points, dtype=bool)
+        for number, block in enumerate(blocks):
+            if number and block.end != end:
+                continue
+            mine = np.flatnonzero(rows.nominal[block.rows] & block.reached)
+            point, sample = rows.point[block.rows[mine]], rows.sample[block.rows[mine]]
+            found[0, point, sample], found[1, point, sample] = number, mine
+            known[point] |= block.end == end
+        return cls(found[0], found[1], known)
+
+    def mean(self, values: Sequence[FloatArray], weight: FloatArray) -> FloatArray:
+        """Mean over samples of one array (rows, ...) for each block, (points, ...)."""
+        result = np.zeros((self.block.shape[0], *values[0].shape[1:]))
+        for number, array in enumerate(values):
+            point, sample = np.nonzero(self.block == number)
+            shape = (point.size,) + (1,) * (array.ndim - 1)
+            np.add.at(
+                result, point,
+                weight[sample].reshape(shape) * array[self.row[point, sample]],
+            )  # fmt: skip
+        return result
 
 
 class WarmStart(Protocol):

@@ -12,18 +12,19 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from chemistry.sludge import dry_masses_mg_per_l
 from optimiser.costing import BURDEN, DISPOSAL, FEES, POLYMER, SURCHARGES
 from optimiser.evaluation import Evaluation, Evaluator
 from optimiser.linear_model import Expression, Model, Sense
 from optimiser.local_purchase import add_local_purchase
-from optimiser.points import CLOSED_FORMED, VENTED_FORMED, Points
+from optimiser.points import CLOSED_FORMED, VENTED_FORMED, NominalRows, Points
 from optimiser.quality_slopes import burden_charge
+from optimiser.yearly_caps import dry_slope
 
 FloatArray = NDArray[np.float64]
 
 BACK_OFF = 2e-6  # ratios are brought to minus this, so that rounding does not break a limit
 ROWS_PER_STEP = 40
+ROWS_PER_SAMPLE = 10  # rows more for every sample beyond the first
 NEAR_RATIO = -1.5
 NEAR_WORST = 0.7  # rows of a check further than this below its worst are left out
 MOST_MISSED = 60.0
@@ -64,7 +65,8 @@ def build_step(
     model = Model("polish step")
     moves = _add_moves(model, evaluator, seen.points, row, radius, bounds)
     model.add_variable("miss", high=MOST_MISSED)
-    _add_checks(model, seen, row, moves, BACK_OFF + inward)
+    most = ROWS_PER_STEP + ROWS_PER_SAMPLE * (len(evaluator.plant.feeds) - 1)
+    _add_checks(model, seen, row, moves, BACK_OFF + inward, most)
     if miss_only:
         model.add_cost("miss", Expression({"miss": 1.0}))
         return model
@@ -126,10 +128,11 @@ def _linear(
 
 
 def _add_checks(
-    model: Model, seen: Evaluation, row: int, moves: dict[int, tuple[str, float]], back_off: float
-) -> None:
+    model: Model, seen: Evaluation, row: int, moves: dict[int, tuple[str, float]], back_off: float,
+    most: int,
+) -> None:  # fmt: skip
     ratio, slope, labels = _near_checks(seen, row)
-    order = np.argsort(-ratio, kind="stable")[:ROWS_PER_STEP]
+    order = np.argsort(-ratio, kind="stable")[:most]
     finite = np.asarray(np.isfinite(slope).all(axis=1), dtype=bool)
     # what no move inside the trust region brings to its limit is left out
     highest = ratio + np.abs(np.where(finite[:, None], slope, 0.0)) @ _reach(model, moves, slope)
@@ -200,18 +203,31 @@ def _add_amounts(
     ):  # fmt: skip
         if reagent < 0:
             continue
-        rows = _amount_rows(seen, row, kind)
-        if not rows:
-            continue
-        most = max(here for here, _ in rows)
-        key = model.add_variable(f"{kind} dose", high=10.0 * most + 100.0)
-        for number, (here, slope) in enumerate(rows):
-            terms, constant = _linear(slope, moves)
-            terms = {name: -value for name, value in terms.items()}
-            terms[key] = 1.0
-            model.add_row(f"{kind} at end {number}", terms, Sense.AT_LEAST, here + constant)
-        buy(reagent, Expression({key: 1.0}))
+        for sample in np.flatnonzero(plant.feeds.counted):
+            rows = _amount_rows(seen, row, kind, int(sample))
+            if rows:
+                tag = f"{kind} dose{_of_sample(plant.feeds.many, int(sample))}"
+                key = _at_least(model, tag, rows, moves, 10.0 * max(h for h, _ in rows) + 100.0)
+                buy(reagent, Expression({key: float(plant.feeds.weight[sample])}))
     return demand
+
+
+def _of_sample(many: bool, sample: int) -> str:
+    return f" of sample {sample}" if many else ""
+
+
+def _at_least(
+    model: Model, name: str, ends: list[tuple[float, FloatArray]],
+    moves: dict[int, tuple[str, float]], high: float,
+) -> str:  # fmt: skip
+    """Add an amount that is at least its linearised value at every end; returns its name."""
+    key = model.add_variable(name, high=high)
+    for number, (here, slope) in enumerate(ends):
+        terms, constant = _linear(slope, moves)
+        terms = {name: -value for name, value in terms.items()}
+        terms[key] = 1.0
+        model.add_row(f"{key} at end {number}", terms, Sense.AT_LEAST, here + constant)
+    return key
 
 
 def _add_purchases(
@@ -229,10 +245,12 @@ def _add_purchases(
         )  # fmt: skip
 
 
-def _amount_rows(seen: Evaluation, row: int, kind: str) -> list[tuple[float, FloatArray]]:
+def _amount_rows(
+    seen: Evaluation, row: int, kind: str, sample: int
+) -> list[tuple[float, FloatArray]]:
     found = []
     for part in seen.judged:
-        k = seen.nominal_row(part.block, row)
+        k = seen.nominal_row(part.block, row, sample)
         if k is None or not part.block.reached[k]:
             continue
         if kind == "controller":
@@ -251,29 +269,14 @@ def _add_disposal(
         return
     made, position, rule = chosen
     plant, site = evaluator.plant, evaluator.site
-    weight = np.zeros(len(plant.system.solids))
-    amounts = np.eye(len(plant.system.solids))
-    weight = dry_masses_mg_per_l(
-        amounts, plant.system, bound_water_factor=site.disposal.bound_water_factor
-    ).sum(axis=1)
     polymer = plant.treatment.polymer_g_per_kg_solids / 1000.0
-    key = model.add_variable("dry sludge", high=1e7)
-    for number, part in enumerate(seen.judged):
-        if part.block.end not in (CLOSED_FORMED, VENTED_FORMED):
-            continue
-        k = seen.nominal_row(part.block, row)
-        if k is None or not part.block.reached[k]:
-            continue
-        slope = (1.0 + polymer) * (weight @ part.solid_slope[k])
-        slope[1:] += (1.0 + polymer) * plant.unreacted
-        controller = int(seen.points.controller[row])
-        if controller >= 0:
-            slope = slope + (1.0 + polymer) * plant.unreacted[controller] * part.dose_slope[k]
-        terms, constant = _linear(slope, moves)
-        terms = {name: -value for name, value in terms.items()}
-        terms[key] = 1.0
-        here = float(made.dry_mg_per_l[position])
-        model.add_row(f"sludge at end {number}", terms, Sense.AT_LEAST, here + constant)
+    here = float(made.dry_mg_per_l[position])
+    ends = []
+    for end in (CLOSED_FORMED, VENTED_FORMED):
+        nominal = NominalRows.at(end, seen.rows, seen.blocks, len(seen.points))
+        if nominal.known[row]:
+            ends.append((here, dry_slope(evaluator, seen, nominal)[row]))
+    key = _at_least(model, "dry sludge", ends, moves, 1e7)
     wet_t = evaluator.pricing.kg_per_mg_per_l / 1000.0 / site.disposal.cake_solids_fraction
     model.add_cost(DISPOSAL, Expression({key: wet_t * rule.tariff_per_wet_t}))
     pickup = rule.pickup_fee / rule.tonnes_per_pickup
@@ -289,18 +292,19 @@ def _add_burden(
     charges = evaluator.site.burden_charges_per_kg
     if not charges:
         return
-    per = evaluator.pricing.kg_per_mg_per_l
-    key = model.add_variable("burden charges", high=1e12)
-    for number, part in enumerate(seen.judged):
-        k = seen.nominal_row(part.block, row)
-        if k is None or not part.block.reached[k]:
-            continue
-        slope, here = burden_charge(evaluator.judge, part, k, charges)
-        terms, constant = _linear(per * slope, moves)
-        terms = {name: -value for name, value in terms.items()}
-        terms[key] = 1.0
-        model.add_row(f"burden at end {number}", terms, Sense.AT_LEAST, per * here + constant)
-    model.add_cost(BURDEN, Expression({key: 1.0}))
+    per, feeds = evaluator.pricing.kg_per_mg_per_l, evaluator.plant.feeds
+    cost = Expression()
+    for sample in np.flatnonzero(feeds.counted):
+        ends = []
+        for part in seen.judged:
+            k = seen.nominal_row(part.block, row, int(sample))
+            if k is not None and part.block.reached[k]:
+                slope, here = burden_charge(evaluator.judge, part, k, charges)
+                ends.append((per * here, per * slope))
+        tag = f"burden charges{_of_sample(feeds.many, int(sample))}"
+        key = _at_least(model, tag, ends, moves, 1e12)
+        cost = cost.plus(Expression({key: float(feeds.weight[sample])}))
+    model.add_cost(BURDEN, cost)
 
 
 def _add_surcharges(
@@ -311,21 +315,21 @@ def _add_surcharges(
     known, per = evaluator.judge.surcharges, evaluator.pricing.kg_per_mg_per_l
     if not known:
         return
-    total = model.add_variable("surcharges", high=1e12)
-    for number, part in enumerate(seen.judged):
-        k = seen.nominal_row(part.block, row)
-        if k is None or not part.block.reached[k]:
-            continue
-        spent = {total: 1.0}
-        for i, one in enumerate(known):
-            scale = per * one.rate_per_kg
-            key = model.add_variable(f"surcharge {i} at end {number}", high=1e12)
-            spent[key] = -1.0
-            slope = scale * one.slope(evaluator.judge, part, k)
-            terms, constant = _linear(slope, moves)
-            terms = {name: -value for name, value in terms.items()}
-            terms[key] = 1.0
-            here = scale * (float(one.value(part)[k]) - one.free_mg_per_l)
-            model.add_row(f"{key} charged", terms, Sense.AT_LEAST, here + constant)
-        model.add_row(f"surcharges at end {number}", spent, Sense.AT_LEAST, 0.0)
-    model.add_cost(SURCHARGES, Expression({total: 1.0}))
+    feeds, cost = evaluator.plant.feeds, Expression()
+    for sample in np.flatnonzero(feeds.counted):
+        tag = _of_sample(feeds.many, int(sample))
+        total = model.add_variable(f"surcharges{tag}", high=1e12)
+        for number, part in enumerate(seen.judged):
+            k = seen.nominal_row(part.block, row, int(sample))
+            if k is None or not part.block.reached[k]:
+                continue
+            spent = {total: 1.0}
+            for i, one in enumerate(known):
+                scale = per * one.rate_per_kg
+                slope = scale * one.slope(evaluator.judge, part, k)
+                here = scale * (float(one.value(part)[k]) - one.free_mg_per_l)
+                name = f"surcharge {i} at end {number}{tag}"
+                spent[_at_least(model, name, [(here, slope)], moves, 1e12)] = -1.0
+            model.add_row(f"surcharges at end {number}{tag}", spent, Sense.AT_LEAST, 0.0)
+        cost = cost.plus(Expression({total: float(feeds.weight[sample])}))
+    model.add_cost(SURCHARGES, cost)

@@ -16,6 +16,7 @@ from chemistry.analysis import ANALYTES, METALS
 from chemistry.burden import BURDENS, burden_weights, water_burden
 from chemistry.sludge import formula_masses_g_per_mol
 from chemistry.state import H2S_SPECIES
+from optimiser.feeds import SUMMED_STATES, Feeds
 from optimiser.plant import Plant
 from optimiser.points import Block, Points, Rows
 from optimiser.quality_slopes import RULE, SMALLEST_MG_PER_L, fill_slopes
@@ -31,8 +32,7 @@ UNREACHED_RATIO = 50.0  # ratio of every check of a state whose set point no dos
 LN10 = float(np.log(10.0))
 
 DAILY, MONTHLY, LOAD, MONTHLY_LOAD = "daily", "monthly", "daily load", "monthly load"
-LOADS = (LOAD, MONTHLY_LOAD)
-SUMMED_STATES = {"Fe": ("Fe(II)", "Fe(III)"), "Cr": ("Cr(III)", "Cr(VI)")}
+LOADS, MONTHLIES = (LOAD, MONTHLY_LOAD), (MONTHLY, MONTHLY_LOAD)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -106,6 +106,7 @@ class Judge:
         self.jar = ResidualFactors(site, names, self.weights)
         self.solid_mass = self._credited_mass()
         self.feed_particle_mass = max(site.analysis.tss_mg_per_l, sum(particles.values(), 0.0))
+        self.waters = _Waters(plant.feeds, [_parts(m) for m in names], self.weights)
         self.floors = self._floors()
         self.families = self._families()
         self.burden_weights = burden_weights(plant.system)
@@ -223,25 +224,33 @@ class Judge:
         site = self.plant.site
         if site.stands_for == "peak":
             return 1.0, 1.0
-        known = [site.variability[p] for p in parts if p in site.variability]
+        known = {p: site.variability[p] for p in parts if p in site.variability}
         if burden and not known:
             return 1.0, 1.0
         if not known:
-            known = [site.variability.get("default", (4.0, 2.0))]
-        return max(k[0] for k in known), max(k[1] for k in known)
+            known = dict.fromkeys(parts, site.variability.get("default", (4.0, 2.0)))
+        shown = self.plant.feeds.peaks or {}
+        left = [
+            [max(1.0, factor / peak) for factor, peak in zip(both, shown.get(p, (1.0, 1.0)),
+                                                             strict=True)]
+            for p, both in known.items()
+        ]  # fmt: skip
+        return max(k[0] for k in left), max(k[1] for k in left)
 
     # -- judge ---------------------------------------------------------------------------------
 
     def judge(self, points: Points, rows: Rows, block: Block, *, slopes: bool = False) -> Judged:
         """Values, ratios and (if ``slopes``) their derivatives for one block of states."""
         state = block.state
+        sample = rows.sample[block.rows]
+        untouched = self.waters.dissolved_only[sample]
         residual, theory, at_most = self.jar.residual(state, self.solid_metal)
-        residual, theory = residual + self.dissolved_only, theory + self.dissolved_only
+        residual, theory = residual + untouched, theory + untouched
         solids = state.solids_mol_per_l
-        share, share_by_mass = self._share(solids)
-        held = solids @ self.solid_metal + self.particles
+        share, share_by_mass = self._share(solids, sample)
+        held = solids @ self.solid_metal + self.waters.particles[sample]
         carried = share[:, None] * held
-        floor = self._floor_values(solids)
+        floor = self._floor_values(solids, sample)
         total = np.maximum(residual + carried, floor)
         burden = self._burden(block.effluent + block.surplus)
         value = self._values(total, burden, block)
@@ -249,6 +258,7 @@ class Judge:
         ratio = np.log(np.maximum(value, SMALLEST_MG_PER_L) / target)
         bad = ~block.reached
         ratio[bad] = UNREACHED_RATIO
+        self._of_samples(ratio, rows, block)
         width = 1 + len(self.plant.names)
         n, count = value.shape
         judged = Judged(
@@ -262,22 +272,35 @@ class Judge:
             fill_slopes(self, points, rows, judged, total, held, share, share_by_mass)
         return judged
 
-    def _share(self, solids: FloatArray) -> tuple[FloatArray, FloatArray]:
+    def _of_samples(self, ratio: FloatArray, rows: Rows, block: Block) -> None:
+        """Loads by the flow of each sample's day; months and what is only shown left out."""
+        feeds = self.plant.feeds
+        if not feeds.many:
+            return
+        flow = np.log(feeds.flow_ratio[rows.sample[block.rows]])
+        for number, check in enumerate(self.checks):
+            if check.averaging == LOAD:
+                ratio[:, number] += flow
+            elif check.averaging in MONTHLIES:
+                ratio[:, number] = -np.inf
+        ratio[~rows.counts[block.rows]] = -np.inf
+
+    def _share(self, solids: FloatArray, sample: IntArray) -> tuple[FloatArray, FloatArray]:
         """Share of the metals' solids that is carried over, and its change with their mass."""
         separator = self.plant.treatment.separator
-        mass = solids @ self.solid_mass + self.feed_particle_mass
+        mass = solids @ self.solid_mass + self.waters.particle_mass[sample]
         most = 1.0 - separator.capture_fraction
         by_tss = separator.tss_mg_per_l / np.maximum(mass, 1e-12)
         slope = np.where(by_tss < most, -by_tss / np.maximum(mass, 1e-12), 0.0)
         return np.minimum(by_tss, most), slope
 
-    def _floor_values(self, solids: FloatArray) -> FloatArray:
+    def _floor_values(self, solids: FloatArray, sample: IntArray) -> FloatArray:
         """Practical floor of each metal by the family of the solid that holds most of it."""
         n = solids.shape[0]
         result = np.zeros((n, len(self.metals)))
         families = sorted(set(self.families))
         member = np.array([[f == name for f in self.families] for name in families], dtype=float)
-        feed = self.plant.totals @ self.weights.T + self.particles
+        feed = self.waters.in_feed[sample]
         for j in range(len(self.metals)):
             floors = self.floors[j]
             if not floors:
@@ -286,7 +309,7 @@ class Judge:
             worst = max(floors.values())
             by_family = np.array([floors.get(name, worst) for name in families])
             chosen = by_family[np.argmax(held, axis=1)] if families else np.full(n, worst)
-            result[:, j] = np.minimum(np.where(held.sum(axis=1) > 0, chosen, worst), feed[j])
+            result[:, j] = np.minimum(np.where(held.sum(axis=1) > 0, chosen, worst), feed[:, j])
         return result
 
     def _burden(self, effluent: FloatArray) -> dict[str, FloatArray]:
@@ -312,6 +335,21 @@ class Judge:
         if block.trim_state is not None:
             trimmed[block.trimmed] = 1e6 * block.trim_state.partial_pressure_atm(H2S_SPECIES)
         return [tank, trimmed]
+
+
+class _Waters:
+    """What of each sample's metals and solids no equilibrium touches, samples on axis 0."""
+
+    def __init__(self, feeds: Feeds, parts: Sequence[tuple[str, ...]], weights: FloatArray) -> None:
+        empty = np.zeros((len(feeds), 0))
+        self.particles = np.column_stack(
+            [empty, *(feeds.by_part(feeds.particulate_mg_per_l, p) for p in parts)]
+        )
+        self.dissolved_only = np.column_stack(
+            [empty, *(feeds.by_part(feeds.unmodelled_mg_per_l, p) for p in parts)]
+        )
+        self.in_feed = feeds.totals_mol_per_l @ weights.T + self.particles
+        self.particle_mass = feeds.particle_mass_mg_per_l
 
 
 def _parts(metal: str) -> tuple[str, ...]:

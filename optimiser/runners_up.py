@@ -52,9 +52,10 @@ def finish(evaluator: Evaluator, findings: Findings, solver: SolverPort, count: 
     """Polish the nearest recipes to the end, so that what they cost more is theirs to the last.
 
     Recipes that the search left a little short of complying are finished too. One that ends
-    cheaper than the plan takes its place in the findings.
+    cheaper than the plan takes its place in the findings. What was certified on many samples stays
+    as it is.
     """
-    if not count or not findings.feasible or findings.stopped_early:
+    if not count or not findings.feasible or findings.stopped_early or findings.whole is not None:
         return
     plan = findings.feasible[0][0]
     near = [

@@ -60,6 +60,10 @@ class Findings:
     stopped_early: bool = False
     separators: tuple[dict[str, Any], ...] = ()
     """What became of each separator that the site may choose; empty where there is one."""
+    whole: Evaluator | None = None
+    """The evaluator on every sample, where a feed is many; costs of tracks are those on few."""
+    certified: dict[tuple[str, ...], Evaluation] = field(default_factory=dict)
+    """Recipes with what they are on every sample."""
 
     def keep(self, recipe: tuple[str, ...], track: Track) -> None:
         """Remember a track if it is the recipe's best, or its nearest miss."""

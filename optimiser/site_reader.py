@@ -344,8 +344,8 @@ def _sample_notes(feed: FeedBlock) -> list[str]:
         return []
     count = len(feed.sampled.samples.samples)
     return [
-        f"planned on the flow-weighted mean of {count} samples in {feed.sampled.samples.source}:"
-        " the doses are not yet verified on each of them"
+        f"the feed is {count} samples in {feed.sampled.samples.source}; where one water is shown it"
+        " is their flow-weighted mean"
     ]
 
 

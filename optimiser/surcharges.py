@@ -99,26 +99,39 @@ def surcharge_per_year(
 def surcharge_rows(evaluator: Evaluator, seen: Evaluation, point: int) -> list[Data]:
     """Surcharges of one point at its dearest end, as plain data."""
     known, per = evaluator.judge.surcharges, evaluator.pricing.kg_per_mg_per_l
+    feeds = evaluator.plant.feeds
+    means, charged = np.zeros(len(known)), np.zeros(len(known))
+    for sample in np.flatnonzero(feeds.counted) if known else ():
+        found = _dearest(evaluator, seen, point, int(sample))
+        if found is None:
+            return []
+        part, k = found
+        values = np.array([float(one.value(part)[k]) for one in known])
+        free = np.array([one.free_mg_per_l for one in known])
+        means += feeds.weight[sample] * values
+        charged += feeds.weight[sample] * per * np.maximum(values - free, 0.0)
+    return [
+        {
+            "parameter": one.label, "mean_mg_per_l": float(mean),
+            "free_mg_per_l": one.free_mg_per_l, "charged_kg_per_year": float(kg),
+            "rate_per_kg": one.rate_per_kg, "cost_per_year": one.rate_per_kg * float(kg),
+            "source": one.source,
+        }
+        for one, mean, kg in zip(known, means, charged, strict=True)
+    ]  # fmt: skip
+
+
+def _dearest(
+    evaluator: Evaluator, seen: Evaluation, point: int, sample: int
+) -> tuple[Judged, int] | None:
+    """The end that costs a sample most: its block and the row in it."""
+    known, per = evaluator.judge.surcharges, evaluator.pricing.kg_per_mg_per_l
     best: tuple[float, Judged, int] | None = None
-    for part in seen.judged if known else ():
-        k = seen.nominal_row(part.block, point)
+    for part in seen.judged:
+        k = seen.nominal_row(part.block, point, sample)
         if k is None:
             continue
         cost = float(surcharge_per_year(known, part, per)[k])
         if best is None or cost > best[0]:
             best = (cost, part, k)
-    if best is None:
-        return []
-    _, part, k = best
-    rows = []
-    for one in known:
-        mean = float(one.value(part)[k])
-        kg = per * max(mean - one.free_mg_per_l, 0.0)
-        rows.append(
-            {
-                "parameter": one.label, "mean_mg_per_l": mean, "free_mg_per_l": one.free_mg_per_l,
-                "charged_kg_per_year": kg, "rate_per_kg": one.rate_per_kg,
-                "cost_per_year": one.rate_per_kg * kg, "source": one.source,
-            }
-        )  # fmt: skip
-    return rows
+    return None if best is None else (best[1], best[2])

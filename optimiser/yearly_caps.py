@@ -12,12 +12,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from chemistry.sludge import dry_masses_mg_per_l
-from optimiser.points import CLOSED_FORMED, VENTED_FORMED
+from optimiser.points import CLOSED_FORMED, VENTED_FORMED, NominalRows
 from optimiser.quality_slopes import burden_slope
 
 if TYPE_CHECKING:
     from optimiser.evaluation import Evaluation, Evaluator
-    from optimiser.quality import Judged
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -63,31 +62,35 @@ def _sludge(evaluator: Evaluator, seen: Evaluation) -> tuple[FloatArray, FloatAr
     unreacted = pricing.unreacted_mg_per_l(seen.priced.doses)
     scale = pricing.kg_per_mg_per_l / 1000.0
     per_dry = scale / evaluator.site.disposal.cake_solids_fraction
-    for part in seen.judged:
-        rows, point = _nominal(seen, part)
-        if not rows.size or part.block.end not in (CLOSED_FORMED, VENTED_FORMED):
+    for block in seen.blocks:
+        if block.end not in (CLOSED_FORMED, VENTED_FORMED):
             continue
-        made = pricing.weigh(part.block, rows, unreacted[point])
-        moved = per_dry * _dry_slope(evaluator, seen, part, rows)
+        nominal = NominalRows.at(block.end, seen.rows, seen.blocks, len(seen.points))
+        point = np.flatnonzero(nominal.known)
+        weight = evaluator.plant.feeds.weight
+        solids = nominal.mean([b.state.solids_mol_per_l for b in seen.blocks], weight)
+        made = pricing.weigh(solids[point], unreacted[point])
+        moved = per_dry * dry_slope(evaluator, seen, nominal)[point]
         _keep_most(value, slope, point, scale * made.wet_mg_per_l, moved)
     return value, slope
 
 
-def _dry_slope(evaluator: Evaluator, seen: Evaluation, part: Judged, rows: IntArray) -> FloatArray:
-    """Change of the dry sludge of some rows, (rows, 1 + reagents). [mg/L]"""
+def dry_slope(evaluator: Evaluator, seen: Evaluation, nominal: NominalRows) -> FloatArray:
+    """Change of each point's mean dry sludge at an end, (points, 1 + reagents). [mg/L]"""
     plant, site = evaluator.plant, evaluator.site
-    if not part.solid_slope.shape[2]:
-        return np.zeros((rows.size, 1 + len(plant.names)))
+    if not seen.judged[0].solid_slope.shape[2]:
+        return np.zeros((len(seen.points), 1 + len(plant.names)))
     weight = dry_masses_mg_per_l(
         np.eye(len(plant.system.solids)), plant.system,
         bound_water_factor=site.disposal.bound_water_factor,
     ).sum(axis=1)  # fmt: skip
-    point = seen.rows.point[part.block.rows[rows]]
-    slope = np.einsum("p,npk->nk", weight, part.solid_slope[rows])
-    slope[:, 1:] += plant.unreacted * (seen.points.doses[point] > 0.0)
-    controller = seen.points.controller[point]
+    share = plant.feeds.weight
+    solids = nominal.mean([part.solid_slope for part in seen.judged], share)
+    slope = np.einsum("p,npk->nk", weight, solids)
+    slope[:, 1:] += plant.unreacted * (seen.points.doses > 0.0)
+    controller = seen.points.controller
     own = np.where(controller >= 0, plant.unreacted[np.maximum(controller, 0)], 0.0)
-    slope += own[:, None] * part.dose_slope[rows]
+    slope += own[:, None] * nominal.mean([part.dose_slope for part in seen.judged], share)
     return np.asarray(slope * (1.0 + plant.treatment.polymer_g_per_kg_solids / 1000.0), dtype=float)
 
 
@@ -95,28 +98,26 @@ def _burden(
     evaluator: Evaluator, seen: Evaluation, burden: str
 ) -> tuple[FloatArray, FloatArray]:  # fmt: skip
     """Burden of the mean discharge and its slopes. [mg/L]"""
-    value, slope = _empty(evaluator, seen)
+    n, samples, width = len(seen.points), len(evaluator.plant.feeds), 1 + len(evaluator.plant.names)
+    value, slope = np.zeros(n * samples), np.zeros((n * samples, width))
     for part in seen.judged:
-        rows, point = _nominal(seen, part)
+        block = part.block
+        rows = np.flatnonzero(seen.rows.nominal[block.rows] & block.reached)
         if not rows.size:
             continue
-        moved = np.zeros((rows.size, slope.shape[1]))
+        some = block.rows[rows]
+        moved = np.zeros((rows.size, width))
         if part.effluent_slope.shape[2]:
             moved = burden_slope(evaluator.judge, burden, part, part.effluent_slope)[rows]
-        _keep_most(value, slope, point, part.burden[burden][rows], moved)
-    return value, slope
+        place = seen.rows.point[some] * samples + seen.rows.sample[some]
+        _keep_most(value, slope, place, part.burden[burden][rows], moved)
+    mean = evaluator.pricing.mean
+    return mean(value.reshape(n, samples)), mean(slope.reshape(n, samples, width))
 
 
 def _empty(evaluator: Evaluator, seen: Evaluation) -> tuple[FloatArray, FloatArray]:
     n = len(seen.points)
     return np.zeros(n), np.zeros((n, 1 + len(evaluator.plant.names)))
-
-
-def _nominal(seen: Evaluation, part: Judged) -> tuple[IntArray, IntArray]:
-    """Nominal rows of a block that reach their set point, and their points."""
-    block = part.block
-    rows = np.flatnonzero(seen.rows.nominal[block.rows] & block.reached)
-    return rows, seen.rows.point[block.rows[rows]]
 
 
 def _keep_most(

@@ -172,7 +172,9 @@ def test_the_share_that_slips_past_is_never_above_the_true_one() -> None:
             continue  # this point misses a limit, and so does its whole cell
         rows = made.rows[cell.corners[0].tag]
         block, k = place_of(seen, point, cell.corners[0], cell.recipe.paced)
-        share, _ = evaluator.judge._share(block.state.solids_mol_per_l[[k]])
+        share, _ = evaluator.judge._share(
+            block.state.solids_mol_per_l[[k]], np.zeros(1, dtype=np.int64)
+        )
         assert relaxation.least_share(rows) <= share[0] * (1.0 + 1e-9)
 
 

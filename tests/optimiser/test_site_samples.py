@@ -78,7 +78,7 @@ def test_the_site_carries_samples_and_their_mean() -> None:
     mixed = np.array(site.samples.weights) @ site.sample_waters.totals_mol_per_l
     found = feed_water(site.analysis, site.system).totals_mol_per_l
     assert found == pytest.approx(mixed, abs=1e-13)
-    assert any("flow-weighted mean of 3 samples in samples.csv" in note for note in site.notes)
+    assert any("3 samples in samples.csv" in note for note in site.notes)
 
 
 def test_a_flow_of_the_site_stays_the_flow_of_the_year() -> None:

@@ -157,7 +157,7 @@ def test_the_step_model_prices_surcharges_as_the_costing_does_and_with_its_slope
     model = build_step(evaluator, seen, 0, 0.1, bounds)
     rows = model.rows
     for i, one in enumerate(evaluator.judge.surcharges):
-        row = rows[f"surcharge {i} at end 0 charged"]
+        row = rows[f"surcharge {i} at end 0 at end 0"]
         at_rest = {"set point": 9.0, "dose hydrated_lime": 120.0}
         left = sum(row.terms.get(key, 0.0) * value for key, value in at_rest.items())
         value = float(one.value(seen.judged[0])[0]) - one.free_mg_per_l
