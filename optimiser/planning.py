@@ -69,7 +69,9 @@ def plan(
     finished(evaluator, findings, runners_up)
     bound: Bound | None = None
     refuted: list[str] = []
-    if prove_s is not None and findings.whole is None:
+    if prove_s is not None and findings.whole is not None:
+        refuted.append("no lower bound of the cost is worked out for a feed of many samples")
+    elif prove_s is not None:
         _, refuted = _verified(evaluator, findings)
         bound = _proven(site, evaluator, findings, prove_s, progress)
     return plan_of(evaluator, findings, begun, bound, runners_up=runners_up, refuted=refuted)
