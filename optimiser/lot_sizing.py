@@ -10,7 +10,8 @@ Each week an offer may bring orders at its start, the use of the week is drawn e
   with no faster than it is used;
 - the year ends with at least the opening stock, and at least the yearly total is ordered;
 - what is there after a delivery is used, oldest first, before it is past its shelf life, or written
-  off.
+  off; that is planned only where more is bought than used, or where the least order outlasts its
+  shelf life, and not to make room in the store.
 
 Least cost of goods, freight, fees, holding and of what is written off. The relaxation is tight:
 with ``n`` the use net of the floors, ``r`` the stock above them and ``Y`` the orders of a week,
