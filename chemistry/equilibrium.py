@@ -23,6 +23,8 @@ from chemistry.kernel import Kernel
 from chemistry.newton import finish
 from chemistry.system import LN10
 
+WARM_NEWTON_ROUNDS = 14  # a water that takes more of them is sooner solved from afar
+
 
 def solve(kernel: Kernel, batch: Batch) -> None:
     """Solve a batch in place: cold start, then slower settings for the rows that failed."""
@@ -93,7 +95,7 @@ def _finish_by_scarcest(kernel: Kernel, batch: Batch) -> None:
 def solve_warm(kernel: Kernel, batch: Batch) -> None:
     """Solve from the iterate already in the batch; rows that fail start cold."""
     with np.errstate(all="ignore"):
-        finish(kernel, batch)
+        finish(kernel, batch, newton_rounds=WARM_NEWTON_ROUNDS)
     rows = np.flatnonzero(~batch.converged)
     if rows.size:
         cold = _afresh(kernel, batch, rows)

@@ -12,12 +12,13 @@ from optimiser.describe import describe
 from optimiser.diagnosis import explain_no_plan
 from optimiser.errors import FeedRefused, Interrupted, VerificationFault
 from optimiser.evaluation import Evaluation, Evaluator
+from optimiser.next_points import SETTLE_STEP
 from optimiser.outcome import Plan
 from optimiser.plan_purchases import price_exactly
 from optimiser.runners_up import finish
 from optimiser.runners_up import runners_up as others_of
 from optimiser.sample_search import SampleSearch, has_many, no_plan_on_samples
-from optimiser.search import SETTLE_STEP, Findings, Search
+from optimiser.search import Findings, Search
 from optimiser.separators import choose_separator, separator_sites
 from optimiser.site import Site
 from optimiser.site_salt import MODEL_TEXT
@@ -232,6 +233,9 @@ def _proof(evaluator: Evaluator, findings: Findings) -> dict[str, Any]:
         "kind": "searched",
         "statement": "no cheaper plan was found among the recipes and cells examined",
         "recipes_examined": len(findings.recipes_examined),
+        "recipes_ruled_out": len(findings.recipes_ruled_out),
+        "recipes_allowed": findings.recipes_allowed,
+        "most_reagents": findings.most_reagents,
         "cells_examined": findings.cells_examined,
         "states_examined": evaluator.plant.states_solved,
         "smallest_step_percent": 100.0 * SETTLE_STEP,

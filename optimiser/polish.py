@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from optimiser.costing import EQUIPMENT, SEPARATOR
 from optimiser.errors import SolverFault
 from optimiser.evaluation import Evaluator, Place
 from optimiser.points import Points
@@ -32,6 +33,8 @@ FIRST_RADIUS = 0.5
 LAST_RADIUS = 2e-4
 MOST_STEPS = 14
 PATIENCE = 3
+STALLS = 2  # steps with hardly any gain after which a track is at rest
+NO_GAIN = 2e-7  # gain, relative to the cost, that is none
 REST_EARLY, REST_LATE = 2, 4  # steps after which dear candidates are rested
 DEARER_EARLY, DEARER_LATE = 1.12, 1.04
 HOPELESS_RATIO = 5e-3
@@ -178,7 +181,7 @@ def _inward(
 
 def at_rest(track: Track) -> bool:
     """Whether steps no longer gain anything, so that the track was not left on its way."""
-    return track.radius < LAST_RADIUS or track.stalls >= 2
+    return track.radius < LAST_RADIUS or track.stalls >= STALLS
 
 
 def _accept(track: Track, place: Place) -> None:
@@ -212,10 +215,26 @@ def _rest_dear(tracks: list[Track], rival: float) -> None:
             track.alive = track.total <= (DEARER_LATE if late else DEARER_EARLY) * best
 
 
+def _is_stationary(track: Track, cost_ahead: float) -> bool:
+    """Whether the best point of the linear model costs as much as the track's own point.
+
+    The model counts all but equipment and separator, which a step does not change.
+    """
+    if track.patient:
+        return False
+    seen, row = track.place.seen, track.place.point
+    fixed = sum(float(seen.priced.by_cause[cause][row]) for cause in (EQUIPMENT, SEPARATOR))
+    promised = (track.merit - fixed - cost_ahead) / max(track.total, 1e-12)
+    return abs(promised) < NO_GAIN
+
+
 def step(
     evaluator: Evaluator, track: Track, solver: SolverPort, bounds: Bounds, *, inward: float = 0.0
 ) -> Points | None:
-    """Solve one linearised step from a track's point; None where the time limit leaves none.
+    """Solve one linearised step from a track's point; None where nothing is gained by it.
+
+    That is where the time limit leaves no solution, and where the linear model promises no gain
+    within the trust region, which a smaller region cannot do either.
 
     ``inward`` asks the checks to hold by that much more than the usual back-off.
 
@@ -233,6 +252,9 @@ def step(
         said = "found no best solution where staying at the point is a solution of finite cost"
         raise SolverFault(report.solver, model.name, said)
     if not report.termination.has_solution:
+        return None
+    if not inward and _is_stationary(track, report.objective * cost_unit(seen, row)):
+        track.stalls = STALLS
         return None
     point = seen.points.take([row])
     doses = point.doses.copy()

@@ -16,7 +16,7 @@ def proof_lines(data: Data) -> list[str]:
     lines = []
     if proof["kind"] == "searched":
         lines += paragraph(
-            f"Searched: no cheaper plan turned up in {_count(proof, 'recipes_examined', 'recipe')},"
+            f"Searched: no cheaper plan turned up in {_recipes(proof)},"
             f" {_count(proof, 'cells_examined', 'cell')} of doses and pH and "
             f"{_count(proof, 'states_examined', 'equilibrium state')}; the smallest step tried was "
             f"{number(proof['smallest_step_percent'], 2)} % of a dose. A search, not a bound: a "
@@ -71,6 +71,20 @@ def _cells(proof: Data) -> str:
         f"in {_count(proof, 'bound_cells', 'cell')} of pH and doses; closed: {why or 'none'}; left "
         f"open: {proof['bound_cells_open']:,}."
     )
+
+
+def _recipes(proof: Data) -> str:
+    """The recipes examined, and of how many that the site allows."""
+    if "recipes_allowed" not in proof:
+        return _count(proof, "recipes_examined", "recipe")
+    allowed = _count(proof, "recipes_allowed", "recipe")
+    size = f"of up to {_count(proof, 'most_reagents', 'reagent')}"
+    left = proof["recipes_allowed"] - proof["recipes_examined"]
+    out = proof["recipes_ruled_out"]
+    why = f" ({out:,} of them by rules of set point and dose alone)" if out else ""
+    if left <= out:
+        return f"all {allowed} {size}{why}"
+    return f"{proof['recipes_examined']:,} of the {allowed} {size}"
 
 
 def _count(proof: Data, key: str, noun: str) -> str:

@@ -16,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator, Place
+from optimiser.next_points import moves, with_one_more
 from optimiser.points import Points
 from optimiser.polish import Track, polish
 from optimiser.polish_step import PENALTY, Bounds
@@ -23,8 +24,6 @@ from optimiser.recipes import (
     Recipe,
     alkali_demand,
     grid,
-    ladder,
-    make_recipe,
     recipe_of,
     recipes,
     set_point_bounds,
@@ -39,11 +38,12 @@ IntArray = NDArray[np.int64]
 _Kept = tuple[tuple[str, ...], Track]
 
 POLISHED_AT_ONCE = 40
-SETTLE_STEP = 0.01
 SETTLED = 2
 SETTLE_ROUNDS = 12
 GRID_CHUNK = 600
 FAR_RATIO, NEAR_RATIO, ENOUGH_NEAR = 1.5, 0.5, 4
+DEARER_LARGER = 1.15  # cost of a larger recipe's start over the plan so far, at most
+OUT_OF_REACH = 3.0  # ratio that the grid's gaps cannot explain
 
 
 @dataclass(slots=True)
@@ -53,6 +53,9 @@ class Findings:
     best: dict[tuple[str, ...], Track] = field(default_factory=dict)
     nearest: dict[tuple[str, ...], Track] = field(default_factory=dict)
     recipes_examined: set[tuple[str, ...]] = field(default_factory=set)
+    recipes_ruled_out: set[tuple[str, ...]] = field(default_factory=set)
+    recipes_allowed: int = 0
+    most_reagents: int = 0
     cells_examined: int = 0
     lowest: FloatArray | None = None
     lowest_point: list[Points | None] = field(default_factory=list)
@@ -111,6 +114,15 @@ class Findings:
         return sorted(ranked, key=lambda item: item[1].total)
 
 
+@dataclass(frozen=True, slots=True)
+class Grid:
+    """Points at which a recipe is tried, and evaluated neighbours of each or none."""
+
+    recipe: Recipe
+    points: Points
+    near: Sequence[Place] = ()
+
+
 class Search:
     """One run over a site."""
 
@@ -123,6 +135,7 @@ class Search:
         deadline = time.perf_counter() + time_limit_s
         self.bounds: Bounds = replace(set_point_bounds(evaluator), deadline=deadline)
         self.findings = Findings()
+        self.seeds: dict[tuple[str, ...], Track] = {}
         self.progress = progress or (lambda _text: None)
 
     def run(self) -> Findings:
@@ -132,6 +145,9 @@ class Search:
             len(self.evaluator.plant.treatment.reagents),
         )
         least = max(1, len(self.evaluator.plant.treatment.required))
+        sizes = range(least, most + 1)
+        self.findings.most_reagents = most
+        self.findings.recipes_allowed = sum(len(recipes(self.evaluator.plant, s)) for s in sizes)
         with self.findings.timed("propose"):
             starts = self._propose([s for s in (1, 2) if least <= s <= most])
         with self.findings.timed("polish"):
@@ -159,25 +175,29 @@ class Search:
         demand = alkali_demand(self.evaluator)
         wanted = [r for size in sizes for r in recipes(plant, size)]
         grids = [(r, grid(self.evaluator, r, self.bounds, demand)) for r in wanted]
+        self.findings.recipes_ruled_out |= {self._names(r) for r, g in grids if g is None}
         self.progress(f"trying {len(grids)} recipes")
-        return self._best_of([(r, g) for r, g in grids if g is not None])
+        return self._best_of([Grid(r, g) for r, g in grids if g is not None])
 
-    def _best_of(self, grids: Sequence[tuple[Recipe, Points]]) -> list[Place]:
+    def _best_of(self, grids: Sequence[Grid]) -> list[Place]:
         """Evaluate grids at the nominal state and return each recipe's best starts."""
         starts: list[Place] = []
         for chunk in _chunks(grids, GRID_CHUNK):
             if self._late():
                 break
-            joined = Points.join([g for _, g in chunk])
-            seen = self.evaluator.evaluate(joined, full=False)
+            joined = Points.join([g.points for g in chunk])
+            near = [place for g in chunk for place in g.near]
+            seen = self.evaluator.evaluate(joined, full=False, near=near or None)
             self.findings.cells_examined += len(joined)
             self.findings.note_values(seen)
             begin = 0
-            for recipe, points in chunk:
-                rows = slice(begin, begin + len(points))
-                begin += len(points)
-                self.findings.recipes_examined.add(self._names(recipe))
-                found = starts_of(points.ph, seen.total[rows], seen.violation[rows])
+            for one in chunk:
+                rows = slice(begin, begin + len(one.points))
+                begin += len(one.points)
+                self.findings.recipes_examined.add(self._names(one.recipe))
+                found = starts_of(one.points.ph, seen.total[rows], seen.violation[rows])
+                if found:
+                    self.seeds[self._names(one.recipe)] = Track(Place(seen, rows.start + found[0]))
                 starts += [Place(seen, rows.start + k) for k in found]
         return starts
 
@@ -222,11 +242,13 @@ class Search:
         self.findings.keep(recipe_of(self.evaluator.plant, track.point, 0), track)
 
     def _worth_polishing(self, seen: Evaluation, order: IntArray) -> IntArray:
-        """Leave starts that miss by far where enough others are near."""
-        far = seen.violation[order] > FAR_RATIO
-        if np.count_nonzero(seen.violation < NEAR_RATIO) < ENOUGH_NEAR or not far.any():
-            return order
-        return order[~far]
+        """Leave starts that miss by far where enough others are near, or a plan is known."""
+        most = np.inf
+        if np.count_nonzero(seen.violation < NEAR_RATIO) >= ENOUGH_NEAR:
+            most = FAR_RATIO
+        elif self.findings.feasible:
+            most = OUT_OF_REACH
+        return order[seen.violation[order] <= most]
 
     def _best_total(self) -> float:
         found = self.findings.feasible
@@ -244,62 +266,40 @@ class Search:
         plant = self.evaluator.plant
         parts = self._parts(size - 1)
         demand = alkali_demand(self.evaluator)
-        grids: list[tuple[Recipe, Points]] = []
+        grids: list[Grid] = []
         for recipe in recipes(plant, size):
             names = set(self._names(recipe))
             mine = [t for part, t in parts[0] if set(part) < names][:2]
             mine += [t for part, t in parts[1] if set(part) < names and t not in mine][:1]
-            made = [p for t in mine if (p := self._with_one_more(recipe, t, demand)) is not None]
+            made = [
+                (p, t)
+                for t in mine
+                if (p := with_one_more(self.evaluator, self.bounds, recipe, t, demand))
+            ]
+            if not made and mine:
+                self.findings.recipes_ruled_out.add(self._names(recipe))
             if made:
-                grids.append((recipe, Points.join(made)))
+                near = [t.place for p, t in made for _ in range(len(p))]
+                grids.append(Grid(recipe, Points.join([p for p, _ in made]), near))
         self.progress(f"trying {len(grids)} recipes of {size}")
-        return self._best_of(grids)
+        known = self._best_total()
+        return [
+            place for place in self._best_of(grids)
+            if place.seen.total[place.point] <= DEARER_LARGER * known
+        ]  # fmt: skip
 
     def _parts(self, size: int) -> tuple[list[_Kept], list[_Kept]]:
         """Recipes of one size, the best first, and those that miss with the nearest miss first."""
         known = self.findings
-        best = [item for item in known.best.items() if len(item[0]) == size]
-        missing = [(recipe, known.nearest[recipe]) for recipe, track in best if not track.feasible]
+        tracks = self.seeds | known.best
+        best = [item for item in tracks.items() if len(item[0]) == size]
+        missing = [
+            (recipe, track) for recipe, track in known.nearest.items() if len(recipe) == size
+        ]
+        missing = [item for item in missing if not known.best[item[0]].feasible]
         best.sort(key=lambda item: item[1].merit)
         missing.sort(key=lambda item: item[1].violation)
         return best, missing
-
-    def _with_one_more(
-        self, recipe: Recipe, track: Track, demand: dict[float, float]
-    ) -> Points | None:
-        plant = self.evaluator.plant
-        old = track.point
-        known = {plant.index[n] for n in recipe_of(plant, old, 0)}
-        added = next(i for i in recipe.reagents if i not in known)
-        full = make_recipe(plant, recipe.reagents)
-        controller = -1 if full.controller is None else full.controller
-        ph = float(old.ph[0])
-        need = demand[min(demand, key=lambda p: abs(p - ph))]
-        base = old.doses[0].copy()
-        rows = []
-        if controller == added:
-            # the old controller becomes a paced bulk reagent at shares of its own dose
-            previous = int(old.controller[0])
-            if previous < 0:
-                rows.append(base)
-            else:
-                fed = float(track.place.seen.priced.doses[track.place.point, previous])
-                for share in (0.5, 0.85, 0.97):
-                    row = base.copy()
-                    row[previous] = max(share * fed, float(self.bounds.dose_low[previous]))
-                    rows.append(row)
-        else:
-            for dose in ladder(self.evaluator, full, added, need, self.bounds, short=True):
-                row = base.copy()
-                row[added] = dose
-                rows.append(row)
-        if not rows:
-            return None
-        n = len(rows)
-        return Points(
-            np.array(rows), np.full(n, controller, dtype=np.int64), np.full(n, ph),
-            np.full(n, old.trim[0], dtype=np.int64),
-        )  # fmt: skip
 
     # -- settle ------------------------------------------------------------------------------------
 
@@ -332,11 +332,11 @@ class Search:
 
     def _settle_one(self, track: Track) -> Track:
         for _ in range(SETTLE_ROUNDS):
-            moves = _moves(track.point, self.bounds)
-            if moves is None or self._late():
+            around = moves(track.point, self.bounds)
+            if around is None or self._late():
                 return track
-            seen = self.evaluator.evaluate(moves, near=[track.place] * len(moves))
-            self.findings.cells_examined += len(moves)
+            seen = self.evaluator.evaluate(around, near=[track.place] * len(around))
+            self.findings.cells_examined += len(around)
             total = np.where(seen.feasible, seen.total, np.inf)
             row = int(np.argmin(total))
             if not total[row] < track.total * (1.0 - 1e-7):
@@ -366,45 +366,13 @@ class _Clock:
         self.seconds[self.name] = self.seconds.get(self.name, 0.0) + spent
 
 
-def _moves(point: Points, bounds: Bounds) -> Points | None:
-    """Every move of one or two of set point and paced doses by 1 % (set point: 0.02)."""
-    columns = [int(j) for j in np.flatnonzero(point.doses[0] > 0.0)]
-    axes = ([-1] if point.controller[0] >= 0 else []) + columns
-    steps = [(a, s) for a in axes for s in (-1.0, 1.0)]
-    combos = [(s,) for s in steps] + [
-        (s, t) for i, s in enumerate(steps) for t in steps[i + 1 :] if s[0] != t[0]
-    ]
-    doses, ph = [], []
-    for combo in combos:
-        row, here = point.doses[0].copy(), float(point.ph[0])
-        for axis, sign in combo:
-            if axis < 0:
-                here += 2.0 * SETTLE_STEP * sign
-            else:
-                row[axis] *= 1.0 + SETTLE_STEP * sign
-        controller = int(point.controller[0])
-        low, high = bounds.ph_low(controller, row), bounds.ph_high(controller, row)
-        inside = controller < 0 or low <= here <= high
-        kept = row[columns]
-        ok = (kept >= bounds.dose_low[columns]).all() and (kept <= bounds.dose_high[columns]).all()
-        if inside and ok:
-            doses.append(row)
-            ph.append(here)
-    if not ph:
-        return None
-    n = len(ph)
-    return Points(
-        np.array(doses), np.repeat(point.controller, n), np.array(ph), np.repeat(point.trim, n)
-    )
-
-
-def _chunks(grids: Sequence[tuple[Recipe, Points]], size: int) -> list[list[tuple[Recipe, Points]]]:
-    chunks: list[list[tuple[Recipe, Points]]] = []
+def _chunks(grids: Sequence[Grid], size: int) -> list[list[Grid]]:
+    chunks: list[list[Grid]] = []
     count = 0
     for item in grids:
-        if not chunks or count + len(item[1]) > size:
+        if not chunks or count + len(item.points) > size:
             chunks.append([])
             count = 0
         chunks[-1].append(item)
-        count += len(item[1])
+        count += len(item.points)
     return chunks

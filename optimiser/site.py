@@ -92,7 +92,7 @@ class Treatment:
     reagents: tuple[str, ...]
     required: tuple[str, ...] = ()
     trim_reagents: tuple[str, ...] = ()
-    most_reagents: int = 3
+    most_reagents: int = 4
     dose_ceilings_mg_per_l: Mapping[str, float] = field(default_factory=dict)
     least_doses_mg_per_l: Mapping[str, float] = field(default_factory=dict)
     dose_factors: Mapping[str, float] = field(default_factory=dict)

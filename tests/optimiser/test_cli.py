@@ -145,7 +145,7 @@ def test_all_problems_of_a_site_are_reported_at_once(
     site: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
     spoil(site, "flow_m3_per_d: 180", "flow_m3_per_d: 410,50")
-    spoil(site, "most_reagents: 3", "most_reagent: 3")
+    spoil(site, "most_reagents: 4", "most_reagent: 4")
     for command in ("check", "plan", "curves"):
         assert main([command, str(site)]) == 2
         streams = capsys.readouterr()

@@ -23,7 +23,7 @@ PHASES = {
     "reading": ("site_reader", "read_solver"),
     "proposing": ("search", "grid"),
     "polishing": ("polish", "build_step"),
-    "settling": ("search", "_moves"),
+    "settling": ("search", "moves"),
     "describing": ("planning", "describe"),
 }
 
