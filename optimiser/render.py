@@ -11,11 +11,23 @@ from typing import Any
 from optimiser.render_capacities import capacity_lines
 from optimiser.render_gas import gas_lines
 from optimiser.render_jar import theory_lines
+from optimiser.render_plan_samples import plan_sample_lines
 from optimiser.render_proof import proof_lines
 from optimiser.render_runners_up import runners_up_lines
 from optimiser.render_separators import separator_lines
 from optimiser.render_surcharges import surcharge_lines
-from optimiser.tables import INDENT, PLAIN, Ink, bullets, given, money, number, paragraph, table
+from optimiser.tables import (
+    INDENT,
+    PLAIN,
+    Ink,
+    bullets,
+    flow,
+    given,
+    money,
+    number,
+    paragraph,
+    table,
+)
 
 Data = Mapping[str, Any]
 _DOSE_DIGITS = 4
@@ -55,6 +67,7 @@ def _document(title: str, data: Data, ink: Ink) -> str:
     lines = [ink.heading(title) if data["compliant"] else ink.bad(title), *_summary(data, ink)]
     sections = (
         ("What the operator sets", _set_points(data)),
+        ("Over the samples", plan_sample_lines(data)),
         ("Doses and feed rates", _feeding(data)),
         ("Pumps, feeders and stores", capacity_lines(data, ink)),
         ("What is bought", _purchases(data)),
@@ -81,7 +94,7 @@ def _document(title: str, data: Data, ink: Ink) -> str:
 def _summary(data: Data, ink: Ink) -> list[str]:
     site = data["site"]
     lines = paragraph(
-        f"{given(site['flow_m3_per_d'])} m3/d on {given(site['operating_days_per_year'])} days a "
+        f"{flow(site['flow_m3_per_d'])} m3/d on {given(site['operating_days_per_year'])} days a "
         f"year; the analysis stands for the {site['stands_for']}; "
         f"{given(site['temperature_degc'])} C; activity model: {site['activity_model']}."
     )

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from optimiser.render_samples import sample_lines
 from optimiser.site import Limit, Site
-from optimiser.tables import bullets, given, paragraph
+from optimiser.tables import bullets, flow, given, paragraph
 
 
 def site_text(site: Site) -> str:
@@ -20,7 +20,7 @@ def site_text(site: Site) -> str:
     feed = feed_water(site.analysis, site.system)
     lines = [f"{site.path}: no problem found"]
     lines += paragraph(
-        f"{site.name}: {given(site.flow_m3_per_d)} m3/d on {given(site.operating_days_per_year)} "
+        f"{site.name}: {flow(site.flow_m3_per_d)} m3/d on {given(site.operating_days_per_year)} "
         f"days a year, {_stands_for(site)}; prices in {site.currency}."
     )
     facts = [

@@ -71,6 +71,17 @@ def given(value: float) -> str:
     return f"{value:,.6g}"
 
 
+def flow(value: float) -> str:
+    """Write a flow to four digits, trailing zeros left out.
+
+    Examples
+    --------
+    >>> flow(95.5417), flow(180.0)
+    ('95.54', '180')
+    """
+    return given(float(f"{value:.4g}"))
+
+
 def money(value: float) -> str:
     """Write an amount of money: whole units, two decimals below one.
 

@@ -29,6 +29,7 @@ NAMES = (
     "lead_battery",
     "mercury_lab",
     "filter_choice",
+    "brass_pickle",
 )
 MONEY = ("price", "cost", "tariff", "disposal", "recycling", "saving")
 
@@ -78,7 +79,9 @@ def money_in(node: object, *, is_money: bool = False) -> Iterator[float]:
 def test_the_folder_holds_exactly_the_demos_listed_here() -> None:
     assert sorted(p.name for p in HOME.iterdir() if p.is_dir()) == sorted(NAMES)
     for name in NAMES:
-        assert sorted(p.name for p in (HOME / name).iterdir()) == ["offers.csv", "site.yaml"]
+        samples = ["samples.csv"] if demo(name).samples is not None else []
+        held = sorted(p.name for p in (HOME / name).iterdir())
+        assert held == ["offers.csv", *samples, "site.yaml"]
 
 
 @pytest.mark.parametrize("name", NAMES)
@@ -136,6 +139,12 @@ class TestEveryDemo:
         daily = {x.parameter: x.daily_mg_per_l for x in demo(name).limits if x.daily_mg_per_l}
         found = feed(name).dissolved_mg_per_l
         assert any(found.get(metal, 0.0) > value for metal, value in daily.items())
+
+
+def test_the_samples_say_that_they_are_invented() -> None:
+    sampled = [name for name in NAMES if demo(name).samples is not None]
+    assert sampled == ["brass_pickle"]
+    assert "Invented" in (HOME / "brass_pickle" / "samples.csv").read_text().splitlines()[0]
 
 
 class TestStories:
@@ -218,6 +227,7 @@ BINDING = {
     "lead_battery": (("caustic_soda", "quicklime", "soda_ash"), "SO4"),
     "mercury_lab": (("caustic_soda", "ferrous_sulfide"), "Zn"),
     "filter_choice": (("caustic_soda",), "Ni"),
+    "brass_pickle": (("caustic_soda",), "Zn"),
 }
 
 
