@@ -139,8 +139,8 @@ def written_down(value: float) -> float:
 
     Examples
     --------
-    >>> [written_down(x) for x in (3.459, 0.0871)]
-    [3.45, 0.087]
+    >>> [written_down(x) for x in (1.059, 3.459, 0.0871)]
+    [1.05, 3.4, 0.087]
     """
     return _rounded(value, up=False)
 
