@@ -15,6 +15,7 @@ import pytest
 
 from optimiser.cli import main
 from optimiser.cli_options import build_parser
+from tests.optimiser.cli_runs import write_site
 
 ROOT = Path(__file__).resolve().parents[2]
 DEMO = ROOT / "catalogs" / "sites" / "plating_rinse"
@@ -274,17 +275,18 @@ def test_no_dose_at_all_meets_no_limit() -> None:
     assert "MISSED" in done.stdout
 
 
-def test_no_plan_ends_in_exit_code_3_with_the_reason() -> None:
-    text = run("plan", QUICK, "--most-reagents", "1")
-    data = run("plan", QUICK, "--most-reagents", "1", "--json")
+def test_no_plan_ends_in_exit_code_3_with_the_reason(tmp_path: Path) -> None:
+    limit = {"parameter": "Cu", "daily_mg_per_l": 1e-5, "source": "invented"}
+    path = write_site(tmp_path / "site", {"limits": {"own": [limit]}})
+    text, data = run("plan", path), run("plan", path, "--json")
     assert (text.returncode, data.returncode) == (3, 3)
     assert (text.stderr, data.stderr) == ("", "")
-    assert text.stdout.startswith("Hollin Vale dental alloy and assay works: no plan\n")
-    assert "Hg, monthly" in text.stdout
+    assert text.stdout.startswith("Small copper and zinc rinse: no plan\n")
+    assert "Cu, daily" in text.stdout
     assert max(map(len, text.stdout.splitlines())) <= 100
     answer = json.loads(data.stdout)
     assert answer["compliant"] is False
-    assert any(clash["limit"].startswith("Hg, monthly") for clash in answer["clashes"])
+    assert any(clash["limit"].startswith("Cu, daily") for clash in answer["clashes"])
 
 
 def test_a_plan_that_runs_out_of_time_ends_in_exit_code_4() -> None:
