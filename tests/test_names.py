@@ -12,7 +12,8 @@ import pytest
 ROOT = Path(__file__).resolve().parent.parent
 PACKAGES = ("chemistry", "catalogs", "optimiser")
 FILES = sorted(path for package in PACKAGES for path in (ROOT / package).rglob("*.py"))
-TABLES = sorted((ROOT / "catalogs").rglob("*.csv"))
+# samples of a demo site are as a laboratory sends them: their headers are not ours
+TABLES = sorted(p for p in (ROOT / "catalogs").rglob("*.csv") if p.name != "samples.csv")
 
 # Spellings of a unit that the house writes in another way, and the way it does.
 WRONG_UNITS = {

@@ -49,6 +49,15 @@ class Axis:
     def high(self) -> float:
         return self.nodes[-1]
 
+    def thinned(self, density: float) -> tuple[float, ...]:
+        """Nodes at another density, both ends among them; nodes keep their uneven spacing."""
+        if density == 1.0:
+            return self.nodes
+        count = max(2, round(density * (len(self.nodes) - 1)) + 1)
+        places = np.linspace(0.0, len(self.nodes) - 1.0, count)
+        known = np.arange(len(self.nodes))
+        return tuple(float(v) for v in np.interp(places, known, self.nodes))
+
 
 class RecipeGrid:
     """A recipe's coordinates; ``trim`` is the reagent that may trim its discharge."""
@@ -73,9 +82,9 @@ class RecipeGrid:
         """Whether the site's rules leave no set point."""
         return bool((self.low > self.high).any())
 
-    def coarse(self) -> FloatArray:
-        """All nodes of the coarse grid, (cells, axes)."""
-        return np.array(list(product(*(a.nodes for a in self.axes))))
+    def coarse(self, density: float = 1.0) -> FloatArray:
+        """All nodes of a first grid, (cells, axes); ``density`` scales the nodes of every axis."""
+        return np.array(list(product(*(a.thinned(density) for a in self.axes))))
 
     def clip(self, x: FloatArray) -> FloatArray:
         """Coordinates moved into the grid's ranges."""
