@@ -32,6 +32,7 @@ IntArray = NDArray[np.int64]
 FIRST_RADIUS = 0.5
 LAST_RADIUS = 2e-4
 MOST_STEPS = 14
+MORE_STEPS, FAST_GAIN = 26, 5e-3  # further steps of tracks that gain as much by each
 PATIENCE = 3
 STALLS = 2  # steps with hardly any gain after which a track is at rest
 NO_GAIN = 2e-7  # gain, relative to the cost, that is none
@@ -47,7 +48,11 @@ RESTORING_RADIUS = 0.02
 
 @dataclass(slots=True)
 class Track:
-    """One candidate on its way: its best point so far and how far the next step may go."""
+    """One candidate on its way: its best point so far and how far the next step may go.
+
+    ``gain`` is what the last step gained, relative to the merit; ``complied`` the cheapest point on
+    the way that met everything, for a track that ends at one that misses by a hair.
+    """
 
     place: Place
     radius: float = FIRST_RADIUS
@@ -57,6 +62,8 @@ class Track:
     missed: tuple[float, ...] = ()
     penalty: float = PENALTY
     patient: bool = False
+    gain: float = 0.0
+    complied: Place | None = None
 
     @property
     def point(self) -> Points:
@@ -102,12 +109,17 @@ def polish(
         starts = [Place(seen, i) for i in range(len(starts))]
     penalty = MISS_FIRST if rival is None else PENALTY
     tracks = [Track(place, radius, penalty=penalty, patient=rival is None) for place in starts]
-    for _ in range(steps):
+    for turn in range(steps + MORE_STEPS):
+        if turn >= steps:
+            _leave_slow(tracks)
         if bounds.late or not _advance(evaluator, tracks, solver, bounds):
             break
         if rival is not None:
             _rest_dear(tracks, rival)
     _restore(evaluator, tracks, solver, bounds)
+    for track in tracks:
+        if not track.feasible and track.complied is not None and not track.patient:
+            track.place = track.complied
     return tracks
 
 
@@ -153,6 +165,8 @@ def _restore(
     evaluator: Evaluator, tracks: Sequence[Track], solver: SolverPort, bounds: Bounds
 ) -> None:
     """Bring tracks that miss by a hair inside: small steps, aimed further in by what is missed."""
+    for track in tracks:
+        track.radius = max(track.radius, RESTORING_RADIUS)
     for _ in range(RESTORING_STEPS):
         near = [t for t in tracks if not t.feasible and t.violation < HOPELESS_RATIO]
         pairs = [(t, _inward(evaluator, t, solver, bounds)) for t in near]
@@ -174,7 +188,6 @@ def _restore(
 def _inward(
     evaluator: Evaluator, track: Track, solver: SolverPort, bounds: Bounds
 ) -> Points | None:
-    track.radius = max(track.radius, RESTORING_RADIUS)
     aim = 2.0 * max(track.violation, 0.0)
     return step(evaluator, track, solver, bounds, inward=aim)
 
@@ -184,10 +197,19 @@ def at_rest(track: Track) -> bool:
     return track.radius < LAST_RADIUS or track.stalls >= STALLS
 
 
+def _leave_slow(tracks: Sequence[Track]) -> None:
+    """Leave tracks that have had their steps and gain little by each."""
+    for track in tracks:
+        track.alive &= track.gain > FAST_GAIN and not track.patient
+
+
 def _accept(track: Track, place: Place) -> None:
     fresh = Track(place, penalty=track.penalty)
     track.steps += 1
     gain = (track.merit - fresh.merit) / max(track.merit, 1e-12)
+    track.gain = gain if np.isfinite(gain) else 0.0
+    if fresh.feasible and (track.complied is None or fresh.total < Track(track.complied).total):
+        track.complied = place
     if np.isfinite(fresh.merit) and gain > 0.0:
         track.place = place
         track.radius = min(track.radius * (1.6 if gain > 1e-3 else 1.0), 1.0)

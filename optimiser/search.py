@@ -41,6 +41,8 @@ POLISHED_AT_ONCE = 40
 SETTLED = 2
 SETTLE_ROUNDS = 12
 GRID_CHUNK = 600
+MOST_CELLS = 2500  # of the first grids; a site with more of them is large
+POLISHED_AT_ONCE_LARGE, GRID_CHUNK_LARGE = 12, 150
 FAR_RATIO, NEAR_RATIO, ENOUGH_NEAR = 1.5, 0.5, 4
 DEARER_LARGER = 1.15  # cost of a larger recipe's start over the plan so far, at most
 OUT_OF_REACH = 3.0  # ratio that the grid's gaps cannot explain
@@ -136,6 +138,7 @@ class Search:
         self.bounds: Bounds = replace(set_point_bounds(evaluator), deadline=deadline)
         self.findings = Findings()
         self.seeds: dict[tuple[str, ...], Track] = {}
+        self.thorough = True  # else a large site: coarser grids at one end, smaller batches
         self.progress = progress or (lambda _text: None)
 
     def run(self) -> Findings:
@@ -148,17 +151,12 @@ class Search:
         sizes = range(least, most + 1)
         self.findings.most_reagents = most
         self.findings.recipes_allowed = sum(len(recipes(self.evaluator.plant, s)) for s in sizes)
+        first = [s for s in (1, 2) if least <= s <= most] or [least]
         with self.findings.timed("propose"):
-            starts = self._propose([s for s in (1, 2) if least <= s <= most])
-        with self.findings.timed("polish"):
-            self._polish(starts)
-        for size in range(max(3, least), most + 1):
-            if self._late():
-                break
-            with self.findings.timed("propose"):
-                starts = self._extend(size)
-            with self.findings.timed("polish"):
-                self._polish(starts)
+            starts = self._propose(first)
+        self._polish(starts)
+        for size in range(first[-1] + 1, most + 1):
+            self._extend(size)
         with self.findings.timed("settle"):
             self._settle()
         return self.findings
@@ -175,6 +173,9 @@ class Search:
         demand = alkali_demand(self.evaluator)
         wanted = [r for size in sizes for r in recipes(plant, size)]
         grids = [(r, grid(self.evaluator, r, self.bounds, demand)) for r in wanted]
+        if sum(len(g) for _, g in grids if g is not None) > MOST_CELLS:
+            self.thorough = False
+            grids = [(r, grid(self.evaluator, r, self.bounds, demand, short=True)) for r in wanted]
         self.findings.recipes_ruled_out |= {self._names(r) for r, g in grids if g is None}
         self.progress(f"trying {len(grids)} recipes")
         return self._best_of([Grid(r, g) for r, g in grids if g is not None])
@@ -182,14 +183,17 @@ class Search:
     def _best_of(self, grids: Sequence[Grid]) -> list[Place]:
         """Evaluate grids at the nominal state and return each recipe's best starts."""
         starts: list[Place] = []
-        for chunk in _chunks(grids, GRID_CHUNK):
+        for chunk in _chunks(grids, GRID_CHUNK if self.thorough else GRID_CHUNK_LARGE):
             if self._late():
                 break
             joined = Points.join([g.points for g in chunk])
             near = [place for g in chunk for place in g.near]
-            seen = self.evaluator.evaluate(joined, full=False, near=near or None)
+            seen = self.evaluator.evaluate(
+                joined, full=False, all_ends=self.thorough, near=near or None
+            )
             self.findings.cells_examined += len(joined)
-            self.findings.note_values(seen)
+            if self.thorough:
+                self.findings.note_values(seen)
             begin = 0
             for one in chunk:
                 rows = slice(begin, begin + len(one.points))
@@ -201,54 +205,52 @@ class Search:
                 starts += [Place(seen, rows.start + k) for k in found]
         return starts
 
-    def _merit(self, seen: Evaluation) -> FloatArray:
-        total = np.where(np.isfinite(seen.total), seen.total, np.inf)
-        miss = np.clip(seen.violation, 0.0, 60.0)
-        return np.asarray(total * (1.0 + PENALTY * miss), dtype=float)
-
     def _names(self, recipe: Recipe) -> tuple[str, ...]:
         return tuple(self.evaluator.plant.names[i] for i in recipe.reagents)
 
     # -- polish ------------------------------------------------------------------------------------
 
     def _polish(self, starts: list[Place]) -> None:
-        if not starts:
-            return
+        """Polish starts, the best at nominal states first; leave those that are hopeless."""
+        ranked = _ranked(starts)
+        at_once = POLISHED_AT_ONCE if self.thorough else POLISHED_AT_ONCE_LARGE
+        with self.findings.timed("polish"):
+            for begin in range(0, len(ranked), at_once):
+                if self._late() or (begin and self._hopeless(Track(ranked[begin]).merit)):
+                    return
+                self._polish_batch(ranked[begin : begin + at_once])
+
+    def _polish_batch(self, starts: list[Place]) -> None:
         joined = Points.join([place.seen.points.take([place.point]) for place in starts])
         seen = self.evaluator.evaluate(joined, near=starts, slopes=True)
         self.findings.cells_examined += len(joined)
         self.findings.note_values(seen)
-        for row in range(len(joined)):
-            self._keep(Track(Place(seen, row)))
-        order = self._worth_polishing(seen, np.argsort(self._merit(seen), kind="stable"))
-        for begin in range(0, order.size, POLISHED_AT_ONCE):
-            if self._late():
-                return
-            batch = order[begin : begin + POLISHED_AT_ONCE]
-            if begin and self._hopeless(float(self._merit(seen)[batch[0]])):
-                return
-            self.progress(f"polishing {batch.size} starts")
-            tracks = polish(
-                self.evaluator, [Place(seen, int(i)) for i in batch], self.solver,
-                bounds=self.bounds, rival=self._best_total(),
-            )  # fmt: skip
-            for track in tracks:
-                self.findings.cells_examined += track.steps
-                self._keep(track)
-            if self._late():
-                return
+        places = [Place(seen, row) for row in range(len(joined))]
+        for place in places:
+            self._keep(Track(place))
+        places = self._worth_polishing(seen, _ranked(places))
+        if self._late() or not places:
+            return
+        self.progress(f"polishing {len(places)} starts")
+        tracks = polish(
+            self.evaluator, places, self.solver, bounds=self.bounds, rival=self._best_total()
+        )
+        for track in tracks:
+            self.findings.cells_examined += track.steps
+            self._keep(track)
+        self._late()
 
     def _keep(self, track: Track) -> None:
         self.findings.keep(recipe_of(self.evaluator.plant, track.point, 0), track)
 
-    def _worth_polishing(self, seen: Evaluation, order: IntArray) -> IntArray:
+    def _worth_polishing(self, seen: Evaluation, places: list[Place]) -> list[Place]:
         """Leave starts that miss by far where enough others are near, or a plan is known."""
         most = np.inf
         if np.count_nonzero(seen.violation < NEAR_RATIO) >= ENOUGH_NEAR:
             most = FAR_RATIO
         elif self.findings.feasible:
             most = OUT_OF_REACH
-        return order[seen.violation[order] <= most]
+        return [place for place in places if seen.violation[place.point] <= most]
 
     def _best_total(self) -> float:
         found = self.findings.feasible
@@ -261,32 +263,40 @@ class Search:
 
     # -- larger recipes ----------------------------------------------------------------------------
 
-    def _extend(self, size: int) -> list[Place]:
-        """Starts of larger recipes: the best smaller points with one more reagent."""
+    def _extend(self, size: int) -> None:
+        """Try all recipes of a size from the best smaller points with one reagent more."""
+        with self.findings.timed("propose"):
+            grids = self._grown(size)
+        self.progress(f"trying {len(grids)} recipes of {size}")
+        for chunk in _chunks(grids, GRID_CHUNK if self.thorough else GRID_CHUNK_LARGE):
+            if self._late():
+                return
+            with self.findings.timed("propose"):
+                starts = self._best_of(chunk)
+            most = DEARER_LARGER * self._best_total()
+            self._polish([place for place in starts if place.seen.total[place.point] <= most])
+
+    def _grown(self, size: int) -> list[Grid]:
+        """Points of every recipe of a size, the recipe with the most promising part first."""
         plant = self.evaluator.plant
         parts = self._parts(size - 1)
         demand = alkali_demand(self.evaluator)
-        grids: list[Grid] = []
+        grids: list[tuple[float, Grid]] = []
         for recipe in recipes(plant, size):
             names = set(self._names(recipe))
             mine = [t for part, t in parts[0] if set(part) < names][:2]
             mine += [t for part, t in parts[1] if set(part) < names and t not in mine][:1]
-            made = [
-                (p, t)
-                for t in mine
-                if (p := with_one_more(self.evaluator, self.bounds, recipe, t, demand))
-            ]
-            if not made and mine:
-                self.findings.recipes_ruled_out.add(self._names(recipe))
+            grown = (
+                (with_one_more(self.evaluator, self.bounds, recipe, t, demand), t) for t in mine
+            )
+            made = [(points, track) for points, track in grown if points is not None]
             if made:
-                near = [t.place for p, t in made for _ in range(len(p))]
-                grids.append(Grid(recipe, Points.join([p for p, _ in made]), near))
-        self.progress(f"trying {len(grids)} recipes of {size}")
-        known = self._best_total()
-        return [
-            place for place in self._best_of(grids)
-            if place.seen.total[place.point] <= DEARER_LARGER * known
-        ]  # fmt: skip
+                near = [track.place for points, track in made for _ in range(len(points))]
+                joined = Points.join([points for points, _ in made])
+                grids.append((mine[0].merit, Grid(recipe, joined, near)))
+            elif mine:
+                self.findings.recipes_ruled_out.add(self._names(recipe))
+        return [one for _, one in sorted(grids, key=lambda item: item[0])]
 
     def _parts(self, size: int) -> tuple[list[_Kept], list[_Kept]]:
         """Recipes of one size, the best first, and those that miss with the nearest miss first."""
@@ -364,6 +374,21 @@ class _Clock:
     def __exit__(self, *_: object) -> None:
         spent = time.perf_counter() - self.begun
         self.seconds[self.name] = self.seconds.get(self.name, 0.0) + spent
+
+
+def _ranked(places: Sequence[Place]) -> list[Place]:
+    """Places in order of promise: by cost with a penalty on the largest miss.
+
+    A miss weighs at least as much as the cheapest that complies, or the middle of all, costs: what
+    does next to nothing is cheap and must not come first.
+    """
+    cost = np.array([place.seen.total[place.point] for place in places])
+    miss = np.clip([place.seen.violation[place.point] for place in places], 0.0, 60.0)
+    cost = np.where(np.isfinite(cost), cost, 1e300)
+    works = cost[miss <= FEASIBLE_RATIO]
+    usual = works.min() if works.size else np.median(cost) if cost.size else 0.0
+    order = np.argsort(cost + np.maximum(cost, usual) * PENALTY * miss, kind="stable")
+    return [places[k] for k in order]
 
 
 def _chunks(grids: Sequence[Grid], size: int) -> list[list[Grid]]:
