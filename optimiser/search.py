@@ -16,10 +16,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optimiser.evaluation import FEASIBLE_RATIO, Evaluation, Evaluator, Place
+from optimiser.grids import Grid, chunks, ranked
 from optimiser.next_points import moves, with_one_more
 from optimiser.points import Points
 from optimiser.polish import Track, polish
-from optimiser.polish_step import PENALTY, Bounds
+from optimiser.polish_step import Bounds
 from optimiser.recipes import (
     Recipe,
     alkali_demand,
@@ -116,15 +117,6 @@ class Findings:
         return sorted(ranked, key=lambda item: item[1].total)
 
 
-@dataclass(frozen=True, slots=True)
-class Grid:
-    """Points at which a recipe is tried, and evaluated neighbours of each or none."""
-
-    recipe: Recipe
-    points: Points
-    near: Sequence[Place] = ()
-
-
 class Search:
     """One run over a site."""
 
@@ -183,17 +175,14 @@ class Search:
     def _best_of(self, grids: Sequence[Grid]) -> list[Place]:
         """Evaluate grids at the nominal state and return each recipe's best starts."""
         starts: list[Place] = []
-        for chunk in _chunks(grids, GRID_CHUNK if self.thorough else GRID_CHUNK_LARGE):
+        for chunk in chunks(grids, GRID_CHUNK if self.thorough else GRID_CHUNK_LARGE):
             if self._late():
                 break
             joined = Points.join([g.points for g in chunk])
             near = [place for g in chunk for place in g.near]
-            seen = self.evaluator.evaluate(
-                joined, full=False, all_ends=self.thorough, near=near or None
-            )
+            seen = self.evaluator.evaluate(joined, full=False, all_ends=False, near=near or None)
             self.findings.cells_examined += len(joined)
-            if self.thorough:
-                self.findings.note_values(seen)
+            self.findings.note_values(seen)
             begin = 0
             for one in chunk:
                 rows = slice(begin, begin + len(one.points))
@@ -212,13 +201,13 @@ class Search:
 
     def _polish(self, starts: list[Place]) -> None:
         """Polish starts, the best at nominal states first; leave those that are hopeless."""
-        ranked = _ranked(starts)
+        order = ranked(starts)
         at_once = POLISHED_AT_ONCE if self.thorough else POLISHED_AT_ONCE_LARGE
         with self.findings.timed("polish"):
-            for begin in range(0, len(ranked), at_once):
-                if self._late() or (begin and self._hopeless(Track(ranked[begin]).merit)):
+            for begin in range(0, len(order), at_once):
+                if self._late() or (begin and self._hopeless(Track(order[begin]).merit)):
                     return
-                self._polish_batch(ranked[begin : begin + at_once])
+                self._polish_batch(order[begin : begin + at_once])
 
     def _polish_batch(self, starts: list[Place]) -> None:
         joined = Points.join([place.seen.points.take([place.point]) for place in starts])
@@ -228,7 +217,7 @@ class Search:
         places = [Place(seen, row) for row in range(len(joined))]
         for place in places:
             self._keep(Track(place))
-        places = self._worth_polishing(seen, _ranked(places))
+        places = self._worth_polishing(seen, ranked(places))
         if self._late() or not places:
             return
         self.progress(f"polishing {len(places)} starts")
@@ -268,7 +257,7 @@ class Search:
         with self.findings.timed("propose"):
             grids = self._grown(size)
         self.progress(f"trying {len(grids)} recipes of {size}")
-        for chunk in _chunks(grids, GRID_CHUNK if self.thorough else GRID_CHUNK_LARGE):
+        for chunk in chunks(grids, GRID_CHUNK if self.thorough else GRID_CHUNK_LARGE):
             if self._late():
                 return
             with self.findings.timed("propose"):
@@ -286,10 +275,8 @@ class Search:
             names = set(self._names(recipe))
             mine = [t for part, t in parts[0] if set(part) < names][:2]
             mine += [t for part, t in parts[1] if set(part) < names and t not in mine][:1]
-            grown = (
-                (with_one_more(self.evaluator, self.bounds, recipe, t, demand), t) for t in mine
-            )
-            made = [(points, track) for points, track in grown if points is not None]
+            grown = [with_one_more(self.evaluator, self.bounds, recipe, t, demand) for t in mine]
+            made = [(g, t) for g, t in zip(grown, mine, strict=True) if g is not None]
             if made:
                 near = [track.place for points, track in made for _ in range(len(points))]
                 joined = Points.join([points for points, _ in made])
@@ -374,30 +361,3 @@ class _Clock:
     def __exit__(self, *_: object) -> None:
         spent = time.perf_counter() - self.begun
         self.seconds[self.name] = self.seconds.get(self.name, 0.0) + spent
-
-
-def _ranked(places: Sequence[Place]) -> list[Place]:
-    """Places in order of promise: by cost with a penalty on the largest miss.
-
-    A miss weighs at least as much as the cheapest that complies, or the middle of all, costs: what
-    does next to nothing is cheap and must not come first.
-    """
-    cost = np.array([place.seen.total[place.point] for place in places])
-    miss = np.clip([place.seen.violation[place.point] for place in places], 0.0, 60.0)
-    cost = np.where(np.isfinite(cost), cost, 1e300)
-    works = cost[miss <= FEASIBLE_RATIO]
-    usual = works.min() if works.size else np.median(cost) if cost.size else 0.0
-    order = np.argsort(cost + np.maximum(cost, usual) * PENALTY * miss, kind="stable")
-    return [places[k] for k in order]
-
-
-def _chunks(grids: Sequence[Grid], size: int) -> list[list[Grid]]:
-    chunks: list[list[Grid]] = []
-    count = 0
-    for item in grids:
-        if not chunks or count + len(item.points) > size:
-            chunks.append([])
-            count = 0
-        chunks[-1].append(item)
-        count += len(item.points)
-    return chunks
